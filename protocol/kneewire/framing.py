@@ -1,0 +1,125 @@
+"""Frames: COBS(body + CRC-32) + 0x00, and the decoder that survives any bytes.
+
+Bytes that travel toward the device never contain 0x03: on the RP2 port of MicroPython that
+byte is Ctrl-C and empties the input ring. So after COBS, in that direction only, 02 becomes
+02 04 and then 03 becomes 02 05.
+"""
+
+from kneewire.seam import cobs_decode, cobs_encode, crc32
+
+DELIMITER = b"\x00"
+CRC_BYTES = 4
+
+# Why a run of bytes between delimiters is not a frame.
+BAD_LONG = "too long"
+BAD_ESCAPE = "escape"
+BAD_COBS = "cobs"
+BAD_SHORT = "too short"
+BAD_CRC = "crc"
+
+
+def encode(body: bytes, toward_device: bool) -> bytes:
+    """One whole frame, delimiter included."""
+    coded = cobs_encode(body + crc32(body).to_bytes(CRC_BYTES, "little"))
+    if toward_device:
+        coded = coded.replace(b"\x02", b"\x02\x04").replace(b"\x03", b"\x02\x05")
+    return coded + DELIMITER
+
+
+class Bad:
+    """Bytes between two delimiters that are no frame, and why; `raw` may be cut short."""
+
+    def __init__(self, reason: str, raw: bytes) -> None:
+        self.reason = reason
+        self.raw = raw
+
+    def text(self) -> str:
+        """The raw bytes as people read them, where they are mostly readable, else ""."""
+        return readable(self.raw)
+
+
+def readable(raw: bytes) -> str:
+    """`raw` as text where at least 90 % of it is printable ASCII (a prompt, a traceback)."""
+    good = 0
+    for byte in raw:
+        if 32 <= byte < 127 or byte in (9, 10, 13):
+            good += 1
+    if not raw or good * 10 < len(raw) * 9:
+        return ""
+    return "".join([chr(byte) for byte in raw if byte < 127])
+
+
+def decode_run(run: bytes, toward_device: bool) -> "bytes | Bad":
+    """The body inside one run of bytes between delimiters, or why there is none."""
+    coded = run
+    if toward_device:
+        if run.count(b"\x02") != run.count(b"\x02\x04") + run.count(b"\x02\x05"):
+            return Bad(BAD_ESCAPE, run)
+        coded = run.replace(b"\x02\x05", b"\x03").replace(b"\x02\x04", b"\x02")
+    try:
+        whole = cobs_decode(coded)
+    except ValueError:
+        return Bad(BAD_COBS, run)
+    if len(whole) <= CRC_BYTES:
+        return Bad(BAD_SHORT, run)
+    body = whole[:-CRC_BYTES]
+    if crc32(body).to_bytes(CRC_BYTES, "little") != whole[-CRC_BYTES:]:
+        return Bad(BAD_CRC, run)
+    return body
+
+
+class Decoder:
+    """Turns any stream of bytes into bodies and `Bad` runs; never raises, never grows.
+
+    `limit` bounds the coded bytes kept of one run. `good` and `bad` count what was yielded,
+    `longest` the longest run seen.
+    """
+
+    def __init__(self, limit: int, toward_device: bool) -> None:
+        self.limit = limit
+        self.toward_device = toward_device
+        self.good = 0
+        self.bad = 0
+        self._run = bytearray()
+        self._overflow = False
+
+    def pending(self) -> bytes:
+        """Bytes since the last delimiter."""
+        return bytes(self._run)
+
+    def feed(self, data: bytes) -> "list[bytes | Bad]":
+        """What `data` completes, in order."""
+        out: list[bytes | Bad] = []
+        start = 0
+        while True:
+            stop = data.find(DELIMITER, start)
+            if stop < 0:
+                self._keep(data[start:])
+                return out
+            self._keep(data[start:stop])
+            if self._overflow:
+                out.append(Bad(BAD_LONG, bytes(self._run)))
+                self.bad += 1
+            elif self._run:
+                item = decode_run(bytes(self._run), self.toward_device)
+                if isinstance(item, Bad):
+                    self.bad += 1
+                else:
+                    self.good += 1
+                out.append(item)
+            self._run = bytearray()
+            self._overflow = False
+            start = stop + 1
+
+    def _keep(self, piece: bytes) -> None:
+        room = self.limit - len(self._run)
+        if len(piece) > room:
+            self._overflow = True
+            piece = piece[:room]
+        self._run.extend(piece)
+
+
+def coded_limit(body_and_crc: int, toward_device: bool) -> int:
+    """Longest coded run (delimiter apart) of a frame whose body and CRC take that many bytes."""
+    cobs = body_and_crc + body_and_crc // 254 + 1
+    return 2 * cobs if toward_device else cobs

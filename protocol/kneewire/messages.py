@@ -1,0 +1,106 @@
+"""Messages: a body from a name and values, and a message back from a body."""
+
+from kneewire import catalogue, fields
+from kneewire.seam import crc32
+
+try:
+    from typing import Any
+except ImportError:  # MicroPython has no typing and does not evaluate annotations
+    pass
+
+HEADER_BYTES = 9
+KNOT_BYTES = sum([fields.FIXED[row[1]][0] for row in catalogue.KNOT])
+KNOTS_A_BLOCK = (catalogue.MAX_FRAME - HEADER_BYTES - 3 - 4) // KNOT_BYTES
+
+NO_SESSION = 0xFFFFFFFF  # in a hello, and before there is a session
+
+
+def fingerprint() -> int:
+    """CRC-32 of the catalogue: two sides with the same number speak the same messages."""
+    crc = 0
+    for line in catalogue.canonical_lines():
+        crc = crc32(line.encode(), crc)
+    return crc
+
+
+class Message:
+    """One message: `name`, `session`, `sequence` and its `values` by field name."""
+
+    def __init__(self, name: str, session: int, sequence: int, values: "dict[str, Any]") -> None:
+        self.name = name
+        self.session = session
+        self.sequence = sequence
+        self.values = values
+
+    def __getitem__(self, field: str) -> "Any":
+        return self.values[field]
+
+    def __repr__(self) -> str:
+        inside = ", ".join(["%s=%r" % item for item in self.values.items()])
+        return "%s(%s) session %d sequence %d" % (self.name, inside, self.session, self.sequence)
+
+
+class Refused(Exception):
+    """A body that is no message of this catalogue; `code` is one of REFUSALS."""
+
+    def __init__(self, code: int, kind: int, session: int, sequence: int) -> None:
+        super().__init__(catalogue.REFUSALS[code], kind)
+        self.code = code
+        self.kind = kind
+        self.session = session
+        self.sequence = sequence
+
+
+def pack(name: str, session: int, sequence: int, values: "dict[str, Any] | None" = None) -> bytes:
+    """The body of one message. KeyError for a missing value, ValueError for one out of range."""
+    kind = catalogue.KINDS[name]
+    out = bytearray()
+    out.append(kind)
+    out.extend(session.to_bytes(4, "little"))
+    out.extend(sequence.to_bytes(4, "little"))
+    for row in catalogue.MESSAGES[kind][4]:
+        try:
+            fields.write(out, row[1], (values or {})[row[0]], KNOT_BYTES)
+        except ValueError as error:
+            raise ValueError("%s.%s: %s" % (name, row[0], error)) from None
+    return bytes(out)
+
+
+def unpack(body: bytes) -> Message:
+    """The message in a body; extra bytes at its end are ignored. Raises `Refused`."""
+    if len(body) < HEADER_BYTES:
+        raise Refused(2, body[0] if body else 0, 0, 0)
+    kind = body[0]
+    session = int.from_bytes(body[1:5], "little")
+    sequence = int.from_bytes(body[5:9], "little")
+    if kind not in catalogue.MESSAGES:
+        raise Refused(1, kind, session, sequence)
+    name, _, _, _, rows = catalogue.MESSAGES[kind]
+    values: dict[str, Any] = {}
+    place = HEADER_BYTES
+    for row in rows:
+        try:
+            values[row[0]], place = fields.read(body, place, row[1], KNOT_BYTES)
+        except ValueError:
+            raise Refused(2, kind, session, sequence) from None
+    return Message(name, session, sequence, values)
+
+
+def pack_knot(knot: "dict[str, int]") -> bytes:
+    """One knot record."""
+    out = bytearray()
+    for row in catalogue.KNOT:
+        fields.write(out, row[1], knot[row[0]], KNOT_BYTES)
+    return bytes(out)
+
+
+def unpack_knots(data: bytes) -> "list[dict[str, int]]":
+    """Knot records as dictionaries; the host reads whole sweeps with numpy instead."""
+    knots = []
+    for start in range(0, len(data), KNOT_BYTES):
+        knot: dict[str, int] = {}
+        place = start
+        for row in catalogue.KNOT:
+            knot[row[0]], place = fields.read(data, place, row[1], KNOT_BYTES)
+        knots.append(knot)
+    return knots
