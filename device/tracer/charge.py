@@ -1,0 +1,193 @@
+"""One charge: from the readings just before closing to the contact open again.
+
+Runs to its end in one call, inside the board's quiet: nothing is sent, nothing collected.
+Between slices it listens for abort alone. The make-and-break output is a bounded pulse that
+each slice earns anew: only when both the supervision tick and the ring have moved on.
+"""
+
+from micropython import const
+from tracer import hal as board
+
+SLICE_US = const(500)
+READ_CONVERSIONS = const(256)
+DARK_MS = const(100)  # without conduction for so long, the source is dark
+FIRST_MS = const(2)  # before the first supervision tick can be asked for
+CONDUCTING_CODES = const(8)  # above the current zero: more than noise ever reaches
+END_SLICES = const(3)
+
+# End reasons, as on the wire.
+COMPLETE = const(1)
+TIME_LIMIT = const(2)
+ABORTED = const(3)
+STOP_LOOP = const(4)
+OVER_VOLTAGE = const(5)
+OVER_CURRENT = const(6)
+HOST_LOST = const(7)
+NO_CURRENT = const(8)
+RING_OVERRUN = const(9)
+SUPERVISION_LOST = const(10)
+
+
+class Result:
+    """What a charge leaves behind, the bins apart."""
+
+    def __init__(self):
+        self.end_reason = 0
+        self.voltage_sum = 0
+        self.current_sum = 0
+        self.conversions = READ_CONVERSIONS
+        self.capture_us = 0
+        self.opened_us = 0
+        self.conversions_lost = False
+
+
+class EndRule:
+    """When is the sweep complete: the current is gone and the voltage stands.
+
+    Current below 0.2 % of this sweep's peak (a quarter of a code at the least), and voltage
+    within 0.1 % of the source's open voltage or no longer rising, for END_SLICES slices in a
+    row. Never the slope of the voltage alone: a nearly dark substring crawls.
+    """
+
+    def __init__(self, zero_x16, open_x16, voltage_zero_x16):
+        self.zero_x16 = zero_x16
+        self.near_open_x16 = open_x16 - max((open_x16 - voltage_zero_x16) // 1000, 8)
+        self.peak_x16 = 0
+        self.quiet_slices = 0
+        self.high_x16 = 0
+
+    def complete(self, voltage_x16, current_x16):
+        current = current_x16 - self.zero_x16
+        if current > self.peak_x16:
+            self.peak_x16 = current
+        rising = voltage_x16 > self.high_x16 + 2
+        if voltage_x16 > self.high_x16:
+            self.high_x16 = voltage_x16
+        gone = current * 500 < self.peak_x16 or current < 4
+        if gone and (voltage_x16 >= self.near_open_x16 or not rising):
+            self.quiet_slices += 1
+        else:
+            self.quiet_slices = 0
+        return self.quiet_slices >= END_SLICES
+
+
+class Charge:
+    """The procedure; one object serves all charges of a board."""
+
+    def __init__(self, hal, profile, capture, ear):
+        self.hal = hal
+        self.profile = profile
+        self.capture = capture
+        self.ear = ear
+
+    def run(self, closed_limit_ms, outputs):
+        """Close, capture, open. `outputs` (the sequencer) is told what is commanded."""
+        hal = self.hal
+        result = Result()
+        hal.quiet_begin()
+        try:
+            self._before(result)
+            self._prepare(outputs)
+            result.end_reason = self._capture(result, closed_limit_ms)
+        finally:
+            # Whatever happened above: the contact opens, then the bleed engages.
+            hal.pulse(0)
+            result.conversions_lost = hal.capture_stop()
+            hal.supervise_end()
+            self._open(outputs)
+            result.opened_us = hal.now_us()
+            hal.quiet_end()
+        return result
+
+    def _before(self, result):
+        hal = self.hal
+        result.voltage_sum = hal.read(board.VOLTAGE, READ_CONVERSIONS)
+        result.current_sum = hal.read(board.CURRENT, READ_CONVERSIONS)
+
+    def _prepare(self, outputs):
+        """Release the bleed, and close the relay dry, with the make-and-break output still off."""
+        hal = self.hal
+        profile = self.profile
+        hal.bleed(False)
+        outputs.bleed_engaged = False
+        hal.wait_us(1000 * (profile["bleed_operate_ms"] + profile["dead_time_ms"]))
+        hal.relay(True)
+        outputs.contact_closed = True
+        hal.wait_us(1000 * 2 * profile["relay_operate_ms"])
+
+    def _open(self, outputs):
+        """The current is already broken by the pulse's end; the relay opens dry."""
+        hal = self.hal
+        profile = self.profile
+        hal.wait_us(1000)
+        hal.relay(False)
+        outputs.contact_closed = False
+        hal.wait_us(1000 * (profile["relay_release_ms"] + profile["dead_time_ms"]))
+        hal.bleed(True)
+        outputs.bleed_engaged = True
+
+    def _capture(self, result, closed_limit_ms):
+        hal = self.hal
+        profile = self.profile
+        capture = self.capture
+        zero_x16 = 16 * result.current_sum // READ_CONVERSIONS
+        open_x16 = 16 * result.voltage_sum // READ_CONVERSIONS
+        rule = EndRule(zero_x16, open_x16, profile["voltage_zero_x16"])
+        capture.begin(zero_x16 // 16 + CONDUCTING_CODES)
+        voltage_trip = profile.trip_code("voltage", profile["rated_mv"])
+        current_trip = profile.trip_code("current", profile["rated_ma"])
+        limit_us = 1000 * min(closed_limit_ms, profile["closed_limit_ms"])
+        lost_us = 1000 * profile["heartbeat_lost_ms"]
+
+        result.capture_us = hal.capture_start()
+        hal.supervise(voltage_trip, current_trip)
+        hal.pulse(profile["pulse_us"])
+        start_us = hal.now_us()
+        heard_us = start_us
+        ticks = 0
+        ticked_us = start_us
+        written = 0
+        while True:
+            hal.wait_us(SLICE_US)
+            now = hal.now_us()
+            arrived = hal.capture_written()
+            capture.drain(arrived)
+            trips = hal.trips()
+            if trips:
+                return trip_reason(trips)
+            if self.ear.listen():
+                heard_us = now
+            if self.ear.aborted:
+                return ABORTED
+            if capture.overruns:
+                return RING_OVERRUN
+            if arrived == written:
+                return SUPERVISION_LOST
+            written = arrived
+            visits = hal.supervision_ticks()
+            if visits != ticks:
+                ticks = visits
+                ticked_us = now
+            elif now - ticked_us > 1000 * FIRST_MS:
+                return SUPERVISION_LOST
+            if now - start_us >= limit_us or capture.full:
+                return TIME_LIMIT
+            if not capture.conducts():
+                if now - start_us >= 1000 * DARK_MS:
+                    return NO_CURRENT
+            else:
+                means = capture.slice_means_x16()
+                if means is not None and rule.complete(means[0], means[1]):
+                    return COMPLETE
+            if now - heard_us >= lost_us:
+                return HOST_LOST
+            hal.watchdog(2000)
+            hal.pulse(profile["pulse_us"])
+
+
+def trip_reason(trips):
+    if trips & board.TRIP_STOP_LOOP:
+        return STOP_LOOP
+    if trips & board.TRIP_OVER_VOLTAGE:
+        return OVER_VOLTAGE
+    return OVER_CURRENT

@@ -1,0 +1,93 @@
+"""The loop of one tracer: wires the parts together and gives each its turn."""
+
+from tracer import sequencer as states
+from tracer.capture import Capture
+from tracer.charge import OVER_CURRENT, OVER_VOLTAGE, STOP_LOOP, SUPERVISION_LOST, Charge
+from tracer.ear import Ear
+from tracer.held import Held
+from tracer.interlocks import UNIT_MA, UNIT_MS, UNIT_MV, UNIT_NONE
+from tracer.profile import load
+from tracer.sequencer import Sequencer
+from tracer.service import Leave, Service
+
+PROFILE_FILE = "profile.bin"
+
+
+class Loop:
+    """One tracer: `run` serves until the host asks for the prompt."""
+
+    def __init__(self, hal, buffers, profile_file=PROFILE_FILE):
+        self.hal = hal
+        self.profile, self.profile_fault = load(profile_file, hal.device_id())
+        self.sequencer = Sequencer(hal, self.profile)
+        self.held = Held(buffers)
+        self.capture = Capture(hal.ring, hal.RING_PAIRS, buffers)
+        self.ear = Ear(hal)
+        self.service = Service(hal, self.profile, self.sequencer, self.held)
+
+    def run(self):
+        try:
+            while True:
+                self.step()
+        except Leave:
+            pass
+        finally:
+            self.sequencer.make_safe()
+            self.hal.watchdog(0)
+
+    def step(self):
+        """One turn of the loop."""
+        self.service.poll()
+        if self.service.fired is not None:
+            self.charge(self.service.fired)
+            self.service.fired = None
+            self.service.feed(self.ear.kept())
+        self.sequencer.tick()
+        self.note_residual()
+        self.sequencer.pause()
+
+    def charge(self, sweep_id):
+        """Run the accepted fire: charge, then hold what was measured."""
+        service = self.service
+        sequencer = self.sequencer
+        self.ear.expect(service.abort_frame())
+        sequencer.event(states.EV_FIRE)
+        charge = Charge(self.hal, self.profile, self.capture, self.ear)
+        try:
+            result = charge.run(service.armed_limit_ms, sequencer)
+        except BaseException:
+            sequencer.make_safe()
+            raise
+        finding = finding_of(result.end_reason, self.profile)
+        if finding is None:
+            sequencer.event(states.EV_OPENED)
+        else:
+            sequencer.fault(finding)
+        service.send_message(
+            "charge_ended", 0, {"sweep_id": sweep_id, "end_reason": result.end_reason}
+        )
+        self.held.keep(
+            sweep_id, service.armed_knots, result, self.capture, self.hal, self.profile
+        )
+
+    def note_residual(self):
+        """Once the bleed has done its work, the manifest says what it left."""
+        manifest = self.held.manifest
+        sequencer = self.sequencer
+        if manifest and not manifest["residual_conversions"]:
+            if sequencer.state in (states.SAFE, states.FAULT):
+                manifest["residual_sum"], manifest["residual_conversions"] = sequencer.residual
+
+
+def finding_of(end_reason, profile):
+    """The fault that an end of charge latches, or None. Nothing measured is lost by it."""
+    if end_reason == STOP_LOOP:
+        return 12, 0, 0, UNIT_NONE
+    if end_reason == OVER_VOLTAGE:
+        return 4, profile["rated_mv"], profile["rated_mv"], UNIT_MV
+    if end_reason == OVER_CURRENT:
+        return 6, profile["rated_ma"], profile["rated_ma"], UNIT_MA
+    if end_reason == SUPERVISION_LOST:
+        return 7, 0, 0, UNIT_MS
+    return None
+

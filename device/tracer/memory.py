@@ -1,0 +1,32 @@
+"""The large buffers, each taken once, before the rest of the firmware fragments the heap."""
+
+from array import array
+
+from micropython import const
+
+BINS = const(1024)
+BIN_WORDS = const(6)
+STATE_WORDS = const(12)
+MAX_KNOTS = const(512)
+RECORD_BYTES = const(40)  # a knot record; compared with the catalogue in held.py
+
+
+MAX_STRETCHES = const(320)
+
+
+class Buffers:
+    def __init__(self):
+        # From a range, because its length is known: the memory is taken once, not grown.
+        self.bins = array("I", range(BIN_WORDS * BINS))
+        self.state = array("I", range(STATE_WORDS))
+        self.records = bytearray(MAX_KNOTS * RECORD_BYTES)
+        # For placing the knots (`knots.py`).
+        self.xs = array("i", range(BINS))
+        self.ys = array("i", range(BINS))
+        self.starts = array("i", range(MAX_STRETCHES + 1))
+        self.px = array("i", range(MAX_STRETCHES))
+        self.py = array("i", range(MAX_STRETCHES))
+        self.turns = array("i", range(MAX_STRETCHES))
+        self.lengths = array("i", range(MAX_STRETCHES))
+        self.shares = array("i", range(MAX_STRETCHES))
+        self.firsts = array("i", range(MAX_KNOTS + 1))
