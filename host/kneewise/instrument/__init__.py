@@ -1,0 +1,1 @@
+"""The instrument: a tracer as scripts see it, and the traces that it gives."""

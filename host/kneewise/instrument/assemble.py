@@ -1,0 +1,106 @@
+"""From what a device sent to a trace: scale factors applied, checks made."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from kneewire import catalogue
+from kneewire.messages import Message
+from kneewise.errors import TrustError
+from kneewise.instrument.checks import check_trace
+from kneewise.instrument.convert import convert
+from kneewise.instrument.profile import Scales
+from kneewise.instrument.sweep import Reassembly
+from kneewise.instrument.trace import Integrity, Reading, Trace
+
+FEWEST_KNOTS = 8
+
+
+def assemble(
+    manifest: Message,
+    reassembly: Reassembly,
+    *,
+    rung: str,
+    device: dict[str, Any],
+    profile: dict[str, Any],
+    frames_bad: int,
+    started_utc: str,
+    started_uncertainty_s: float,
+    scenario: dict[str, Any] | None,
+    truth: dict[str, float] | None,
+) -> Trace:
+    """The trace of a whole sweep. `device` is its hello, `profile` the values of its record.
+
+    TrustError where there are too few knots to speak of a curve.
+    """
+    values = manifest.values
+    raw = reassembly.knots()
+    end_reason = catalogue.END_REASONS.get(values["end_reason"], str(values["end_reason"]))
+    if len(raw) < FEWEST_KNOTS:
+        raise TrustError(
+            f"sweep {values['sweep_id'].hex()[:8]}",
+            found=f"{len(raw)} knots (ended: {end_reason})",
+            expected="a curve",
+            next_step="check that the source is lit and connected, then sweep again"
+            if end_reason == "no current"
+            else "clear what ended the sweep, then sweep again",
+        )
+    scales = Scales.of(profile)
+    static = Reading(values["voltage_sum"], values["conversions"])
+    zero = Reading(values["current_sum"], values["conversions"])
+    si = convert(
+        raw, scales, zero, conducting_us=values["conducting_us"], skew_ns=values["skew_ns"]
+    )
+    integrity = Integrity(
+        knots=values["knots"],
+        pairs=values["pairs"],
+        frames_bad=frames_bad,
+        blocks_resent=reassembly.resent,
+        ring_overruns=values["ring_overruns"],
+        manifest_crc_ok=reassembly.crc_ok(),
+    )
+    residual_v = scales.capacitor(values["residual_sum"] / max(values["residual_conversions"], 1))
+    voc_static = scales.voltage(static.code)
+    return Trace(
+        trace_id=values["sweep_id"].hex(),
+        rung=rung,
+        emulated=bool(device["flags"] & catalogue.FLAG_EMULATED),
+        device={
+            "device_id": device["device_id"].hex(),
+            "firmware": "{firmware_major}.{firmware_minor}.{firmware_patch}".format_map(device),
+            "protocol": "{major}.{minor}".format_map(device),
+            "profile_crc": f"{values['profile_crc']:08x}",
+            "boot_nonce": f"{device['boot_nonce']:08x}",
+        },
+        profile=profile,
+        started_utc=started_utc,
+        started_uncertainty_s=started_uncertainty_s,
+        end_reason=end_reason,
+        raw=raw,
+        static_voltage=static,
+        zero_current=zero,
+        voltage=si.voltage,
+        current=si.current,
+        time=si.time,
+        weight=si.weight,
+        voltage_sigma=si.voltage_sigma,
+        current_sigma=si.current_sigma,
+        voc_static=voc_static,
+        residual_capacitor_v=residual_v,
+        integrity=integrity,
+        checks=check_trace(
+            raw,
+            si.voltage,
+            si.current,
+            si.time,
+            si.voltage_sigma,
+            voc_static=voc_static,
+            residual_v=residual_v,
+            end_reason=end_reason,
+            integrity=integrity,
+            conversions_lost=bool(values["conversions_lost"]),
+            scales=scales,
+        ),
+        scenario=scenario,
+        truth=truth,
+    )

@@ -1,0 +1,79 @@
+"""Reassembly: blocks of knots in any order and number become one sweep, proven by its CRC.
+
+Comes in: the manifest and blocks. Goes out: gaps to ask for, then raw knots. How they were
+sent is the link's business.
+"""
+
+from __future__ import annotations
+
+from zlib import crc32
+
+import numpy as np
+
+from kneewire import catalogue
+from kneewire.fields import FIXED
+from kneewire.messages import KNOT_BYTES, Message
+from kneewise.instrument.trace import RawKnots
+
+
+class Reassembly:
+    """The knots of one sweep as they come in. `resent` counts blocks that had to come again."""
+
+    def __init__(self, manifest: Message) -> None:
+        self.manifest = manifest
+        self.count: int = manifest["knots"]
+        self._records = bytearray(self.count * KNOT_BYTES)
+        self._have = np.zeros(self.count, dtype=bool)
+        self.resent = 0
+        self._asked_again = False
+
+    def take(self, block: Message) -> None:
+        """Put a block where it belongs; one that reaches beyond the sweep is ignored."""
+        first = block["first"]
+        data = block["data"]
+        after = first + len(data) // KNOT_BYTES
+        if after > self.count:
+            return
+        self._records[first * KNOT_BYTES : after * KNOT_BYTES] = data
+        self._have[first:after] = True
+        if self._asked_again:
+            self.resent += 1
+
+    def gaps(self) -> list[tuple[int, int]]:
+        """(first, count) of each run of knots that has not come."""
+        missing = np.flatnonzero(~self._have)
+        if not len(missing):
+            return []
+        runs = np.split(missing, np.flatnonzero(np.diff(missing) > 1) + 1)
+        return [(int(run[0]), len(run)) for run in runs]
+
+    def ask_again(self) -> None:
+        """From now on every block that comes is one that had to be asked for again."""
+        self._asked_again = True
+
+    def forget(self) -> None:
+        """Start anew: what came does not agree with the manifest."""
+        self._have[:] = False
+        self.ask_again()
+
+    def crc_ok(self) -> bool:
+        """True where the knots agree with the manifest's CRC."""
+        return crc32(self._records) == self.manifest["knots_crc"]
+
+    def knots(self) -> RawKnots:
+        """The raw knots, read as a whole."""
+        return unpack_records(bytes(self._records))
+
+
+def unpack_records(data: bytes) -> RawKnots:
+    """Knot records as arrays."""
+    rows = np.frombuffer(data, dtype=np.uint8).reshape(-1, KNOT_BYTES)
+    columns = {}
+    place = 0
+    for name, kind in catalogue.KNOT:
+        size, _ = FIXED[kind]
+        wide = np.zeros((len(rows), 8), dtype=np.uint8)
+        wide[:, :size] = rows[:, place : place + size]
+        columns[name] = wide.view("<u8").reshape(-1).astype(np.uint64)
+        place += size
+    return RawKnots(**columns)

@@ -1,0 +1,143 @@
+"""One trace: a sweep as the device measured it, and the same in volts and amperes.
+
+Comes in: raw knots and readings from `sweep.py`, numbers from the board profile. Goes out:
+`Trace`, which the archive stores, the report draws and scripts read. No serial port and no
+wire format belong here.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cached_property
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+
+from kneewise.curve.figures import Figures, extract
+
+Floats = npt.NDArray[np.float64]
+Counts = npt.NDArray[np.uint64]
+
+
+@dataclass(frozen=True, slots=True)
+class RawKnots:
+    """Knots as measured, arrays of shape (n,), uint64.
+
+    `time_us`: device microseconds since boot at the middle of the knot's voltage
+    conversions. `voltage_sum`, `current_sum`: sums of ADC codes over `pairs` pairs.
+    `voltage_scatter`, `current_scatter`: sums of squared differences between successive
+    codes, so that scatter / (2 pairs) estimates the variance of one code without the ramp.
+    """
+
+    time_us: Counts
+    voltage_sum: Counts
+    current_sum: Counts
+    pairs: Counts
+    voltage_scatter: Counts
+    current_scatter: Counts
+
+    def __len__(self) -> int:
+        return len(self.time_us)
+
+
+@dataclass(frozen=True, slots=True)
+class Reading:
+    """A mean of several conversions: `code_sum` over `conversions`."""
+
+    code_sum: int
+    conversions: int
+
+    @property
+    def code(self) -> float:
+        return self.code_sum / self.conversions
+
+
+@dataclass(frozen=True, slots=True)
+class Check:
+    """One thing that was checked: its name, what was found, and whether it held."""
+
+    name: str
+    holds: bool
+    found: str
+    expected: str
+
+
+@dataclass(frozen=True, slots=True)
+class Integrity:
+    """How the sweep came over: counts of knots, pairs, and of what went wrong on the way."""
+
+    knots: int
+    pairs: int
+    frames_bad: int
+    blocks_resent: int
+    ring_overruns: int
+    manifest_crc_ok: bool
+
+
+@dataclass(frozen=True, kw_only=True)
+class Trace:
+    """One I-V trace.
+
+    `voltage` (V), `current` (A), `time` (s since the contact began to conduct) and `weight`
+    (pairs averaged) have shape (n,). `voltage_sigma` and `current_sigma` are the standard
+    deviations of each knot's mean from scatter alone.
+    """
+
+    trace_id: str
+    rung: str
+    """What ran the sweep: "tracer", "replay", or an emulator's "micropython" or "in-process"."""
+    emulated: bool
+    device: dict[str, Any]
+    """device_id, firmware, protocol, profile_crc, boot_nonce as text."""
+    profile: dict[str, int | str]
+    """The board profile as the device holds it (integers, units in the names)."""
+    started_utc: str
+    """ISO 8601, from the host's clock; see `started_uncertainty_s`."""
+    started_uncertainty_s: float
+    end_reason: str
+    raw: RawKnots
+    static_voltage: Reading
+    """Source voltage codes just before closing, nothing but the divider drawing current."""
+    zero_current: Reading
+    """Current codes just before closing, with the contact open."""
+    voltage: Floats
+    current: Floats
+    time: Floats
+    weight: Floats
+    voltage_sigma: Floats
+    current_sigma: Floats
+    voc_static: float
+    """V, from `static_voltage`."""
+    residual_capacitor_v: float
+    integrity: Integrity
+    checks: tuple[Check, ...]
+    scenario: dict[str, Any] | None = None
+    """Where the trace is emulated and the scenario is known: its whole content."""
+    truth: dict[str, float] | None = None
+    """isc, voc, imp, vmp, pmp, ff of the emulated source itself; None for a real one."""
+
+    @property
+    def sound(self) -> bool:
+        """True where every check held."""
+        return all(check.holds for check in self.checks)
+
+    @property
+    def label(self) -> str:
+        """"EMULATED" or "" - stands on the face of all that comes from this trace."""
+        return "EMULATED" if self.emulated else ""
+
+    @cached_property
+    def _figures(self) -> Figures:
+        return extract(
+            self.voltage,
+            self.current,
+            weight=self.weight,
+            voltage_sigma=self.voltage_sigma,
+            current_sigma=self.current_sigma,
+            voc_static=self.voc_static,
+        )
+
+    def figures(self) -> Figures:
+        """Isc, Voc, Imp, Vmp, Pmp and fill factor; see `kneewise.curve.figures`."""
+        return self._figures

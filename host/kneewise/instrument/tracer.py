@@ -1,0 +1,431 @@
+"""The public face of a tracer: open it, sweep, read its state.
+
+Comes in: a target's name, settings. Goes out: traces. It speaks in messages through a session
+and knows no bytes.
+"""
+
+from __future__ import annotations
+
+import logging
+import secrets
+from collections.abc import Callable
+from dataclasses import dataclass
+from datetime import UTC, datetime, timedelta
+from types import TracebackType
+from typing import Any, Self, TypeVar
+
+from kneewire import catalogue
+from kneewire.messages import Message
+from kneewise.errors import (
+    DeviceFaultError,
+    LinkError,
+    OutcomeUnknownError,
+    RefusedError,
+    TrustError,
+    UsageError,
+)
+from kneewise.instrument.assemble import assemble
+from kneewise.instrument.profile import Scales, read_record
+from kneewise.instrument.sweep import Reassembly
+from kneewise.instrument.trace import Trace
+from kneewise.link.clock import Probe, estimate
+from kneewise.link.port import Port, open_port
+from kneewise.link.refusals import hazard_text
+from kneewise.link.session import Session
+
+log = logging.getLogger(__name__)
+log.addHandler(logging.NullHandler())
+
+FETCH_TRIES = 12
+CLOCK_PROBES = 4
+BLEED_S = 60.0
+REJOIN_S = 15.0
+SETTLE_S = 0.25
+
+T = TypeVar("T")
+Opener = Callable[[str], "Opened"]
+Keep = Callable[[Trace], object]
+_OPENERS: dict[str, Opener] = {}
+
+
+@dataclass(frozen=True, slots=True)
+class Opened:
+    """What an opener gives: a way to get a port, and what is known of an emulated source."""
+
+    connect: Callable[[], Port]
+    close: Callable[[], None]
+    rung: str
+    scenario: dict[str, Any] | None = None
+    truth: dict[str, float] | None = None
+
+
+def register_opener(prefix: str, opener: Opener) -> None:
+    """Targets "PREFIX" and "PREFIX:anything" are opened by `opener`."""
+    _OPENERS[prefix] = opener
+
+
+def _open_serial(target: str) -> Opened:
+    return Opened(connect=lambda: open_port(target), close=lambda: None, rung="tracer")
+
+
+@dataclass(frozen=True, slots=True)
+class Status:
+    """State of the tracer and its live readings (V, A)."""
+
+    state: str
+    contact_closed: bool
+    bleed_engaged: bool
+    stop_loop_closed: bool
+    leads_reversed: bool
+    source_v: float
+    current_a: float
+    capacitor_v: float
+    held_sweep: str
+    """Id of a sweep that waits for its acknowledgement, or ""."""
+    device_us: int
+
+
+class Tracer:
+    """One tracer, real or emulated. Open it with `Tracer.open`, close it or use `with`."""
+
+    def __init__(self, opened: Opened, *, source_stands_alone: bool = False) -> None:
+        self._opened = opened
+        self._session = Session(opened.connect())
+        self._closed = False
+        try:
+            self.device = self._session.hello()
+            record = self._session.request("read_profile")["record"]
+            self.profile = read_record(record) if record else {}
+        except BaseException:
+            self.close()
+            raise
+        self.source_stands_alone = source_stands_alone or self.emulated
+
+    @classmethod
+    def open(cls, target: str, *, source_stands_alone: bool = False) -> Self:
+        """Open "/dev/ttyACM0", "COM5", "usb:SERIAL", "tcp:host:port", "emulator" and the like.
+
+        `source_stands_alone`: the operator confirms that nothing else (battery, inverter,
+        parallel strings) feeds the source's terminals; without it a real tracer refuses.
+        Raises UsageError, LinkError, ProtocolError.
+        """
+        prefix = target.split(":", 1)[0]
+        opened = _OPENERS.get(prefix, _open_serial)(target)
+        return cls(opened, source_stands_alone=source_stands_alone)
+
+    @property
+    def emulated(self) -> bool:
+        """True where the device says that it is an emulated one."""
+        return bool(self.device["flags"] & catalogue.FLAG_EMULATED)
+
+    @property
+    def rung(self) -> str:
+        """What runs the firmware; see `Trace.rung`."""
+        if self._opened.rung == "tracer" and self.emulated:
+            return "emulator"
+        return self._opened.rung
+
+    def close(self) -> None:
+        """Close the port; twice is harmless."""
+        if not self._closed:
+            self._closed = True
+            self._session.port.close()
+            self._opened.close()
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(
+        self,
+        kind: type[BaseException] | None,
+        error: BaseException | None,
+        traceback: TracebackType | None,
+    ) -> None:
+        self.close()
+
+    # -- state -------------------------------------------------------------------------
+
+    def status(self) -> Status:
+        """State and live readings."""
+        return self._status(self._session.request("status"))
+
+    def rest(self) -> Status:
+        """Stop whatever is under way, wait until the capacitor is bled; the state then.
+
+        DeviceFaultError where a fault is latched.
+        """
+        self._session.abort()
+        return self._wait_safe()
+
+    def clear_fault(self) -> None:
+        """Clear a latched fault; what is still wrong will latch again."""
+        self._session.request("clear_fault")
+
+    # -- sweeps ------------------------------------------------------------------------
+
+    def sweep(
+        self,
+        *,
+        knots: int = 96,
+        limit_s: float = 10.0,
+        keep: Keep | None = None,
+        progress: Callable[[str], None] = lambda stage: None,
+    ) -> Trace:
+        """One sweep: arm, fire, capture, bleed, fetch.
+
+        `knots`: 16 to 512 points. `limit_s`: longest time the contact may be closed.
+        `keep` is given the trace before the device is told that it may forget it; what it
+        raises leaves the sweep held. `progress` is told each stage.
+
+        Raises RefusedError, DeviceFaultError, LinkError, OutcomeUnknownError, TrustError.
+        """
+        try:
+            return self._sweep(knots, limit_s, keep, progress)
+        except KeyboardInterrupt:
+            self._session.abort()
+            raise
+
+    def _sweep(
+        self, knots: int, limit_s: float, keep: Keep | None, progress: Callable[[str], None]
+    ) -> Trace:
+        progress("getting ready")
+        self._wait_safe()
+        progress("arming")
+        armed = self._session.request(
+            "arm",
+            {
+                "knots": knots,
+                "closed_limit_ms": round(limit_s * 1000),
+                "confirmed": 1 if self.source_stands_alone else 0,
+            },
+        )
+        sweep_id = secrets.token_bytes(16)
+        self._fire(armed["token"], sweep_id, progress)
+        progress("bleeding")
+        trace = self._after_fire(sweep_id, lambda: self._finish(sweep_id, progress))
+        self._hand_over(trace, sweep_id, keep)
+        return trace
+
+    def held(self, *, keep: Keep | None = None) -> Trace | None:
+        """Fetch a finished sweep that the device still holds, or None; see `sweep` for `keep`."""
+        status = self._wait_safe()
+        if not status.held_sweep:
+            return None
+        sweep_id = bytes.fromhex(status.held_sweep)
+        trace = self._rejoining(lambda: self._finish(sweep_id, lambda stage: None))
+        self._hand_over(trace, sweep_id, keep)
+        return trace
+
+    def _fire(self, token: int, sweep_id: bytes, progress: Callable[[str], None]) -> None:
+        """Fire, and wait in quiet until the charge has ended. Never fires a second time."""
+        session = self._session
+        progress("charging")
+
+        def go() -> None:
+            fired = session.request(
+                "fire", {"token": token, "sweep_id": sweep_id}, deadline_s=5.0, again_s=1.0
+            )
+            session.wait_notice("charge_ended", fired["quiet_ms"] / 1000, session.beat)
+
+        boot_nonce = self.device["boot_nonce"]
+        try:
+            go()
+        except LinkError:
+            # The charge may be under way: whatever happened, the device knows.
+            self._rejoin_same(boot_nonce, sweep_id)
+
+    def _after_fire(self, sweep_id: bytes, action: Callable[[], T]) -> T:
+        boot_nonce = self.device["boot_nonce"]
+        try:
+            return action()
+        except LinkError:
+            self._rejoin_same(boot_nonce, sweep_id)
+            return action()
+
+    def _rejoin_same(self, boot_nonce: int, sweep_id: bytes) -> None:
+        self._rejoin()
+        if self.device["boot_nonce"] != boot_nonce:
+            cause = catalogue.RESET_CAUSES.get(self.device["reset_cause"], "unknown")
+            raise OutcomeUnknownError(
+                f"sweep {sweep_id.hex()[:8]}",
+                found=f"the device was reset after it was told to fire (cause: {cause})",
+                expected="the device that was told to fire",
+                next_step="the sweep is lost or was never made; measure the capacitor, "
+                "find the cause, then sweep again",
+            )
+        status = self.status()
+        if status.state in ("bleeding", "safe", "fault") and status.held_sweep != sweep_id.hex():
+            raise OutcomeUnknownError(
+                f"sweep {sweep_id.hex()[:8]}",
+                found="the device holds no such sweep: the fire did not arrive",
+                expected="a held sweep",
+                next_step="nothing was closed; sweep again",
+            )
+
+    def _rejoining(self, action: Callable[[], T]) -> T:
+        try:
+            return action()
+        except LinkError:
+            self._rejoin()
+            return action()
+
+    def _rejoin(self) -> None:
+        """Open the port again and resume the session, for REJOIN_S at most."""
+        port = self._session.port
+        end = port.clock() + REJOIN_S
+        port.close()
+        while True:
+            try:
+                self._session.take_over(self._opened.connect())
+                self.device = self._session.hello()
+                return
+            except LinkError:
+                if port.clock() >= end:
+                    raise
+                self._session.port.close()
+                port.sleep(SETTLE_S)
+
+    def _finish(self, sweep_id: bytes, progress: Callable[[str], None]) -> Trace:
+        """Wait for the bleed, fetch the held sweep, make the trace."""
+        status, fault = self._wait_bled()
+        if status.held_sweep != sweep_id.hex():
+            if fault is not None:
+                raise fault
+            raise TrustError(
+                f"sweep {sweep_id.hex()[:8]}",
+                found=f"the device holds {status.held_sweep or 'no sweep'}",
+                expected="this sweep",
+                next_step="sweep again; another program may be talking to the tracer",
+            )
+        progress("fetching")
+        manifest = self._session.request("read_manifest")
+        reassembly = self._fetch(manifest, sweep_id)
+        probes = [self._probe() for _ in range(CLOCK_PROBES)]
+        if fault is not None and not reassembly.count:
+            raise fault
+        return self._trace(manifest, reassembly, probes)
+
+    def _fetch(self, manifest: Message, sweep_id: bytes) -> Reassembly:
+        """All knots, gaps asked for after each burst."""
+        reassembly = Reassembly(manifest)
+        block_limit = self.device["window"]
+        for _ in range(FETCH_TRIES):
+            for first, count in reassembly.gaps():
+                start = first
+                while start < first + count:
+                    reply = self._session.request(
+                        "fetch",
+                        {"sweep_id": sweep_id, "first": start, "count": first + count - start},
+                        on_block=reassembly.take,
+                    )
+                    start += max(reply["count"], 1)
+            if not reassembly.gaps():
+                if reassembly.crc_ok():
+                    return reassembly
+                reassembly.forget()
+            reassembly.ask_again()
+        raise LinkError(
+            f"fetching sweep {sweep_id.hex()[:8]}",
+            found=f"{len(reassembly.gaps())} gaps after {FETCH_TRIES} bursts of up to "
+            f"{block_limit} blocks",
+            expected="all knots, with the CRC of the manifest",
+            next_step="use a shorter or better cable, then fetch the held sweep again",
+        )
+
+    def _trace(self, manifest: Message, reassembly: Reassembly, probes: list[Probe]) -> Trace:
+        started, uncertainty_s = self._utc(manifest["conducting_us"], probes)
+        return assemble(
+            manifest,
+            reassembly,
+            rung=self.rung,
+            device=self.device,
+            profile=self.profile,
+            frames_bad=self._session.frames_bad,
+            started_utc=started,
+            started_uncertainty_s=uncertainty_s,
+            scenario=self._opened.scenario,
+            truth=self._opened.truth,
+        )
+
+    def _hand_over(self, trace: Trace, sweep_id: bytes, keep: Keep | None) -> None:
+        if keep is not None:
+            keep(trace)
+        self._rejoining(lambda: self._session.request("acknowledge", {"sweep_id": sweep_id}))
+
+    # -- waiting and clocks ------------------------------------------------------------
+
+    def _wait_safe(self) -> Status:
+        """Wait out the bleed; a latched fault is raised."""
+        status, fault = self._wait_bled()
+        if fault is not None:
+            raise fault
+        if status.state == "armed":
+            self._session.abort()
+        return status
+
+    def _wait_bled(self) -> tuple[Status, DeviceFaultError | None]:
+        port = self._session.port
+        end = port.clock() + BLEED_S
+        while True:
+            message = self._session.request("status", deadline_s=5.0)
+            status = self._status(message)
+            if status.state == "fault":
+                return status, self._fault(message)
+            if status.state not in ("bleeding", "charging"):
+                return status, None
+            if port.clock() >= end:
+                raise DeviceFaultError(
+                    "waiting for the bleed",
+                    found=f"{status.capacitor_v:.1f} V on the capacitor after {BLEED_S:g} s",
+                    expected="an empty capacitor",
+                    next_step="keep away from the terminals; check the bleed resistor",
+                    guard=1,
+                )
+            port.sleep(0.02)
+
+    def _status(self, message: Message) -> Status:
+        values = message.values
+        scales = Scales.of(self.profile) if self.profile else None
+        conversions = values["conversions"]
+
+        def mean(name: str) -> float:
+            return float(values[name]) / conversions
+
+        return Status(
+            state=catalogue.STATES[values["state"]],
+            contact_closed=bool(values["contact_closed"]),
+            bleed_engaged=bool(values["bleed_engaged"]),
+            stop_loop_closed=bool(values["stop_loop_closed"]),
+            leads_reversed=bool(values["leads_reversed"]),
+            source_v=scales.voltage(mean("voltage_sum")) if scales else float("nan"),
+            current_a=scales.current(mean("current_sum")) if scales else float("nan"),
+            capacitor_v=scales.capacitor(mean("capacitor_sum")) if scales else float("nan"),
+            held_sweep=values["sweep_id"].hex() if values["held"] else "",
+            device_us=values["time_us"],
+        )
+
+    def _fault(self, message: Message) -> DeviceFaultError:
+        values = message.values
+        found, expected, step = hazard_text(
+            values["guard"], values["measured"], values["limit"], values["unit"]
+        )
+        return DeviceFaultError(
+            "the tracer has latched a fault",
+            found=found,
+            expected=expected,
+            next_step=f"{step}; then clear the fault",
+            guard=values["guard"],
+        )
+
+    def _probe(self) -> Probe:
+        clock = self._session.port.clock
+        sent = clock()
+        reply = self._session.request("heartbeat")
+        return Probe(sent, reply["received_us"] / 1e6, reply["replied_us"] / 1e6, clock())
+
+    def _utc(self, device_us: int, probes: list[Probe]) -> tuple[str, float]:
+        offset = estimate(probes)
+        now = datetime.now(UTC)
+        ago_s = self._session.port.clock() + offset.offset_s - device_us / 1e6
+        return (now - timedelta(seconds=ago_s)).isoformat(), offset.uncertainty_s
+
