@@ -1,0 +1,130 @@
+"""What a sweep says on the terminal: a summary for people, an object for scripts."""
+
+from __future__ import annotations
+
+import math
+from datetime import datetime
+from pathlib import Path
+from typing import Any
+
+from kneewise.curve.figures import Figures, NoFigures, Quantity
+from kneewise.instrument.trace import Trace
+
+RUNGS = {
+    "micropython": "the firmware ran in MicroPython against the emulated plant",
+    "in-process": "the firmware ran in-process on CPython against the emulated plant",
+    "emulator": "an emulated tracer behind a port",
+    "tracer": "a tracer",
+}
+NAMES = {
+    "isc": "Isc",
+    "voc": "Voc",
+    "pmp": "Pmp",
+    "vmp": "Vmp",
+    "imp": "Imp",
+    "ff": "fill factor",
+}
+
+
+def as_json(trace: Trace, file: Path, picture: Path) -> dict[str, Any]:
+    """The object of `--json`: SI units; figures are null where the curve does not give them."""
+    figures, reason = _figures(trace)
+    integrity = trace.integrity
+    return {
+        "label": trace.label,
+        "trace_id": trace.trace_id,
+        "rung": trace.rung,
+        "emulated": trace.emulated,
+        "started_utc": trace.started_utc,
+        "voltage": trace.voltage.tolist(),
+        "current": trace.current.tolist(),
+        "time": trace.time.tolist(),
+        "weight": trace.weight.tolist(),
+        "figures": {name: getattr(figures, name).value if figures else None for name in NAMES},
+        "no_figures": reason,
+        "truth": trace.truth,
+        "integrity": {
+            "knots": integrity.knots,
+            "pairs": integrity.pairs,
+            "frames_bad": integrity.frames_bad,
+            "blocks_resent": integrity.blocks_resent,
+            "ring_overruns": integrity.ring_overruns,
+            "manifest_crc_ok": integrity.manifest_crc_ok,
+        },
+        "checks": [
+            {
+                "name": check.name,
+                "holds": check.holds,
+                "found": check.found,
+                "expected": check.expected,
+            }
+            for check in trace.checks
+        ],
+        "residual_capacitor_v": trace.residual_capacitor_v,
+        "file": str(file),
+        "picture": str(picture),
+    }
+
+
+def as_text(trace: Trace, file: Path, picture: Path) -> str:
+    """The summary of `kneewise sweep`."""
+    started = datetime.fromisoformat(trace.started_utc)
+    heading = (
+        f"{trace.label + ': ' if trace.label else ''}sweep {trace.trace_id[:8]}, "
+        f"{started:%Y-%m-%d %H:%M:%S} UTC"
+    )
+    lines = [heading, f"  {RUNGS.get(trace.rung, trace.rung)}"]
+    if trace.scenario is not None:
+        lines.append(f"  scenario: {trace.scenario['title']}, {trace.scenario['place']}")
+    lines.append("")
+    lines += _figure_lines(trace)
+    integrity = trace.integrity
+    repeated = (
+        f", {integrity.blocks_resent} blocks sent again" if integrity.blocks_resent else ""
+    )
+    lines += [
+        "",
+        f"  {integrity.knots} knots from {integrity.pairs} pairs of V and I"
+        f" in {1e3 * trace.time[-1]:.1f} ms{repeated}",
+        f"  capacitor left at {trace.residual_capacitor_v:.2f} V"
+        " (measure it yourself before touching the terminals)",
+        "",
+        "  checked:",
+    ]
+    for check in trace.checks:
+        lines.append(f"    {'holds ' if check.holds else 'FAILED'}  {check.name}: {check.found}")
+        if not check.holds:
+            lines.append(f"            expected {check.expected}")
+    lines += ["", f"  stored   {file}", f"  picture  {picture}"]
+    return "\n".join(lines)
+
+
+def _figures(trace: Trace) -> tuple[Figures | None, str | None]:
+    try:
+        return trace.figures(), None
+    except NoFigures as error:
+        return None, error.reason
+
+
+def _figure_lines(trace: Trace) -> list[str]:
+    figures, reason = _figures(trace)
+    if figures is None:
+        return [f"  no figures: {reason}"]
+    remarks = {
+        "isc": f"extrapolated from {figures.isc_extrapolated_from_v:.2f} V "
+        f"({100 * figures.isc_extrapolated_from_v / figures.voc.value:.1f} % of Voc)",
+        "voc": "read just before closing",
+    }
+    source = " the emulated source itself:" if trace.truth else ""
+    lines = [f"  {'':12}{'':14}{source}"] if source else []
+    for name, shown in NAMES.items():
+        quantity: Quantity = getattr(figures, name)
+        line = f"  {shown:12}{quantity!s:>12}"
+        if trace.truth:
+            truth = trace.truth[name]
+            off = 100 * (quantity.value / truth - 1) if truth else math.nan
+            line += f"   {truth:10.4f} {quantity.unit:2}{off:+7.2f} %"
+        if name in remarks:
+            line += f"   {remarks[name]}"
+        lines.append(line.rstrip())
+    return lines
