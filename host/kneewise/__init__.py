@@ -1,9 +1,9 @@
 """Kneewise: sweeps, traces and figures from a capacitor-load I-V tracer.
 
-    from kneewise import Tracer
-    with Tracer.open("emulator") as tracer:
-        trace = tracer.sweep(knots=96)
-    trace.voltage, trace.current, trace.figures().pmp
+from kneewise import Tracer
+with Tracer.open("emulator") as tracer:
+    trace = tracer.sweep(knots=96)
+trace.voltage, trace.current, trace.figures().pmp
 """
 
 from __future__ import annotations

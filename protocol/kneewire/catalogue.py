@@ -79,17 +79,19 @@ _GUARD = (
 # kind: (name, direction, frozen, changes state, fields)
 MESSAGES: "dict[int, tuple[str, int, bool, bool, tuple[tuple[str, str], ...]]]" = {
     # "H", and no control character where it can be helped: a hello may arrive at a MicroPython
-    # prompt, where 0x01 and 0x04 on an empty line have effects of their own.
+    # prompt, where 0x01 and 0x04 on an empty line have effects of their own and 0x0d runs the
+    # line. The versions, which hold zeros, come last: zeros nearer the front would make COBS
+    # code bytes of 0x0a or 0x0d.
     0x48: (
         "hello",
         TO_DEVICE,
         True,
         False,
         (
+            ("host_nonce", "u32"),
+            ("fingerprint", "u32"),
             ("major", "u8"),
             ("minor", "u8"),
-            ("fingerprint", "u32"),
-            ("host_nonce", "u32"),
         ),
     ),
     0xC8: (

@@ -51,6 +51,8 @@ def write(out: bytearray, kind: str, value: "Any", unit_bytes: int) -> None:
         out.append(len(data))
         out.extend(data)
     elif kind == "bytes":
+        if len(value) > 65535:
+            raise ValueError("length")
         out.extend(len(value).to_bytes(2, "little"))
         out.extend(value)
     elif kind == "knots":

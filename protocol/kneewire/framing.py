@@ -40,20 +40,18 @@ class Bad:
 
 def readable(raw: bytes) -> str:
     """`raw` as text where at least 90 % of it is printable ASCII (a prompt, a traceback)."""
-    good = 0
-    for byte in raw:
-        if 32 <= byte < 127 or byte in (9, 10, 13):
-            good += 1
-    if not raw or good * 10 < len(raw) * 9:
+    good = [chr(byte) for byte in raw if 32 <= byte < 127 or byte in (9, 10, 13)]
+    if not raw or len(good) * 10 < len(raw) * 9:
         return ""
-    return "".join([chr(byte) for byte in raw if byte < 127])
+    return "".join(good)
 
 
 def decode_run(run: bytes, toward_device: bool) -> "bytes | Bad":
     """The body inside one run of bytes between delimiters, or why there is none."""
     coded = run
     if toward_device:
-        if run.count(b"\x02") != run.count(b"\x02\x04") + run.count(b"\x02\x05"):
+        escapes = run.count(b"\x02\x04") + run.count(b"\x02\x05")
+        if run.count(b"\x02") != escapes or b"\x03" in run:
             return Bad(BAD_ESCAPE, run)
         coded = run.replace(b"\x02\x05", b"\x03").replace(b"\x02\x04", b"\x02")
     try:
@@ -71,8 +69,7 @@ def decode_run(run: bytes, toward_device: bool) -> "bytes | Bad":
 class Decoder:
     """Turns any stream of bytes into bodies and `Bad` runs; never raises, never grows.
 
-    `limit` bounds the coded bytes kept of one run. `good` and `bad` count what was yielded,
-    `longest` the longest run seen.
+    `limit` bounds the coded bytes kept of one run. `good` and `bad` count what was yielded.
     """
 
     def __init__(self, limit: int, toward_device: bool) -> None:
@@ -120,6 +117,6 @@ class Decoder:
 
 
 def coded_limit(body_and_crc: int, toward_device: bool) -> int:
-    """Longest coded run (delimiter apart) of a frame whose body and CRC take that many bytes."""
+    """Room for the coded run (delimiter apart) of a body and CRC of that many bytes together."""
     cobs = body_and_crc + body_and_crc // 254 + 1
     return 2 * cobs if toward_device else cobs

@@ -16,11 +16,15 @@ NO_SESSION = 0xFFFFFFFF  # in a hello, and before there is a session
 
 
 def fingerprint() -> int:
-    """CRC-32 of the catalogue: two sides with the same number speak the same messages."""
+    """Of the catalogue: two sides with the same number speak the same messages.
+
+    A CRC-32, but with the top bit of every byte set: a hello carries it, and a prompt acts on
+    bytes below 0x20 but passes over those from 0x80.
+    """
     crc = 0
     for line in catalogue.canonical_lines():
         crc = crc32(line.encode(), crc)
-    return crc
+    return crc | 0x80808080
 
 
 class Message:
@@ -55,9 +59,8 @@ def pack(name: str, session: int, sequence: int, values: "dict[str, Any] | None"
     """The body of one message. KeyError for a missing value, ValueError for one out of range."""
     kind = catalogue.KINDS[name]
     out = bytearray()
-    out.append(kind)
-    out.extend(session.to_bytes(4, "little"))
-    out.extend(sequence.to_bytes(4, "little"))
+    for place, value in enumerate((kind, session, sequence)):
+        fields.write(out, catalogue.HEADER[place][1], value, KNOT_BYTES)
     for row in catalogue.MESSAGES[kind][4]:
         try:
             fields.write(out, row[1], (values or {})[row[0]], KNOT_BYTES)

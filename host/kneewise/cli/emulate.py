@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import signal
 import time
 from pathlib import Path
 from typing import Annotated
@@ -34,6 +35,8 @@ def emulate(
     from kneewise.emulator.opener import start
     from kneewise.emulator.process import ProcessTracer
 
+    # A supervisor's SIGTERM ends it as Ctrl-C does: the pty and its folder are taken away.
+    signal.signal(signal.SIGTERM, signal.default_int_handler)
     loaded = Scenario.load(scenario) if scenario is not None else Scenario.default()
     tracer = start(loaded)
     try:

@@ -12,7 +12,7 @@ from typing import Annotated
 import typer
 
 import kneewise
-from kneewise.cli import emulate, sweep
+from kneewise.cli import emulate, rest, sweep
 from kneewise.errors import KneewiseError
 
 app = typer.Typer(
@@ -25,6 +25,7 @@ app = typer.Typer(
     context_settings={"help_option_names": ["-h", "--help"]},
 )
 app.command("sweep", epilog="Example: kneewise sweep --on emulator --knots 128")(sweep.sweep)
+app.command("rest", epilog="Example: kneewise rest --on emulator")(rest.rest)
 app.command("emulate", epilog="Example: kneewise emulate --example > my_module.toml")(
     emulate.emulate
 )

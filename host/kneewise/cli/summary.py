@@ -79,9 +79,7 @@ def as_text(trace: Trace, file: Path, picture: Path) -> str:
     lines.append("")
     lines += _figure_lines(trace)
     integrity = trace.integrity
-    repeated = (
-        f", {integrity.blocks_resent} blocks sent again" if integrity.blocks_resent else ""
-    )
+    repeated = f", {integrity.blocks_resent} blocks sent again" if integrity.blocks_resent else ""
     lines += [
         "",
         f"  {integrity.knots} knots from {integrity.pairs} pairs of V and I"

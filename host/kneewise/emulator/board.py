@@ -65,7 +65,10 @@ class Board:
         self.record: deque[tuple[int, str, Level]] = deque(maxlen=RECORD_ENTRIES)
         self.power_off_after_closing_us: int | None = None
         """Lose power this long after the source next begins to conduct; then None again."""
+        self.open_stop_loop_after_closing_us: int | None = None
+        """Open the stop loop this long after the source next begins to conduct; then None."""
         self._power_off_us: int | None = None
+        self._stop_loop_us: int | None = None
         self._clock = clock
         self._plant = Plant(scenario.build_source(), scenario.build_circuit(), self._moved)
         self._converters = Converters(scenario, self.scaling)
@@ -122,12 +125,15 @@ class Board:
             stops = [end_us]
             if self._converters.capturing:
                 stops.append(plant.now_us + CHUNK_US)
-            if self.power_off_after_closing_us is not None and plant.next_event_us is not None:
-                # A closing sets the moment of the loss, so none may be passed over.
+            planned = (self.power_off_after_closing_us, self.open_stop_loop_after_closing_us)
+            if planned != (None, None) and plant.next_event_us is not None:
+                # A closing sets the moment of what is planned, so none may be passed over.
                 stops.append(plant.next_event_us)
-            if self._power_off_us is not None:
-                stops.append(self._power_off_us)
+            stops += [us for us in (self._power_off_us, self._stop_loop_us) if us is not None]
             self._converters.run(plant, min(stops), self._stop_loop_open)
+            if self._stop_loop_us is not None and self._stop_loop_us <= plant.now_us:
+                self._stop_loop_us = None
+                self.open_stop_loop(True)
             if self._power_off_us is not None and self._power_off_us <= plant.now_us:
                 self._power_off_us = None
                 self._let_go(powered=False)
@@ -202,9 +208,13 @@ class Board:
             self._levels[what] = level
         if what != "conducting":
             self.record.append((time_us, what, level))
-        elif level and self.power_off_after_closing_us is not None:
-            self._power_off_us = time_us + self.power_off_after_closing_us
-            self.power_off_after_closing_us = None
+        elif level:
+            if self.power_off_after_closing_us is not None:
+                self._power_off_us = time_us + self.power_off_after_closing_us
+                self.power_off_after_closing_us = None
+            if self.open_stop_loop_after_closing_us is not None:
+                self._stop_loop_us = time_us + self.open_stop_loop_after_closing_us
+                self.open_stop_loop_after_closing_us = None
 
     # -- inputs ---------------------------------------------------------------------------
 

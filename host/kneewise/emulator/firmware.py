@@ -26,24 +26,31 @@ import kneewire
 from kneewire.profile_record import seal
 from kneewise.emulator.board import OPS
 
+# What the wire's fields and hazards mean: for people, not for the firmware's memory.
+_PROSE = ("hazards.py", "meanings.py", "spec.py")
 _ONBOARD = Path(__file__).parent / "onboard"
 _ONBOARD_FILES = ("hal_emulated.py", "emulated_board.py", "machine.py")
 
 
 def device_folder() -> Path:
-    """The folder with `main.py`, `tracer/` and `profiles/`: packed in a wheel, else beside host/."""
+    """Where `main.py`, `tracer/` and `profiles/` are: packed in a wheel, else beside host/."""
     packed = Path(__file__).parents[1] / "_device"
     return packed if packed.is_dir() else Path(__file__).parents[3] / "device"
 
 
-def lay_out(folder: Path, record: bytes, device_id: bytes, seed: int) -> None:
+def lay_out(folder: Path, record: bytes, device_id: bytes) -> None:
     """Fill `folder` with what an emulated board's flash holds: the firmware, compiled."""
     shutil.copytree(_compiled(), folder, dirs_exist_ok=True)
     shutil.copy(device_folder() / "main.py", folder / "main.py")
     (folder / "bus_requests.py").write_text(
-        f"REQUESTS = {OPS!r}\nDEVICE_ID = {device_id!r}\nSEED = {seed}\n", encoding="utf-8"
+        f"REQUESTS = {OPS!r}\nDEVICE_ID = {device_id!r}\n", encoding="utf-8"
     )
     (folder / "profile.bin").write_bytes(seal(record))
+
+
+def boot_seed(scenario_seed: int, boots: int) -> int:
+    """Seed of the board's random numbers: every boot has others, every run the same."""
+    return scenario_seed * 1000003 + boots
 
 
 @cache
@@ -54,7 +61,7 @@ def _compiled() -> Path:
     device = device_folder()
     sources = [
         *(device / "tracer").glob("*.py"),
-        *Path(kneewire.__file__).parent.glob("*.py"),
+        *(path for path in Path(kneewire.__file__).parent.glob("*.py") if path.name not in _PROSE),
         *(_ONBOARD / name for name in _ONBOARD_FILES),
     ]
     with ThreadPoolExecutor() as pool:

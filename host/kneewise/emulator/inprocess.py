@@ -15,7 +15,7 @@ from typing import Any
 from kneewire.profile_record import seal
 from kneewise.emulator.board import OPS, Board, PowerLost
 from kneewise.emulator.converters import Scaling
-from kneewise.emulator.firmware import firmware_module
+from kneewise.emulator.firmware import boot_seed, firmware_module
 from kneewise.emulator.scenario import Scenario
 from kneewise.errors import LinkError
 
@@ -31,9 +31,10 @@ class _DirectBus:
 
 
 class InProcessTracer:
-    """An emulated tracer and the port to it, in one object.
+    """An emulated tracer in this process; `connect` gives a port to it.
 
-    `board` is the emulated board. `unplug` takes its power away, `plug` gives it back.
+    `board` is the emulated board. `unplug` takes power and link away, `plug` gives them back;
+    `cut_link` takes the link alone.
     """
 
     rung = "in-process"
@@ -41,9 +42,10 @@ class InProcessTracer:
     def __init__(
         self, scenario: Scenario, scaling: Scaling, record: bytes, device_id: bytes
     ) -> None:
-        self.name = "emulator (in-process)"
         self.scenario = scenario
         self.board = Board(scenario, scaling=scaling, clock=lambda: 0.0)
+        self.crash: BaseException | None = None
+        """What ended the firmware, if anything did."""
         self._device_id = device_id
         self._record = record
         self._boots = 0
@@ -53,47 +55,55 @@ class InProcessTracer:
         self._device_turn = threading.Semaphore(0)
         self._host_turn = threading.Semaphore(0)
         self._host_until_us = 0
-        self._stopping = False
         self._sleeping = False
-        self._crash: BaseException | None = None
+        self._stopping = False
+        self._cable: Cable | None = None
         self.firmware: Any = None
         self.plug()
 
-    # -- the host's side: a Port -------------------------------------------------------
+    # -- the host's side ---------------------------------------------------------------
 
-    def clock(self) -> float:
-        return self.board.virtual_us / 1e6
+    def connect(self) -> Cable:
+        """A port; one that was given before is dead from now on. LinkError without power."""
+        if self._thread is None:
+            raise no_power(self.crash)
+        self.cut_link()
+        self._cable = Cable(self)
+        return self._cable
+
+    def cut_link(self) -> None:
+        """Take the link away; what the tracer says meanwhile is lost."""
+        if self._cable is not None:
+            self._cable.open = False
+            self._cable = None
+        self._to_host.clear()
+
+    def exchange(self, seconds: float) -> bytes:
+        """Give the firmware its turn, if it has said nothing yet; what it says."""
+        if not self._to_host:
+            self._device_until(seconds)
+            if self.crash is not None and not self._to_host:
+                raise no_power(self.crash)
+        data = bytes(self._to_host)
+        self._to_host.clear()
+        return data
 
     def sleep(self, seconds: float) -> None:
+        """Give the firmware its turn for so long, and keep what it says."""
         self._sleeping = True
         try:
             self._device_until(seconds)
         finally:
             self._sleeping = False
 
-    def read(self, timeout_s: float) -> bytes:
-        if not self._to_host:
-            self._device_until(timeout_s)
-            if self._crash is not None and not self._to_host:
-                raise self._gone()
-        data = bytes(self._to_host)
-        self._to_host.clear()
-        return data
-
-    def write(self, data: bytes) -> None:
-        if self._thread is None:
-            raise self._gone()
-        room = INPUT_RING - len(self._to_device)
-        self._to_device += data[:room]
-
-    def close(self) -> None:
-        self.unplug()
+    def put_input(self, data: bytes) -> None:
+        """Bytes from the host; what its ring does not hold is lost."""
+        self._to_device += data[: INPUT_RING - len(self._to_device)]
 
     def _device_until(self, seconds: float) -> None:
-        """Give the firmware its turn, for so much virtual time at most."""
         if self._thread is None:
-            raise self._gone()
-        if self._crash is None:
+            raise no_power(self.crash)
+        if self.crash is None:
             self._host_until_us = self.board.virtual_us + max(round(seconds * 1e6), 0)
             self._device_turn.release()
             self._host_turn.acquire()
@@ -105,7 +115,7 @@ class InProcessTracer:
         if self._thread is not None:
             return
         self._stopping = False
-        self._crash = None
+        self.crash = None
         self._to_device.clear()
         self._to_host.clear()
         self.board.power(True)
@@ -117,12 +127,17 @@ class InProcessTracer:
         """Take power away at once; every pin is undriven from here on."""
         if self._thread is None:
             return
+        self.cut_link()
         # Power first: what the firmware's own clean-up still commands reaches no pin.
         self.board.power(False)
         self._stopping = True
         self._device_turn.release()
         self._thread.join()
         self._thread = None
+
+    def close(self) -> None:
+        """Unplug; twice is harmless."""
+        self.unplug()
 
     # -- the device's side -------------------------------------------------------------
 
@@ -135,7 +150,7 @@ class InProcessTracer:
                 _DirectBus(self.board),
                 _Link(self),
                 self._device_id,
-                self.scenario.seed * 1000003 + self._boots,
+                boot_seed(self.scenario.seed, self._boots),
             )
             buffers = firmware_module("tracer.memory").Buffers()
             loop = firmware_module("tracer.loop").Loop
@@ -144,9 +159,9 @@ class InProcessTracer:
                 profile.write_bytes(seal(self._record))
                 self.firmware = loop(hal, buffers, str(profile))
             self.firmware.run()
-            self._crash = SystemExit("the firmware left to its prompt")
+            self.crash = SystemExit("the firmware left to its prompt")
         except BaseException as error:  # what ends the firmware is told to the host
-            self._crash = error
+            self.crash = error
         finally:
             self._host_turn.release()
 
@@ -175,13 +190,47 @@ class InProcessTracer:
     def input_waiting(self) -> bool:
         return bool(self._to_device)
 
-    def _gone(self) -> LinkError:
-        return LinkError(
-            f"talking to {self.name}",
-            found=f"the emulated tracer has no power ({self._crash!r})",
-            expected="a running tracer",
-            next_step="plug it in again",
-        )
+
+class Cable:
+    """The host's end of the link: a port on the shared virtual clock."""
+
+    name = "emulator (in-process)"
+
+    def __init__(self, tracer: InProcessTracer) -> None:
+        self.open = True
+        self._tracer = tracer
+
+    def clock(self) -> float:
+        return self._tracer.board.virtual_us / 1e6
+
+    def sleep(self, seconds: float) -> None:
+        self._tracer.sleep(seconds)
+
+    def read(self, timeout_s: float) -> bytes:
+        self._check()
+        return self._tracer.exchange(timeout_s)
+
+    def write(self, data: bytes) -> None:
+        self._check()
+        self._tracer.put_input(data)
+
+    def close(self) -> None:
+        if self.open:
+            self._tracer.cut_link()
+
+    def _check(self) -> None:
+        if not self.open:
+            raise no_power(None)
+
+
+def no_power(crash: BaseException | None) -> LinkError:
+    """What a host sees of a tracer whose firmware does not run or whose cable is cut."""
+    return LinkError(
+        f"talking to {Cable.name}",
+        found=f"the firmware has ended ({crash!r})" if crash is not None else "the link is cut",
+        expected="a running tracer",
+        next_step="plug it in again",
+    )
 
 
 class _Link:

@@ -1,8 +1,8 @@
 """Targets that begin with "emulator": start an emulated tracer and give a port to it.
 
-    emulator                        the default scenario, in MicroPython where it is installed
-    emulator:FILE.toml              a scenario of one's own
-    emulator:RUNG[:FILE.toml]       RUNG is micropython or in-process
+emulator                        the default scenario, in MicroPython where it is installed
+emulator:FILE.toml              a scenario of one's own
+emulator:RUNG[:FILE.toml]       RUNG is micropython or in-process
 """
 
 from __future__ import annotations
@@ -62,7 +62,7 @@ def start(scenario: Scenario, rung: str = "") -> Emulated:
 def connector(tracer: Emulated) -> Callable[[], Port]:
     """How a host gets a port to an emulated tracer, the first time and after a lost link."""
     if isinstance(tracer, InProcessTracer):
-        return lambda: tracer
+        return tracer.connect
     return lambda: open_port(tracer.port_name)
 
 

@@ -8,7 +8,6 @@ with no host there, the newest output is kept and the rest is lost.
 from __future__ import annotations
 
 import contextlib
-import fcntl
 import importlib.util
 import os
 import pty
@@ -27,10 +26,17 @@ from pathlib import Path
 
 from kneewise.emulator.board import Board, PowerLost
 from kneewise.emulator.converters import Scaling
-from kneewise.emulator.firmware import lay_out
+from kneewise.emulator.firmware import boot_seed, lay_out
 from kneewise.emulator.scenario import Scenario
 
-_START = Path(__file__).parent / "onboard" / "power_on.py"
+# The new session takes the pty as its own terminal, so that 0x03 reaches it as Ctrl-C.
+_RUN = """
+import fcntl, termios
+fcntl.ioctl(0, termios.TIOCSCTTY, 0)
+from micropython_unix import main
+main()
+"""
+_POWER_ON = Path(__file__).parent / "onboard" / "power_on.py"
 HEAP = "200k"
 KEPT_UNREAD = 256  # bytes of output that wait for a host that is not there, as on the RP2 port
 IDLE_S = 0.005
@@ -68,9 +74,10 @@ class ProcessTracer:
         self._flash = self._folder / "flash"
         self._flash.mkdir()
         self.port_name = str(self._folder / "tty")
-        lay_out(self._flash, record, device_id, scenario.seed)
+        lay_out(self._flash, record, device_id)
         if program is not None:
             (self._flash / "main.py").write_text(program, encoding="utf-8")
+        self._boots = 0
         self._process: subprocess.Popen[bytes] | None = None
         self._cable: int | None = None
         self._bridge_stop = threading.Event()
@@ -92,6 +99,7 @@ class ProcessTracer:
             return
         with self._lock:
             self.board.power(True)
+        self._boots += 1
         ours, theirs = socket.socketpair()
         master, slave = pty.openpty()
         _as_usb_serial(slave)
@@ -99,17 +107,17 @@ class ProcessTracer:
             **os.environ,
             "KNEEWISE_BUS": str(theirs.fileno()),
             "KNEEWISE_FLASH": str(self._flash),
+            "KNEEWISE_SEED": str(boot_seed(self.scenario.seed, self._boots)),
         }
         environment.pop("MICROPYPATH", None)
         self._process = subprocess.Popen(
-            [sys.executable, "-m", "micropython_unix", "-i", "-X", f"heapsize={HEAP}", str(_START)],
+            [sys.executable, "-c", _RUN, "-i", "-X", f"heapsize={HEAP}", str(_POWER_ON)],
             stdin=slave,
             stdout=slave,
             stderr=slave,
             env=environment,
             pass_fds=(theirs.fileno(),),
             start_new_session=True,
-            preexec_fn=_own_terminal,
         )
         os.close(slave)
         theirs.close()
@@ -135,7 +143,8 @@ class ProcessTracer:
         process.kill()
         process.wait()
         self._bridge_stop.set()
-        assert self._bus is not None and self._terminal is not None
+        assert self._bus is not None
+        assert self._terminal is not None
         with contextlib.suppress(OSError):
             self._bus.shutdown(socket.SHUT_RDWR)
         for thread in self._threads:
@@ -237,10 +246,6 @@ def _as_usb_serial(slave: int) -> None:
         controls[number] = os.fpathconf(slave, "PC_VDISABLE").to_bytes(1, "little")
     controls[termios.VINTR] = CTRL_C
     termios.tcsetattr(slave, termios.TCSANOW, attributes)
-
-
-def _own_terminal() -> None:
-    fcntl.ioctl(0, termios.TIOCSCTTY, 0)
 
 
 def _has_host(cable: int) -> bool:

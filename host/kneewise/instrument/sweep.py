@@ -1,7 +1,7 @@
-"""Reassembly: blocks of knots in any order and number become one sweep, proven by its CRC.
+"""Fetching a held sweep: blocks in any order and number become one sweep, proven by its CRC.
 
-Comes in: the manifest and blocks. Goes out: gaps to ask for, then raw knots. How they were
-sent is the link's business.
+Comes in: the manifest and blocks. Goes out: gaps to ask for, then raw knots. How a message
+travels is the link's business.
 """
 
 from __future__ import annotations
@@ -13,7 +13,11 @@ import numpy as np
 from kneewire import catalogue
 from kneewire.fields import FIXED
 from kneewire.messages import KNOT_BYTES, Message
+from kneewise.errors import LinkError
 from kneewise.instrument.trace import RawKnots
+from kneewise.link.session import Session
+
+TRIES = 12
 
 
 class Reassembly:
@@ -58,11 +62,35 @@ class Reassembly:
 
     def crc_ok(self) -> bool:
         """True where the knots agree with the manifest's CRC."""
-        return crc32(self._records) == self.manifest["knots_crc"]
+        return crc32(self._records) == int(self.manifest["knots_crc"])
 
     def knots(self) -> RawKnots:
         """The raw knots, read as a whole."""
         return unpack_records(bytes(self._records))
+
+
+def fetch(session: Session, manifest: Message) -> Reassembly:
+    """All knots of a manifest; gaps are asked for after each burst. LinkError."""
+    reassembly = Reassembly(manifest)
+    sweep_id = manifest["sweep_id"]
+    for _ in range(TRIES):
+        for first, count in reassembly.gaps():
+            start, after = first, first + count
+            while start < after:
+                wanted = {"sweep_id": sweep_id, "first": start, "count": after - start}
+                reply = session.request("fetch", wanted, on_block=reassembly.take)
+                start += max(reply["count"], 1)
+        if not reassembly.gaps():
+            if reassembly.crc_ok():
+                return reassembly
+            reassembly.forget()
+        reassembly.ask_again()
+    raise LinkError(
+        f"fetching sweep {sweep_id.hex()[:8]}",
+        found=f"{len(reassembly.gaps())} gaps after {TRIES} bursts",
+        expected="all knots, with the CRC of the manifest",
+        next_step="use a shorter or better cable, then sweep again: the held sweep comes first",
+    )
 
 
 def unpack_records(data: bytes) -> RawKnots:

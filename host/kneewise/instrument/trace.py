@@ -124,7 +124,7 @@ class Trace:
 
     @property
     def label(self) -> str:
-        """"EMULATED" or "" - stands on the face of all that comes from this trace."""
+        """ "EMULATED" or "" - stands on the face of all that comes from this trace."""
         return "EMULATED" if self.emulated else ""
 
     @cached_property

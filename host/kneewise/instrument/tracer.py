@@ -20,26 +20,25 @@ from kneewise.errors import (
     DeviceFaultError,
     LinkError,
     OutcomeUnknownError,
-    RefusedError,
     TrustError,
-    UsageError,
 )
 from kneewise.instrument.assemble import assemble
-from kneewise.instrument.profile import Scales, read_record
-from kneewise.instrument.sweep import Reassembly
+from kneewise.instrument.profile import read_record
+from kneewise.instrument.status import Status, fault_of, status_of
+from kneewise.instrument.sweep import Reassembly, fetch
 from kneewise.instrument.trace import Trace
 from kneewise.link.clock import Probe, estimate
 from kneewise.link.port import Port, open_port
-from kneewise.link.refusals import hazard_text
 from kneewise.link.session import Session
 
 log = logging.getLogger(__name__)
 log.addHandler(logging.NullHandler())
 
-FETCH_TRIES = 12
 CLOCK_PROBES = 4
 BLEED_S = 60.0
-REJOIN_S = 15.0
+FAULT_BLEED_S = 5.0
+SAFE_TO_SHOW_V = 1.0  # in a fault, readings are waited for down to here
+REJOIN_S = 20.0
 SETTLE_S = 0.25
 
 T = TypeVar("T")
@@ -68,30 +67,17 @@ def _open_serial(target: str) -> Opened:
     return Opened(connect=lambda: open_port(target), close=lambda: None, rung="tracer")
 
 
-@dataclass(frozen=True, slots=True)
-class Status:
-    """State of the tracer and its live readings (V, A)."""
-
-    state: str
-    contact_closed: bool
-    bleed_engaged: bool
-    stop_loop_closed: bool
-    leads_reversed: bool
-    source_v: float
-    current_a: float
-    capacitor_v: float
-    held_sweep: str
-    """Id of a sweep that waits for its acknowledgement, or ""."""
-    device_us: int
-
-
 class Tracer:
     """One tracer, real or emulated. Open it with `Tracer.open`, close it or use `with`."""
 
     def __init__(self, opened: Opened, *, source_stands_alone: bool = False) -> None:
         self._opened = opened
-        self._session = Session(opened.connect())
         self._closed = False
+        try:
+            self._session = Session(opened.connect())
+        except BaseException:
+            opened.close()
+            raise
         try:
             self.device = self._session.hello()
             record = self._session.request("read_profile")["record"]
@@ -147,7 +133,7 @@ class Tracer:
 
     def status(self) -> Status:
         """State and live readings."""
-        return self._status(self._session.request("status"))
+        return status_of(self._session.request("status"), self.profile)
 
     def rest(self) -> Status:
         """Stop whatever is under way, wait until the capacitor is bled; the state then.
@@ -208,7 +194,8 @@ class Tracer:
 
     def held(self, *, keep: Keep | None = None) -> Trace | None:
         """Fetch a finished sweep that the device still holds, or None; see `sweep` for `keep`."""
-        status = self._wait_safe()
+        # A latched fault is no reason to lose what was measured before it.
+        status, _ = self._wait_bled()
         if not status.held_sweep:
             return None
         sweep_id = bytes.fromhex(status.held_sweep)
@@ -227,23 +214,23 @@ class Tracer:
             )
             session.wait_notice("charge_ended", fired["quiet_ms"] / 1000, session.beat)
 
-        boot_nonce = self.device["boot_nonce"]
-        try:
-            go()
-        except LinkError:
-            # The charge may be under way: whatever happened, the device knows.
-            self._rejoin_same(boot_nonce, sweep_id)
+        # The charge may be under way when the link goes: whatever happened, the device knows.
+        self._after_fire(sweep_id, go, lambda: None)
 
-    def _after_fire(self, sweep_id: bytes, action: Callable[[], T]) -> T:
+    def _after_fire(
+        self, sweep_id: bytes, action: Callable[[], T], again: Callable[[], T] | None = None
+    ) -> T:
+        """`action`; after a lost link `again`, or `action` once more, if the device is the same."""
         boot_nonce = self.device["boot_nonce"]
         try:
             return action()
         except LinkError:
-            self._rejoin_same(boot_nonce, sweep_id)
-            return action()
+            self._rejoin()
+            self._same_sweep(boot_nonce, sweep_id)
+            return (again or action)()
 
-    def _rejoin_same(self, boot_nonce: int, sweep_id: bytes) -> None:
-        self._rejoin()
+    def _same_sweep(self, boot_nonce: int, sweep_id: bytes) -> None:
+        """OutcomeUnknownError where the device was reset, or does not know of the sweep."""
         if self.device["boot_nonce"] != boot_nonce:
             cause = catalogue.RESET_CAUSES.get(self.device["reset_cause"], "unknown")
             raise OutcomeUnknownError(
@@ -254,7 +241,8 @@ class Tracer:
                 "find the cause, then sweep again",
             )
         status = self.status()
-        if status.state in ("bleeding", "safe", "fault") and status.held_sweep != sweep_id.hex():
+        if status.state != "charging" and status.held_sweep != sweep_id.hex():
+            self._session.abort()
             raise OutcomeUnknownError(
                 f"sweep {sweep_id.hex()[:8]}",
                 found="the device holds no such sweep: the fire did not arrive",
@@ -299,38 +287,14 @@ class Tracer:
             )
         progress("fetching")
         manifest = self._session.request("read_manifest")
-        reassembly = self._fetch(manifest, sweep_id)
+        reassembly = fetch(self._session, manifest)
         probes = [self._probe() for _ in range(CLOCK_PROBES)]
-        if fault is not None and not reassembly.count:
-            raise fault
-        return self._trace(manifest, reassembly, probes)
-
-    def _fetch(self, manifest: Message, sweep_id: bytes) -> Reassembly:
-        """All knots, gaps asked for after each burst."""
-        reassembly = Reassembly(manifest)
-        block_limit = self.device["window"]
-        for _ in range(FETCH_TRIES):
-            for first, count in reassembly.gaps():
-                start = first
-                while start < first + count:
-                    reply = self._session.request(
-                        "fetch",
-                        {"sweep_id": sweep_id, "first": start, "count": first + count - start},
-                        on_block=reassembly.take,
-                    )
-                    start += max(reply["count"], 1)
-            if not reassembly.gaps():
-                if reassembly.crc_ok():
-                    return reassembly
-                reassembly.forget()
-            reassembly.ask_again()
-        raise LinkError(
-            f"fetching sweep {sweep_id.hex()[:8]}",
-            found=f"{len(reassembly.gaps())} gaps after {FETCH_TRIES} bursts of up to "
-            f"{block_limit} blocks",
-            expected="all knots, with the CRC of the manifest",
-            next_step="use a shorter or better cable, then fetch the held sweep again",
-        )
+        try:
+            return self._trace(manifest, reassembly, probes)
+        except TrustError as error:
+            # Not a curve: held on, it would only stand in the way of the next sweep.
+            self._session.request("acknowledge", {"sweep_id": sweep_id})
+            raise (fault or error) from None
 
     def _trace(self, manifest: Message, reassembly: Reassembly, probes: list[Probe]) -> Trace:
         started, uncertainty_s = self._utc(manifest["conducting_us"], probes)
@@ -365,12 +329,19 @@ class Tracer:
 
     def _wait_bled(self) -> tuple[Status, DeviceFaultError | None]:
         port = self._session.port
-        end = port.clock() + BLEED_S
+        start = port.clock()
+        end = start + BLEED_S
         while True:
             message = self._session.request("status", deadline_s=5.0)
-            status = self._status(message)
+            status = status_of(message, self.profile)
             if status.state == "fault":
-                return status, self._fault(message)
+                fault = fault_of(message)
+                # The bleed works in a fault as well, unless the contact has welded.
+                falling = status.bleed_engaged and status.capacitor_v > SAFE_TO_SHOW_V
+                if not falling or port.clock() >= start + FAULT_BLEED_S:
+                    return status, fault
+                port.sleep(0.02)
+                continue
             if status.state not in ("bleeding", "charging"):
                 return status, None
             if port.clock() >= end:
@@ -383,40 +354,6 @@ class Tracer:
                 )
             port.sleep(0.02)
 
-    def _status(self, message: Message) -> Status:
-        values = message.values
-        scales = Scales.of(self.profile) if self.profile else None
-        conversions = values["conversions"]
-
-        def mean(name: str) -> float:
-            return float(values[name]) / conversions
-
-        return Status(
-            state=catalogue.STATES[values["state"]],
-            contact_closed=bool(values["contact_closed"]),
-            bleed_engaged=bool(values["bleed_engaged"]),
-            stop_loop_closed=bool(values["stop_loop_closed"]),
-            leads_reversed=bool(values["leads_reversed"]),
-            source_v=scales.voltage(mean("voltage_sum")) if scales else float("nan"),
-            current_a=scales.current(mean("current_sum")) if scales else float("nan"),
-            capacitor_v=scales.capacitor(mean("capacitor_sum")) if scales else float("nan"),
-            held_sweep=values["sweep_id"].hex() if values["held"] else "",
-            device_us=values["time_us"],
-        )
-
-    def _fault(self, message: Message) -> DeviceFaultError:
-        values = message.values
-        found, expected, step = hazard_text(
-            values["guard"], values["measured"], values["limit"], values["unit"]
-        )
-        return DeviceFaultError(
-            "the tracer has latched a fault",
-            found=found,
-            expected=expected,
-            next_step=f"{step}; then clear the fault",
-            guard=values["guard"],
-        )
-
     def _probe(self) -> Probe:
         clock = self._session.port.clock
         sent = clock()
@@ -428,4 +365,3 @@ class Tracer:
         now = datetime.now(UTC)
         ago_s = self._session.port.clock() + offset.offset_s - device_us / 1e6
         return (now - timedelta(seconds=ago_s)).isoformat(), offset.uncertainty_s
-

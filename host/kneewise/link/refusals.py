@@ -33,7 +33,9 @@ def quantity(value: int, unit: int) -> str:
 
 def hazard_text(guard: int, measured: int, limit: int, unit: int) -> tuple[str, str, str]:
     """(found, expected, next step) for a hazard's finding."""
-    name, wrong, step = HAZARDS.get(guard, (f"hazard H{guard}", "a guard spoke", "see device/README.md"))
+    name, wrong, step = HAZARDS.get(
+        guard, (f"hazard H{guard}", "a guard spoke", "see device/README.md")
+    )
     if catalogue.UNITS.get(unit, "") == "":
         return f"H{guard} {name}: {wrong}", "the guard satisfied", step
     return (

@@ -38,7 +38,9 @@ class Session:
     def __init__(self, port: Port, *, host_nonce: int | None = None) -> None:
         self.port = port
         if host_nonce is None:
-            host_nonce = int.from_bytes(bytes(random.SystemRandom().choices(LETTERS, k=4)), "little")
+            host_nonce = int.from_bytes(
+                bytes(random.SystemRandom().choices(LETTERS, k=4)), "little"
+            )
         self.host_nonce = host_nonce
         self.session = NO_SESSION
         self.sequence = 0
@@ -87,9 +89,7 @@ class Session:
         Raises RefusedError where the device refuses, LinkError where no reply comes in time.
         """
         self.sequence += 1
-        frame = framing.encode(
-            pack(name, self.session, self.sequence, values), toward_device=True
-        )
+        frame = framing.encode(pack(name, self.session, self.sequence, values), toward_device=True)
         return self._converse(name, self.sequence, frame, deadline_s, again_s, on_block)
 
     def abort(self) -> None:

@@ -9,7 +9,7 @@ import struct
 import sys
 import time
 
-from bus_requests import DEVICE_ID, REQUESTS, SEED
+from bus_requests import DEVICE_ID, REQUESTS
 from hal_emulated import EmulatedHal
 
 
@@ -67,4 +67,4 @@ bus = PipeBus(int(os.getenv("KNEEWISE_BUS")))
 
 
 def board():
-    return EmulatedHal(bus, StandardLink(), DEVICE_ID, SEED)
+    return EmulatedHal(bus, StandardLink(), DEVICE_ID, int(os.getenv("KNEEWISE_SEED")))

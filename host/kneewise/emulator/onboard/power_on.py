@@ -3,6 +3,7 @@ then `main.py` starts as on a board."""
 
 import os
 import sys
+
 import vfs
 
 vfs.umount("/")

@@ -1,0 +1,119 @@
+"""The link goes at the worst moments; the sweep must arrive whole or the gap be told."""
+
+import pytest
+from conftest import knots_alike
+
+from kneewise.errors import ArchiveError, KneewiseError, LinkError, OutcomeUnknownError
+from kneewise.instrument.sweep import Reassembly
+
+
+class Refuse:
+    """A `keep` that fails, as a full disk does: the sweep stays held."""
+
+    def __init__(self):
+        self.trace = None
+
+    def __call__(self, trace):
+        self.trace = trace
+        raise ArchiveError("storing", found="a full disk", expected="room", next_step="make room")
+
+
+def cut_and_join(emulated):
+    emulated.cut_link()
+    if hasattr(emulated, "join_link"):
+        emulated.join_link()
+
+
+@pytest.mark.parametrize("cut_at", [1, 3, 9])
+def test_cut_in_the_middle_of_the_transfer(cut_at, bench, rung, monkeypatch):
+    """A loose plug would cost the sweep, or worse, change it."""
+    one = bench(rung)
+    tracer = one.tracer()
+    refuse = Refuse()
+    with pytest.raises(ArchiveError):
+        tracer.sweep(keep=refuse)
+    undisturbed = refuse.trace
+
+    blocks = []
+    take = Reassembly.take
+
+    def cutting(reassembly, block):
+        take(reassembly, block)
+        blocks.append(block["first"])
+        if len(blocks) == cut_at:
+            cut_and_join(one.emulated)
+
+    monkeypatch.setattr(Reassembly, "take", cutting)
+    kept = []
+    held = tracer.held(keep=kept.append)
+    assert len(blocks) > 16
+    assert held is kept[0]
+    assert held.trace_id == undisturbed.trace_id
+    assert knots_alike(held, undisturbed)
+    assert (held.raw.time_us == undisturbed.raw.time_us).all()
+    assert held.integrity.manifest_crc_ok
+    assert tracer.status().held_sweep == ""
+
+
+def test_a_lost_block_is_asked_for_again(bench, rung, monkeypatch):
+    """One damaged frame would cost the whole sweep."""
+    take = Reassembly.take
+    seen = []
+
+    def losing(reassembly, block):
+        seen.append(block["first"])
+        if len(seen) not in (2, 3, 7):
+            take(reassembly, block)
+
+    monkeypatch.setattr(Reassembly, "take", losing)
+    trace = bench(rung).tracer().sweep()
+    assert trace.integrity.blocks_resent == 3
+    assert trace.integrity.manifest_crc_ok
+
+
+def test_another_host_finds_the_held_sweep(bench, rung):
+    """A laptop that dies after the sweep would take the sweep with it."""
+    one = bench(rung)
+    refuse = Refuse()
+    first = one.tracer()
+    with pytest.raises(ArchiveError):
+        first.sweep(keep=refuse)
+    first.close()
+    held = one.tracer().held()
+    assert knots_alike(held, refuse.trace)
+
+
+def test_a_sweep_held_is_not_overwritten(bench, rung):
+    one = bench(rung)
+    tracer = one.tracer()
+    with pytest.raises(ArchiveError):
+        tracer.sweep(keep=Refuse())
+    with pytest.raises(KneewiseError, match="another sweep is held"):
+        tracer.sweep()
+
+
+def test_reset_after_fire_is_outcome_unknown_and_never_a_second_fire(bench, rung, monkeypatch):
+    """After a reset the host cannot know whether the contact closed: it must not close it."""
+    one = bench(rung)
+    tracer = one.tracer()
+    wait = type(tracer._session).wait_notice
+
+    def reset_instead(session, *args):
+        one.emulated.unplug()
+        one.emulated.plug()
+        return wait(session, *args)
+
+    monkeypatch.setattr(type(tracer._session), "wait_notice", reset_instead)
+    closings = [entry for entry in one.board.record if entry[1:] == ("pulse", 1)]
+    with pytest.raises(OutcomeUnknownError, match="reset after it was told to fire"):
+        tracer.sweep()
+    closings = [entry for entry in one.board.record if entry[1:] == ("pulse", 1)]
+    assert len(closings) <= 1
+
+
+def test_without_power_the_port_is_lost(bench, rung):
+    one = bench(rung)
+    tracer = one.tracer()
+    one.emulated.unplug()
+    with pytest.raises(LinkError):
+        tracer.status()
