@@ -12,6 +12,7 @@ between pairs, so no intermediate reaches 2**30.
 
 import micropython
 from micropython import const
+
 from tracer import memory
 
 BINS = const(1024)
@@ -194,6 +195,8 @@ class Capture:
         self.skipped = 0
         self.overruns = 0
         self.full = False
+        self.voltage_x16 = 0
+        self.current_x16 = 0
 
     def drain(self, written):
         """Take in all pairs up to `written`, the ring's count since the start (mod 2**30)."""
@@ -221,17 +224,20 @@ class Capture:
                 self.state[S_BIN_PAIRS] *= 2
                 self.state[S_LEFT] = self.state[S_BIN_PAIRS]
 
-    def slice_means_x16(self):
-        """Means of V and I codes, in sixteenths, over what was folded since the last call."""
+    def slice_means(self):
+        """Write the means over what was folded since the last call, in sixteenths of a code,
+        into `voltage_x16` and `current_x16`; False where nothing was.
+        """
         state = self.state
         pairs = state[S_SLICE_PAIRS]
         if not pairs:
-            return None
-        means = (16 * state[S_SLICE_VOLTAGE] // pairs, 16 * state[S_SLICE_CURRENT] // pairs)
+            return False
+        self.voltage_x16 = 16 * state[S_SLICE_VOLTAGE] // pairs
+        self.current_x16 = 16 * state[S_SLICE_CURRENT] // pairs
         state[S_SLICE_VOLTAGE] = 0
         state[S_SLICE_CURRENT] = 0
         state[S_SLICE_PAIRS] = 0
-        return means
+        return True
 
     def bin_pairs(self):
         return self.state[S_BIN_PAIRS]

@@ -2,16 +2,22 @@
 
 Runs to its end in one call, inside the board's quiet: nothing is sent, nothing collected.
 Between slices it listens for abort alone. The make-and-break output is a bounded pulse that
-each slice earns anew: only when both the supervision tick and the ring have moved on.
+each slice earns anew: only when both the supervision tick and the ring have moved on, and only
+while it still runs: a contact that has opened by itself is not closed again.
+
+Between two slices nothing is allocated. So time is counted in pairs, by the ring: a time in
+microseconds since boot needs an object of its own from 18 minutes on.
 """
 
 from micropython import const
+
 from tracer import hal as board
 
 SLICE_US = const(500)
 READ_CONVERSIONS = const(256)
 DARK_MS = const(100)  # without conduction for so long, the source is dark
 FIRST_MS = const(2)  # before the first supervision tick can be asked for
+PULSE_MARGIN_US = const(100)  # more than the wave's last period and the call itself
 CONDUCTING_CODES = const(8)  # above the current zero: more than noise ever reaches
 END_SLICES = const(3)
 
@@ -90,14 +96,23 @@ class Charge:
             self._prepare(outputs)
             result.end_reason = self._capture(result, closed_limit_ms)
         finally:
-            # Whatever happened above: the contact opens, then the bleed engages.
+            self._end(result, outputs)
+        return result
+
+    def _end(self, result, outputs):
+        """Whatever happened before, and whatever happens here: contact open, bleed engaged."""
+        hal = self.hal
+        try:
             hal.pulse(0)
             result.conversions_lost = hal.capture_stop()
             hal.supervise_end()
             self._open(outputs)
             result.opened_us = hal.now_us()
+        except BaseException:
+            outputs.make_safe()
+            raise
+        finally:
             hal.quiet_end()
-        return result
 
     def _before(self, result):
         hal = self.hal
@@ -136,27 +151,34 @@ class Charge:
         capture.begin(zero_x16 // 16 + CONDUCTING_CODES)
         voltage_trip = profile.trip_code("voltage", profile["rated_mv"])
         current_trip = profile.trip_code("current", profile["rated_ma"])
-        limit_us = 1000 * min(closed_limit_ms, profile["closed_limit_ms"])
-        lost_us = 1000 * profile["heartbeat_lost_ms"]
+        pulse_us = profile["pulse_us"]
+        pairs_a_ms = 1000 // hal.PAIR_US
+        limit = pairs_a_ms * min(closed_limit_ms, profile["closed_limit_ms"])
+        lost = pairs_a_ms * profile["heartbeat_lost_ms"]
+        dark = pairs_a_ms * DARK_MS
+        unticked = pairs_a_ms * FIRST_MS
+        lapsed = (pulse_us - PULSE_MARGIN_US) // hal.PAIR_US
 
         result.capture_us = hal.capture_start()
         hal.supervise(voltage_trip, current_trip)
-        hal.pulse(profile["pulse_us"])
-        start_us = hal.now_us()
-        heard_us = start_us
+        self.ear.listen()
+        if self.ear.aborted:
+            return ABORTED
+        renewed = hal.capture_written()
+        hal.pulse(pulse_us)
+        heard = 0
         ticks = 0
-        ticked_us = start_us
+        ticked = 0
         written = 0
         while True:
             hal.wait_us(SLICE_US)
-            now = hal.now_us()
             arrived = hal.capture_written()
             capture.drain(arrived)
             trips = hal.trips()
             if trips:
                 return trip_reason(trips)
             if self.ear.listen():
-                heard_us = now
+                heard = arrived
             if self.ear.aborted:
                 return ABORTED
             if capture.overruns:
@@ -167,22 +189,25 @@ class Charge:
             visits = hal.supervision_ticks()
             if visits != ticks:
                 ticks = visits
-                ticked_us = now
-            elif now - ticked_us > 1000 * FIRST_MS:
+                ticked = arrived
+            elif arrived - ticked > unticked:
                 return SUPERVISION_LOST
-            if now - start_us >= limit_us or capture.full:
+            if arrived >= limit or capture.full:
                 return TIME_LIMIT
             if not capture.conducts():
-                if now - start_us >= 1000 * DARK_MS:
+                if arrived >= dark:
                     return NO_CURRENT
-            else:
-                means = capture.slice_means_x16()
-                if means is not None and rule.complete(means[0], means[1]):
+            elif capture.slice_means():
+                if rule.complete(capture.voltage_x16, capture.current_x16):
                     return COMPLETE
-            if now - heard_us >= lost_us:
+            if arrived - heard >= lost:
                 return HOST_LOST
             hal.watchdog(2000)
-            hal.pulse(profile["pulse_us"])
+            late = hal.capture_written()
+            if late - renewed >= lapsed:
+                return SUPERVISION_LOST
+            renewed = late
+            hal.pulse(pulse_us)
 
 
 def trip_reason(trips):

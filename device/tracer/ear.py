@@ -20,12 +20,16 @@ class Ear:
         self._store = bytearray(KEEP)
         self._count = 0
 
-    def expect(self, frame):
-        """Prepare for one charge. `frame`: the abort frame with its delimiter."""
+    def expect(self, frame, heard=b""):
+        """Prepare for one charge. `frame`: the abort frame with its delimiter; `heard`: what
+        came right behind the fire.
+        """
         self.aborted = False
         self._frame = frame
         self._matched = 0
         self._count = 0
+        for byte in heard:
+            self._take(byte)
 
     def listen(self):
         """Read what is there; True where the host was heard at all."""

@@ -65,4 +65,6 @@ class Held:
 
     def knots_between(self, first, count):
         """The records of `count` knots."""
-        return bytes(memoryview(self._buffers.records)[first * KNOT_BYTES : (first + count) * KNOT_BYTES])
+        return bytes(
+            memoryview(self._buffers.records)[first * KNOT_BYTES : (first + count) * KNOT_BYTES]
+        )

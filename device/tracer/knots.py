@@ -16,8 +16,16 @@ import micropython
 from micropython import const
 
 from kneewire.messages import KNOT_BYTES
-from tracer.capture import B_CURRENT, B_CURRENT_HIGH, B_CURRENT_LOW, B_VOLTAGE
-from tracer.capture import B_VOLTAGE_HIGH, B_VOLTAGE_LOW, SPLIT_BITS, WORDS
+from tracer.capture import (
+    B_CURRENT,
+    B_CURRENT_HIGH,
+    B_CURRENT_LOW,
+    B_VOLTAGE,
+    B_VOLTAGE_HIGH,
+    B_VOLTAGE_LOW,
+    SPLIT_BITS,
+    WORDS,
+)
 from tracer.memory import MAX_STRETCHES
 
 SIDE = const(4096)  # the plane's unit: V at the end, or the largest I
@@ -202,9 +210,7 @@ def place(capture, knots, zero_voltage_x16, zero_current_x16, conducting_us, pai
     last_pairs = capture.pairs() - (used - 1) * bin_pairs
     xs = buffers.xs
     ys = buffers.ys
-    plane(
-        capture.bins, used, bin_pairs, last_pairs, zero_voltage_x16, zero_current_x16, xs, ys
-    )
+    plane(capture.bins, used, bin_pairs, last_pairs, zero_voltage_x16, zero_current_x16, xs, ys)
     count = stretches(xs, ys, used, buffers.starts)
     weights(buffers, count)
     firsts = buffers.firsts

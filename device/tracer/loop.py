@@ -50,7 +50,7 @@ class Loop:
         """Run the accepted fire: charge, then hold what was measured."""
         service = self.service
         sequencer = self.sequencer
-        self.ear.expect(service.abort_frame())
+        self.ear.expect(service.abort_frame(), service.unheard)
         sequencer.event(states.EV_FIRE)
         charge = Charge(self.hal, self.profile, self.capture, self.ear)
         try:
@@ -63,20 +63,18 @@ class Loop:
             sequencer.event(states.EV_OPENED)
         else:
             sequencer.fault(finding)
-        service.send_message(
-            "charge_ended", 0, {"sweep_id": sweep_id, "end_reason": result.end_reason}
-        )
-        self.held.keep(
-            sweep_id, service.armed_knots, result, self.capture, self.hal, self.profile
-        )
+        service.charge_ended(sweep_id, result.end_reason)
+        self.held.keep(sweep_id, service.armed_knots, result, self.capture, self.hal, self.profile)
 
     def note_residual(self):
         """Once the bleed has done its work, the manifest says what it left."""
         manifest = self.held.manifest
-        sequencer = self.sequencer
-        if manifest and not manifest["residual_conversions"]:
-            if sequencer.state in (states.SAFE, states.FAULT):
-                manifest["residual_sum"], manifest["residual_conversions"] = sequencer.residual
+        state = self.sequencer.state
+        if not manifest or not self.sequencer.residual[1]:
+            return
+        # In a fault the bleed goes on, and its latest reading is the one to tell.
+        if state == states.FAULT or (state == states.SAFE and not manifest["residual_conversions"]):
+            manifest["residual_sum"], manifest["residual_conversions"] = self.sequencer.residual
 
 
 def finding_of(end_reason, profile):
@@ -90,4 +88,3 @@ def finding_of(end_reason, profile):
     if end_reason == SUPERVISION_LOST:
         return 7, 0, 0, UNIT_MS
     return None
-

@@ -10,6 +10,11 @@ MAX_CLOSED_LIMIT_MS = 120000
 MAX_PULSE_US = 20000
 MAX_TOKEN_LIFE_MS = 10000
 MAX_SAFE_MV = 60000
+MAX_START_PERMYRIAD = 500
+MAX_NEAR_ZERO_PERMYRIAD = 500
+MAX_BLEED_TIME_PERCENT = 400
+MAX_HEARTBEAT_LOST_MS = 10000
+MIN_DEAD_TIME_MS = 20  # a lower one: less time between contact and bleed is less safe
 
 
 class Profile:
@@ -55,7 +60,7 @@ class Profile:
         return min(code, 4095)
 
     def fault(self, device_id):
-        """"" where this profile may be used on that board, else what speaks against it."""
+        """ "" where this profile may be used on that board, else what speaks against it."""
         values = self.values
         if values["device_id"] != device_id:
             return "made for another board"
@@ -69,9 +74,15 @@ class Profile:
             ("pulse_us", MAX_PULSE_US),
             ("token_life_ms", MAX_TOKEN_LIFE_MS),
             ("safe_mv", MAX_SAFE_MV),
+            ("start_permyriad", MAX_START_PERMYRIAD),
+            ("near_zero_permyriad", MAX_NEAR_ZERO_PERMYRIAD),
+            ("bleed_time_percent", MAX_BLEED_TIME_PERCENT),
+            ("heartbeat_lost_ms", MAX_HEARTBEAT_LOST_MS),
         ):
             if values[name] > bound:
                 return name + " is above the bound in the firmware"
+        if values["dead_time_ms"] < MIN_DEAD_TIME_MS:
+            return "dead_time_ms is below the bound in the firmware"
         for name in (
             "voltage_nv_per_code",
             "current_na_per_code",
@@ -80,6 +91,7 @@ class Profile:
             "capacitance_nf",
             "bleed_mohm",
             "pulse_us",
+            "safe_mv",
         ):
             if values[name] == 0:
                 return name + " is zero"

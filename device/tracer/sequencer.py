@@ -11,6 +11,7 @@ looks like on the wire is `service.py`'s business; the charge itself is `charge.
 """
 
 from micropython import const
+
 from tracer import hal as board
 from tracer import interlocks
 
@@ -122,6 +123,7 @@ class Sequencer:
 
     def fault(self, finding):
         """Latch a finding. The bleed stays engaged, except where the contact has welded."""
+        begins = self.state not in (BLEEDING, FAULT)
         self.finding = finding
         self.event(EV_FAULT)
         self.make_safe()
@@ -129,6 +131,8 @@ class Sequencer:
             # A bleed across a live source would burn.
             self.hal.bleed(False)
             self.bleed_engaged = False
+        elif begins:
+            self._start_bleed()
 
     def clear(self):
         """Leave a fault, through bleeding, which looks anew at what is wrong."""
@@ -147,6 +151,9 @@ class Sequencer:
             if now >= self.armed_until_us:
                 self.disarm()
         elif self.state == BLEEDING:
+            self._look_at_bleed(now)
+        elif self.state == FAULT and now - self._looked_us >= 1000 * LOOK_MS:
+            self._looked_us = now
             self._look_at_bleed(now)
         elif self.state == SAFE and now - self._looked_us >= 1000 * LOOK_MS:
             self._looked_us = now
@@ -180,7 +187,8 @@ class Sequencer:
         limit_mv = self._limit_mv()
         capacitor_mv = self._capacitor_mv()
         if capacitor_mv <= limit_mv:
-            self.event(EV_BLED)
+            if self.state == BLEEDING:
+                self.event(EV_BLED)
             return
         finding = interlocks.bleed_progress(
             self.profile,
@@ -189,5 +197,6 @@ class Sequencer:
             (now - self._bleed_start_us) // 1000,
             limit_mv,
         )
-        if finding is not None:
+        # A contact may weld in the charge that ended in another fault.
+        if finding is not None and self.finding[0] not in (2, finding[0]):
             self.fault(finding)

@@ -55,7 +55,8 @@ class Service:
         self.armed_knots = 0
         self.armed_limit_ms = 0
         self.confirmed = False
-        self.fired = None  # sweep id of an accepted fire, until `app.py` has run the charge
+        self.fired = None  # sweep id of an accepted fire, until `loop.py` has run the charge
+        self.unheard = b""  # bytes behind an accepted fire, for the ear
         self._cut = False
         self._received_us = 0
         self._piece = bytearray(128)
@@ -71,10 +72,15 @@ class Service:
             self.feed(bytes(self._piece[:count]))
 
     def feed(self, data):
-        for item in self.decoder.feed(data):
-            if not isinstance(item, framing.Bad):
-                self._received_us = self.hal.now_us()
-                self.handle(item)
+        """Handle what `data` completes, up to an accepted fire; the rest waits in `unheard`."""
+        while data and self.fired is None:
+            end = data.find(framing.DELIMITER) + 1 or len(data)
+            for item in self.decoder.feed(data[:end]):
+                if not isinstance(item, framing.Bad):
+                    self._received_us = self.hal.now_us()
+                    self.handle(item)
+            data = data[end:]
+        self.unheard = data
 
     def send(self, frame):
         """Write one frame; False where the host has stopped reading and it was cut short."""
@@ -86,6 +92,10 @@ class Service:
 
     def send_message(self, name, sequence, values):
         return self.send(framing.encode(pack(name, self.session, sequence, values), False))
+
+    def charge_ended(self, sweep_id, end_reason):
+        """The one notice that is sent unasked."""
+        self.send_message("charge_ended", 0, {"sweep_id": sweep_id, "end_reason": end_reason})
 
     def abort_frame(self):
         """What the host of this session sends to abort, byte for byte."""
