@@ -12,6 +12,7 @@ import random
 from collections import deque
 from collections.abc import Callable
 from typing import Any
+from zlib import crc32
 
 from kneewire import PROTOCOL, catalogue, framing
 from kneewire.messages import NO_SESSION, Message, Refused, fingerprint, pack, unpack
@@ -22,7 +23,8 @@ from kneewise.link.refusals import refused
 log = logging.getLogger(__name__)
 log.addHandler(logging.NullHandler())
 
-PROMPT = ">>> "
+# A prompt shows itself, or echoes what it is sent: the sequence of a hello.
+PROMPT_SIGNS = (">>>", "MicroPython", "HiKne")
 RUN_BYTES = 4096  # far more than a frame: a whole traceback is to be shown
 HELLO_S = 3.0
 REQUEST_S = 2.0
@@ -32,16 +34,32 @@ HELLO_SEQUENCE = int.from_bytes(b"iKne", "little")
 LETTERS = b"abcdefghijklmnopqrstuvwxyzABCDEFGHIJKLMNOPQRSTUVWXYZ"
 
 
+def hello_body(host_nonce: int) -> bytes:
+    """The body of this host's hello."""
+    values = {
+        "major": PROTOCOL[0],
+        "minor": PROTOCOL[1],
+        "fingerprint": fingerprint(),
+        "host_nonce": host_nonce,
+    }
+    return pack("hello", NO_SESSION, HELLO_SEQUENCE, values)
+
+
+def quiet_nonce() -> int:
+    """A nonce of letters whose hello has no control byte in its CRC, where a prompt would act."""
+    while True:
+        nonce = int.from_bytes(bytes(random.SystemRandom().choices(LETTERS, k=4)), "little")
+        crc = crc32(hello_body(nonce)).to_bytes(4, "little")
+        if all(32 <= byte < 127 or byte >= 128 for byte in crc):
+            return nonce
+
+
 class Session:
     """Speaks with one device over one port; `hello` comes first."""
 
     def __init__(self, port: Port, *, host_nonce: int | None = None) -> None:
         self.port = port
-        if host_nonce is None:
-            host_nonce = int.from_bytes(
-                bytes(random.SystemRandom().choices(LETTERS, k=4)), "little"
-            )
-        self.host_nonce = host_nonce
+        self.host_nonce = quiet_nonce() if host_nonce is None else host_nonce
         self.session = NO_SESSION
         self.sequence = 0
         self.device: dict[str, Any] = {}
@@ -58,13 +76,7 @@ class Session:
 
     def hello(self, deadline_s: float = HELLO_S) -> dict[str, Any]:
         """Open or resume the session; the device's answer. ProtocolError, LinkError."""
-        values = {
-            "major": PROTOCOL[0],
-            "minor": PROTOCOL[1],
-            "fingerprint": fingerprint(),
-            "host_nonce": self.host_nonce,
-        }
-        body = pack("hello", NO_SESSION, HELLO_SEQUENCE, values)
+        body = hello_body(self.host_nonce)
         # "#" makes a prompt's line a comment; the delimiter ends it as a frame for the firmware.
         frame = b"#" + framing.DELIMITER + framing.encode(body, toward_device=True)
         reply = self._converse("hello", HELLO_SEQUENCE, frame, deadline_s, AGAIN_S)
@@ -195,7 +207,7 @@ class Session:
     def _silent(self, name: str, deadline_s: float) -> LinkError | ProtocolError:
         said = self._said()
         asked = f"asking {self.port.name} for {name}"
-        if PROMPT.strip() in said or "MicroPython" in said:
+        if any(sign in said for sign in PROMPT_SIGNS):
             return ProtocolError(
                 asked,
                 found="a MicroPython prompt",
