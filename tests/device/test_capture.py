@@ -1,0 +1,192 @@
+"""If these fail, pairs of a sweep are lost, counted twice or put in the wrong place."""
+
+import folding
+import numpy as np
+import pytest
+from folding import RING, THRESHOLD, capture, feed
+from hypothesis import example, given, settings
+from hypothesis import strategies as st
+
+from kneewise.emulator.firmware import firmware_module
+
+module = firmware_module("tracer.capture")
+
+# One pair may still wait in the ring, and a full ring counts as overtaken.
+SLICES = st.lists(st.integers(0, RING - 2), max_size=60)
+
+
+def sweep(seed: int, dark: int, bright: int) -> np.ndarray:
+    """Codes of every kind: dark ones below the threshold, then any."""
+    draw = np.random.default_rng(seed)
+    pairs = draw.integers(0, 4096, (dark + bright, 2))
+    pairs[:dark, 1] = draw.integers(0, THRESHOLD + 1, dark)
+    if bright:
+        pairs[dark:, 1] = np.maximum(pairs[dark:, 1], THRESHOLD + 1)
+    return pairs
+
+
+def check(filled, pairs: np.ndarray) -> None:
+    start = folding.first_folded(pairs)
+    if start is None:
+        assert not filled.conducts()
+        assert filled.pairs() == filled.used_bins() == 0
+        return
+    folded = pairs[start:]
+    assert filled.conducts()
+    assert filled.skipped == start
+    assert filled.pairs() == len(folded)
+    assert filled.bin_pairs() == folding.bin_pairs(len(folded))
+    assert folding.bins_of(filled).tolist() == folding.bins(folded).tolist()
+
+
+@settings(max_examples=150)
+@given(st.integers(0, 2**32 - 1), st.integers(0, 300), st.integers(0, 3000), SLICES)
+@example(1, 0, 9000, [1, 2, 3])
+def test_every_pair_is_in_exactly_one_bin_however_the_arrivals_are_cut(seed, dark, bright, slices):
+    pairs = sweep(seed, dark, bright)
+    filled = capture()
+    feed(filled, pairs, slices)
+    assert filled.overruns == 0
+    check(filled, pairs)
+
+
+@pytest.mark.parametrize("count", [1, 1023, 1024, 1025, 2047, 2048, 4095, 4096, 4097, 8192])
+def test_no_pair_goes_astray_where_the_bins_double(count):
+    pairs = sweep(count, 0, count + 1)
+    filled = capture()
+    feed(filled, pairs, [97] * 200)
+    assert filled.pairs() == count
+    assert filled.used_bins() == -(-count // filled.bin_pairs())
+    check(filled, pairs)
+
+
+def test_a_long_sweep_still_has_hundreds_of_bins():
+    pairs = sweep(3, 10, 20000)
+    filled = capture(ring_pairs=4096)
+    feed(filled, pairs, [125] * 200)
+    assert filled.bin_pairs() == 32
+    assert 512 <= filled.used_bins() <= 1024
+    check(filled, pairs)
+
+
+def test_the_count_of_written_pairs_may_wrap():
+    pairs = sweep(5, 20, 600)
+    filled = capture()
+    start = 2**30 - 300
+    filled.read = start
+    filled.state[module.S_AT] = start % RING
+    for number, pair in enumerate(pairs.tolist(), start=start):
+        place = 2 * (number % RING)
+        filled.ring[place], filled.ring[place + 1] = pair
+        if number % 100 == 99:
+            filled.drain((number + 1) % 2**30)
+    filled.drain((start + len(pairs)) % 2**30)
+    check(filled, pairs)
+
+
+@pytest.mark.parametrize("found", [False, True])
+def test_a_ring_that_was_overtaken_is_told_and_its_pairs_are_not_taken(found):
+    filled = capture()
+    pairs = sweep(7, 0, 40) if found else sweep(7, 40, 0)
+    feed(filled, pairs, [])
+    before = filled.pairs()
+    filled.drain(len(pairs) + RING)
+    assert filled.overruns == 1
+    assert filled.pairs() == before
+
+
+def test_a_ring_full_but_for_one_pair_is_no_overrun():
+    pairs = sweep(8, 0, RING - 1)
+    filled = capture()
+    feed(filled, pairs, [RING - 1])
+    assert filled.overruns == 0
+    check(filled, pairs)
+
+
+@pytest.mark.parametrize("closing", range(12))
+@pytest.mark.parametrize("border", range(1, 14))
+def test_conduction_is_found_at_the_same_pair_wherever_a_slice_ends(closing, border):
+    pairs = np.array([[2400, 40]] * closing + [[v, 1800] for v in range(20)])
+    filled = capture()
+    feed(filled, pairs, [border, 1, 1])
+    # The first bright pair may have had its voltage taken before the closing.
+    assert filled.skipped == closing + 1
+    assert filled.pairs() == 19
+    assert filled.bins[module.B_VOLTAGE] == 1
+    check(filled, pairs)
+
+
+def test_the_jump_at_the_closing_is_no_scatter():
+    pairs = np.array([[2400, 40]] * 9 + [[24, 1800]] * 30)
+    filled = capture()
+    feed(filled, pairs, [])
+    assert not folding.bins_of(filled)[:, 2:].any()
+
+
+@pytest.mark.parametrize(
+    ("currents", "conducts"),
+    [
+        ([THRESHOLD] * 9, False),
+        ([THRESHOLD + 1] * 2, True),
+        ([THRESHOLD + 1], False),
+        ([4095, 40] * 9, False),
+        ([40, 4095, 40, 40, 4095, 4095], True),
+    ],
+)
+def test_one_noisy_pair_is_no_conduction(currents, conducts):
+    pairs = np.array([[2400, current] for current in currents])
+    for size in (1, 2, RING - 1):
+        filled = capture()
+        feed(filled, pairs, [size] * 20)
+        assert filled.conducts() is conducts
+        check(filled, pairs)
+
+
+@settings(max_examples=25)
+@given(st.integers(0, 2**32 - 1), st.lists(st.integers(1, RING - 2), min_size=1, max_size=12))
+def test_the_end_rule_sees_the_means_of_each_slice(seed, slices):
+    pairs = sweep(seed, 0, sum(slices))
+    filled = capture()
+    taken = 0
+    for many in slices:
+        feed_from(filled, pairs, taken, taken + many)
+        part = pairs[max(taken, 1) : taken + many]
+        assert filled.slice_means() is bool(len(part))
+        if len(part):
+            means = (16 * part.sum(axis=0) // len(part)).tolist()
+            assert [filled.voltage_x16, filled.current_x16] == means
+        taken += many
+    assert filled.slice_means() is False
+
+
+def feed_from(filled, pairs: np.ndarray, start: int, stop: int) -> None:
+    for number in range(start, stop):
+        place = 2 * (number % RING)
+        filled.ring[place], filled.ring[place + 1] = pairs[number].tolist()
+    filled.drain(stop)
+
+
+def test_a_capture_that_can_hold_no_more_says_so_and_keeps_what_it_has():
+    filled = capture()
+    pairs = sweep(9, 0, 100)
+    feed(filled, pairs[:2], [])
+    filled.state[module.S_BIN_PAIRS] = module.MAX_BIN_PAIRS
+    filled.state[module.S_BIN] = module.BINS - 1
+    filled.state[module.S_LEFT] = 5
+    feed_from(filled, pairs, 2, 100)
+    assert filled.full
+    assert filled.pairs() == module.BINS * module.MAX_BIN_PAIRS
+    assert filled.used_bins() == module.BINS
+    feed_from(filled, pairs, 50, 100)
+    assert filled.pairs() == module.BINS * module.MAX_BIN_PAIRS
+
+
+def test_the_last_sweep_is_forgotten():
+    filled = capture()
+    feed(filled, sweep(1, 3, 3000), [])
+    filled.drain(10**6)
+    filled.begin(THRESHOLD)
+    assert (filled.overruns, filled.skipped, filled.pairs(), filled.full) == (0, 0, 0, False)
+    pairs = sweep(2, 3, 50)
+    feed(filled, pairs, [])
+    check(filled, pairs)

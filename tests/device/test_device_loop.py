@@ -1,0 +1,178 @@
+"""If these fail, the parts are each right and the tracer is not."""
+
+from __future__ import annotations
+
+import pytest
+from fake_board import FakeBoard
+from hosting import SWEEP_ID, Device, loop_module, refusal, service_module
+from test_service import WRONG_STATE
+
+from kneewise.emulator.firmware import firmware_module
+
+charge = firmware_module("tracer.charge")
+interlocks = firmware_module("tracer.interlocks")
+
+
+@pytest.fixture
+def device(board, tmp_path):
+    return Device(board, tmp_path)
+
+
+def test_what_a_charge_ends_with_latches_only_what_must_be_looked_at(reference):
+    latched = {
+        charge.STOP_LOOP: (12, 0, 0, interlocks.UNIT_NONE),
+        charge.OVER_VOLTAGE: (4, 60000, 60000, interlocks.UNIT_MV),
+        charge.OVER_CURRENT: (6, 20000, 20000, interlocks.UNIT_MA),
+        charge.SUPERVISION_LOST: (7, 0, 0, interlocks.UNIT_MS),
+    }
+    for reason in range(1, 11):
+        assert loop_module.finding_of(reason, reference) == latched.get(reason)
+
+
+def test_a_sweep_goes_round_from_safe_to_safe(device):
+    seen = [device.state()]
+    device.fire(device.arm()["token"])
+    for _ in range(40):
+        device.turns(ms=1)
+        if device.state() != seen[-1]:
+            seen.append(device.state())
+    assert seen == ["safe", "bleeding", "safe"]
+    assert device.board.closings == 1
+    assert device.board.watchdog_ms == 0
+
+
+def test_the_manifest_says_what_the_bleed_left_once_it_is_done(device):
+    device.sweep()
+    assert device.ask("read_manifest")["residual_conversions"] == 0
+    device.turns(lambda: device.state() == "safe")
+    manifest = device.ask("read_manifest")
+    assert manifest["residual_conversions"] == 64
+    assert 24 <= manifest["residual_sum"] / 64 <= 24 + 13
+    # What is read later, with the capacitor creeping, is not this sweep's.
+    device.board.capacitor_v = 0.19
+    device.turns(ms=300)
+    assert device.ask("read_manifest")["residual_sum"] == manifest["residual_sum"]
+
+
+def test_after_a_fault_the_manifest_never_tells_the_reading_from_before_the_charge(device):
+    device.turns(ms=300)
+    device.board.bleed_broken = True
+    device.board.after_closing(3000, lambda: setattr(device.board, "loop_closed", False))
+    device.sweep()
+    assert device.state() == "fault"
+    volt = device.board.capacitor_v
+    assert volt > 20.0
+    device.turns(ms=200)
+    manifest = device.ask("read_manifest")
+    assert manifest["residual_conversions"] == 64
+    assert manifest["residual_sum"] / 64 == pytest.approx(24 + volt / 0.0165, abs=1)
+
+
+@pytest.mark.parametrize("split", range(1, 14))
+def test_an_abort_right_behind_the_fire_closes_nothing(device, split):
+    token = device.arm()["token"]
+    fire = device.frame("fire", {"token": token, "sweep_id": SWEEP_ID})
+    device.board.incoming += fire + b"\0" + device.abort()[:split]
+    device.board.at(1000, lambda: device.board.incoming.extend(device.abort()[split:]))
+    device.turns(ms=1)
+    answers = device.heard()
+    assert [answer.name for answer in answers[:2]] == ["fire_reply", "charge_ended"]
+    assert answers[1]["end_reason"] == charge.ABORTED
+    assert device.board.closings == 0
+    # The abort is answered too, once there is quiet no longer.
+    assert answers[2].name == "abort_reply"
+    device.turns(lambda: device.state() == "safe")
+    assert device.state() == "safe"
+
+
+@pytest.mark.parametrize("name", ["hello", "arm", "prompt", "status"])
+def test_a_request_right_behind_the_fire_is_answered_after_the_charge(device, name):
+    token = device.arm()["token"]
+    values = {
+        "hello": {"major": 0, "minor": 1, "fingerprint": 5, "host_nonce": 99},
+        "arm": {"knots": 16, "closed_limit_ms": 1, "confirmed": 1},
+    }.get(name)
+    fire = device.frame("fire", {"token": token, "sweep_id": SWEEP_ID})
+    device.board.incoming += fire + device.frame(name, values)
+    try:
+        device.turns(ms=1)
+    except service_module.Leave:
+        assert name == "prompt"
+    fired, ended, answer = device.heard()
+    assert (fired.name, ended["end_reason"]) == ("fire_reply", charge.COMPLETE)
+    assert device.board.closings == 1
+    assert device.loop.held.count == 32
+    if name == "arm":
+        assert refusal(answer) == WRONG_STATE
+
+
+def test_what_was_asked_during_the_charge_is_answered_after_it(device):
+    device.board.after_closing(3000, lambda: device.board.incoming.extend(device.frame("status")))
+    _, ended, answer = device.sweep()
+    assert ended["end_reason"] == charge.COMPLETE
+    assert answer.name == "status_reply"
+
+
+def test_an_aborted_sweep_is_held_as_one(device):
+    device.board.after_closing(3000, lambda: device.board.incoming.extend(b"\0" + device.abort()))
+    _, ended, answer = device.sweep()
+    assert ended["end_reason"] == charge.ABORTED
+    assert answer.name == "abort_reply"
+    assert device.ask("read_manifest")["end_reason"] == charge.ABORTED
+
+
+def test_a_dark_source_gives_a_sweep_without_knots(device):
+    device.board.source_a = 0.0
+    _, ended = device.sweep()
+    assert ended["end_reason"] == charge.NO_CURRENT
+    manifest = device.ask("read_manifest")
+    assert (manifest["knots"], manifest["pairs"]) == (0, 0)
+
+
+def test_leaving_to_the_prompt_leaves_a_safe_board_without_watchdog(device):
+    device.sweep()
+    device.board.incoming += device.frame("prompt")
+    device.loop.run()
+    assert (device.board.relay_closed, device.board.bleed_engaged) == (False, True)
+    assert device.board.watchdog_ms == 0
+
+
+@pytest.mark.parametrize("kind", [KeyboardInterrupt, OSError, SystemExit])
+@pytest.mark.parametrize("broken", ["wait_us", "capture_written", "trips", "link_read"])
+def test_an_error_in_mid_charge_leaves_the_loop_with_a_safe_board(device, kind, broken):
+    board = device.board
+
+    def breaks(*values):
+        raise kind("broken")
+
+    device.fire(device.arm()["token"])
+    board.after_closing(3000, lambda: setattr(board, broken, breaks))
+    with pytest.raises(kind):
+        device.loop.run()
+    assert board.closings == 1
+    assert not board.conducting
+    assert (board.relay_closed, board.bleed_engaged) == (False, True)
+    assert board.watchdog_ms == 0
+
+
+def test_one_failed_attempt_to_make_safe_is_followed_by_another(device):
+    board = device.board
+    real = FakeBoard.safe
+    failures = [OSError("once"), OSError("twice")]
+
+    def safe():
+        if failures:
+            raise failures.pop()
+        real(board)
+
+    def pulse(us):
+        if us == 0:
+            raise OSError("pulse")
+        FakeBoard.pulse(board, us)
+
+    device.fire(device.arm()["token"])
+    board.safe, board.pulse = safe, pulse
+    with pytest.raises(OSError, match=r"once|twice|pulse"):
+        device.loop.run()
+    assert (board.relay_closed, board.bleed_engaged) == (False, True)
+    assert not board.conducting

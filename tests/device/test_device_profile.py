@@ -1,0 +1,219 @@
+"""If these fail, a tracer runs with limits that are not the ones it was built for."""
+
+from __future__ import annotations
+
+from math import log
+
+import pytest
+from fake_board import DEVICE_ID, REFERENCE, profile, record
+from hypothesis import assume, given, settings
+from hypothesis import strategies as st
+
+from kneewire.profile_record import seal
+from kneewire.seam import crc32
+from kneewise.emulator.firmware import firmware_module
+
+module = firmware_module("tracer.profile")
+
+
+def test_the_reference_profile_is_accepted(reference):
+    assert reference.fault(DEVICE_ID) == ""
+    assert reference.crc == crc32(record())
+
+
+@settings(max_examples=200)
+@given(st.integers(0, 64 * 4095), st.integers(0, 65535), st.integers(1, 2 * 10**7))
+def test_codes_become_millivolts_and_milliamperes(code_sum, zero_x16, nano):
+    made = profile(
+        voltage_nv_per_code=nano,
+        voltage_zero_x16=zero_x16,
+        current_na_per_code=nano,
+        current_zero_x16=zero_x16,
+        capacitor_nv_per_code=nano,
+        capacitor_zero_x16=zero_x16,
+    )
+    true = (code_sum / 64 - zero_x16 / 16) * nano / 1e6
+    for found in (
+        made.millivolts("voltage", code_sum, 64),
+        made.millivolts("capacitor", code_sum, 64),
+        made.milliamperes(code_sum, 64),
+    ):
+        assert true - 1.01 <= found <= true + 0.01
+
+
+@pytest.mark.parametrize("channel", ["voltage", "current"])
+@settings(max_examples=200)
+@given(st.integers(0, 10**6), st.integers(10**5, 10**8), st.integers(0, 4095 * 16))
+def test_a_trip_code_is_never_above_the_rating_and_never_beyond_the_rail(
+    channel, milli, nano, zero_x16
+):
+    scale = "voltage_nv_per_code" if channel == "voltage" else "current_na_per_code"
+    made = profile(**{scale: nano, channel + "_zero_x16": zero_x16})
+    code = made.trip_code(channel, milli)
+    assert code <= 4095
+    exact = milli * 1e6 / nano + zero_x16 / 16
+    assert code <= exact + 1e-6
+    assert code >= min(exact - 2, 4095)
+
+
+def test_trip_codes_of_the_reference_are_those_of_its_ratings(reference):
+    assert reference.trip_code("voltage", 60000) == 24 + 3636
+    assert reference.trip_code("current", 20000) == 40 + 3846
+    assert reference.trip_code("voltage", 67000) == 24 + 4060
+    assert reference.trip_code("voltage", 70000) == 4095
+
+
+@settings(max_examples=500)
+@given(
+    st.integers(50, 60000),
+    st.integers(50, 60000),
+    st.integers(1000, 10**7),
+    st.integers(10**5, 47 * 10**6),
+)
+def test_the_predicted_bleed_is_rc_ln_short_by_a_sixteenth_of_rc_at_most(a, b, mohm, nf):
+    from_mv, to_mv = max(a, b), min(a, b)
+    made = profile(bleed_mohm=mohm, capacitance_nf=nf)
+    tau_ms = mohm * 1e-3 * nf * 1e-9 * 1e3
+    true_ms = tau_ms * log(from_mv / to_mv)
+    found = made.predicted_bleed_ms(from_mv, to_mv)
+    # The chord of the logarithm lies below it by 0.0597; halving whole millivolts costs 2 / V more.
+    assert true_ms - tau_ms * (0.0597 + 2 / to_mv + 0.002) - 2 <= found <= true_ms + 1
+
+
+def test_with_its_margin_a_good_bleed_is_never_called_slow():
+    made = profile()
+    tau_ms = 100 * 2200e-6 * 1e3
+    for from_mv in range(400, 60000, 7):
+        true_ms = tau_ms * log(from_mv / 200)
+        allowed = made.predicted_bleed_ms(from_mv, 200) * made["bleed_time_percent"] // 100
+        assert allowed > true_ms
+
+
+@pytest.mark.parametrize("from_mv", [-40, 0, 49, 50])
+def test_an_empty_capacitor_needs_no_time(reference, from_mv):
+    assert reference.predicted_bleed_ms(from_mv, 50) == 0
+
+
+# -- what speaks against a profile -------------------------------------------------------------
+
+
+def test_a_profile_of_another_board_is_refused(reference):
+    assert reference.fault(b"\x01" * 8) == "made for another board"
+
+
+@pytest.mark.parametrize("change", [{"hazard_class": 2}, {"rated_mv": 60001}, {"hazard_class": 0}])
+def test_class_b_is_refused(change):
+    assert profile(**change).fault(DEVICE_ID) == "class B is not supported by this firmware"
+
+
+def test_a_bare_relay_is_refused():
+    assert profile(contact=2).fault(DEVICE_ID) == "contact kind is not supported by this firmware"
+
+
+UPPER = {
+    "rated_ma": 20000,
+    "closed_limit_ms": 120_000,
+    "pulse_us": 20_000,
+    "token_life_ms": 10_000,
+    "safe_mv": 60_000,
+    "start_permyriad": 500,
+    "near_zero_permyriad": 500,
+    "bleed_time_percent": 400,
+    "heartbeat_lost_ms": 10_000,
+}
+
+
+@pytest.mark.parametrize("name", UPPER)
+def test_no_profile_can_ask_for_more_than_the_firmware_allows(name):
+    assert profile(**{name: UPPER[name]}).fault(DEVICE_ID) == ""
+    wrong = profile(**{name: UPPER[name] + 1}).fault(DEVICE_ID)
+    assert wrong == name + " is above the bound in the firmware"
+
+
+def test_no_profile_can_take_the_dead_time_away():
+    assert profile(dead_time_ms=20).fault(DEVICE_ID) == ""
+    wrong = profile(dead_time_ms=19).fault(DEVICE_ID)
+    assert wrong == "dead_time_ms is below the bound in the firmware"
+
+
+@pytest.mark.parametrize(
+    "name",
+    [
+        "voltage_nv_per_code",
+        "current_na_per_code",
+        "capacitor_nv_per_code",
+        "rated_ma",
+        "capacitance_nf",
+        "bleed_mohm",
+        "pulse_us",
+        "safe_mv",
+    ],
+)
+def test_a_zero_that_would_make_nonsense_is_refused(name):
+    assert profile(**{name: 0}).fault(DEVICE_ID) == name + " is zero"
+
+
+NUMBERS = [name for name, value in REFERENCE.items() if isinstance(value, int) and name != "format"]
+
+
+@settings(max_examples=300)
+@given(st.dictionaries(st.sampled_from(NUMBERS), st.integers(0, 2**32 - 1), max_size=6))
+def test_whatever_a_profile_says_an_accepted_one_stays_within_the_bounds(changes):
+    try:
+        made = profile(**changes)
+    except ValueError:
+        assume(False)
+    if made.fault(DEVICE_ID) == "":
+        assert all(made[name] <= bound for name, bound in UPPER.items())
+        assert made["rated_mv"] <= 60000
+        assert made["dead_time_ms"] >= 20
+
+
+# -- from the file -----------------------------------------------------------------------------
+
+
+def test_a_stored_profile_is_read_back(tmp_path):
+    path = tmp_path / "profile.bin"
+    path.write_bytes(seal(record()))
+    found, wrong = module.load(str(path), DEVICE_ID)
+    assert wrong == ""
+    assert found.values == REFERENCE
+
+
+def test_without_a_file_there_is_no_profile(tmp_path):
+    assert module.load(str(tmp_path / "none"), DEVICE_ID) == (None, "no profile is stored")
+
+
+@pytest.mark.parametrize("damage", [b"", b"abc", seal(record())[:-1], record()])
+def test_a_damaged_file_is_told_as_one(tmp_path, damage):
+    path = tmp_path / "profile.bin"
+    path.write_bytes(damage)
+    found, wrong = module.load(str(path), DEVICE_ID)
+    assert found is None
+    assert wrong.startswith("the stored profile is damaged (")
+
+
+@given(st.data())
+@settings(max_examples=200)
+def test_one_flipped_bit_anywhere_is_noticed(tmp_path_factory, data):
+    whole = bytearray(seal(record()))
+    bit = data.draw(st.integers(0, 8 * len(whole) - 1))
+    whole[bit // 8] ^= 1 << bit % 8
+    path = tmp_path_factory.mktemp("profile") / "profile.bin"
+    path.write_bytes(whole)
+    assert module.load(str(path), DEVICE_ID)[0] is None
+
+
+def test_a_record_of_another_format_is_damaged(tmp_path):
+    path = tmp_path / "profile.bin"
+    path.write_bytes(seal(record(format=2)))
+    wrong = module.load(str(path), DEVICE_ID)[1]
+    assert wrong == "the stored profile is damaged (format 2)"
+
+
+def test_a_refused_profile_is_no_profile(tmp_path):
+    path = tmp_path / "profile.bin"
+    path.write_bytes(seal(record(contact=2)))
+    found, wrong = module.load(str(path), DEVICE_ID)
+    assert found is None
+    assert wrong == "contact kind is not supported by this firmware"
