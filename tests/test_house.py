@@ -42,7 +42,8 @@ def test_ci_runs_the_readme_s_test_command():
     command = re.search(r"<!-- test command -->\n```\n(.+)\n```", readme).group(1)
     assert command.endswith("pytest")
     script = (ROOT / ".ci" / "run").read_text(encoding="utf-8")
-    assert "README.md" in script
+    found = re.search(r"^command=.+$", script, re.MULTILINE).group(0)
+    assert run("sh", "-c", f'{found}; echo "$command"').stdout == command + "\n"
     assert command in (ROOT / "DEVELOPERS.md").read_text(encoding="utf-8")
 
 

@@ -14,6 +14,7 @@ from micropython import const
 from tracer import hal as board
 
 SLICE_US = const(500)
+SLICE_PAIRS = const(125)
 READ_CONVERSIONS = const(256)
 DARK_MS = const(100)  # without conduction for so long, the source is dark
 FIRST_MS = const(2)  # before the first supervision tick can be asked for
@@ -45,6 +46,7 @@ class Result:
         self.capture_us = 0
         self.opened_us = 0
         self.conversions_lost = False
+        self.pairs_written = 0
 
 
 class EndRule:
@@ -97,6 +99,8 @@ class Charge:
             result.end_reason = self._capture(result, closed_limit_ms)
         finally:
             self._end(result, outputs)
+        # Only now: no contact waits for it.
+        self.capture.finish(result.pairs_written)
         return result
 
     def _end(self, result, outputs):
@@ -105,6 +109,7 @@ class Charge:
         try:
             hal.pulse(0)
             result.conversions_lost = hal.capture_stop()
+            result.pairs_written = hal.capture_written()
             hal.supervise_end()
             self._open(outputs)
             result.opened_us = hal.now_us()
@@ -171,7 +176,10 @@ class Charge:
         ticked = 0
         written = 0
         while True:
-            hal.wait_us(SLICE_US)
+            # What a merge has left waiting is folded first; waiting can wait.
+            waited = capture.behind() < SLICE_PAIRS
+            if waited:
+                hal.wait_us(SLICE_US)
             arrived = hal.capture_written()
             capture.drain(arrived)
             trips = hal.trips()
@@ -183,7 +191,7 @@ class Charge:
                 return ABORTED
             if capture.overruns:
                 return RING_OVERRUN
-            if arrived == written:
+            if waited and arrived == written:
                 return SUPERVISION_LOST
             written = arrived
             visits = hal.supervision_ticks()
@@ -197,7 +205,7 @@ class Charge:
             if not capture.conducts():
                 if arrived >= dark:
                     return NO_CURRENT
-            elif capture.slice_means():
+            elif capture.recent_means():
                 if rule.complete(capture.voltage_x16, capture.current_x16):
                     return COMPLETE
             if arrived - heard >= lost:

@@ -36,7 +36,11 @@ class Hal:
     RING_PAIRS = 4096  # capacity of `ring`, a power of two
 
     ring = None
-    """Buffer of RING_PAIRS pairs of u16 codes, voltage first, aligned to its size."""
+    """Buffer of RING_PAIRS words, voltage in the low half and current in the high half of each,
+    aligned to its size."""
+
+    fold_units = None
+    """A faster stand-in for `fold_units` of capture.py, where the board has one."""
 
     # -- identity --------------------------------------------------------------------
 
@@ -97,7 +101,7 @@ class Hal:
         raise NotImplementedError
 
     def capture_written(self):
-        """Pairs written since `capture_start`, modulo 2**30."""
+        """Pairs written since `capture_start`, modulo 2**30; also once the capture has stopped."""
         raise NotImplementedError
 
     def capture_stop(self):

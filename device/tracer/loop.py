@@ -21,7 +21,7 @@ class Loop:
         self.profile, self.profile_fault = load(profile_file, hal.device_id())
         self.sequencer = Sequencer(hal, self.profile)
         self.held = Held(buffers)
-        self.capture = Capture(hal.ring, hal.RING_PAIRS, buffers)
+        self.capture = Capture(hal.ring, hal.RING_PAIRS, buffers, hal.fold_units)
         self.ear = Ear(hal)
         self.service = Service(hal, self.profile, self.sequencer, self.held)
 

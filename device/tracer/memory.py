@@ -6,7 +6,9 @@ from micropython import const
 
 BINS = const(1024)
 BIN_WORDS = const(6)
-STATE_WORDS = const(12)
+CONTROL_WORDS = const(10)
+UNIT_PAIRS = const(16)
+SCRATCH_UNITS = const(16)
 MAX_KNOTS = const(512)
 RECORD_BYTES = const(40)  # a knot record; compared with the catalogue in held.py
 
@@ -18,7 +20,9 @@ class Buffers:
     def __init__(self):
         # From a range, because its length is known: the memory is taken once, not grown.
         self.bins = array("I", range(BIN_WORDS * BINS))
-        self.state = array("I", range(STATE_WORDS))
+        self.control = array("I", range(CONTROL_WORDS))
+        self.scratch = array("I", range(BIN_WORDS * SCRATCH_UNITS))
+        self.wrapped = array("I", range(UNIT_PAIRS))
         self.records = bytearray(MAX_KNOTS * RECORD_BYTES)
         # For placing the knots (`knots.py`).
         self.xs = array("i", range(BINS))

@@ -46,7 +46,7 @@ class FakeBoard(hal.Hal):
     """See above. Set `source_v`, `capacitor_v`, ... at will; `calls` holds what was called."""
 
     def __init__(self, *, capacitance_f: float = 220e-6) -> None:
-        self.ring = array("H", bytes(4 * self.RING_PAIRS))
+        self.ring = array("I", bytes(4 * self.RING_PAIRS))
         self.calls: list[tuple[str, tuple[Any, ...], int]] = []
         self.time_us = 1_000_000
         self.source_v = 40.0
@@ -63,6 +63,7 @@ class FakeBoard(hal.Hal):
         self.bleed_engaged = True
         self.pulse_until_us = 0
         self.pairs: int | None = None
+        self.stopped_pairs = 0
         self.pairs_stop_at: int | None = None
         self.overtaken = 0
         self.conversions_lost = False
@@ -144,9 +145,9 @@ class FakeBoard(hal.Hal):
             if self.conducting:
                 volt = toward + (start - toward) * exp(-k * PAIR_US / tau_us)
                 ampere = self.source_a * (1.0 - volt / self.source_v)
-            place = 2 * (self.pairs % self.RING_PAIRS)
-            self.ring[place] = self._code(volt, V_PER_CODE, V_ZERO)
-            self.ring[place + 1] = self._code(ampere, A_PER_CODE, A_ZERO)
+            low = self._code(volt, V_PER_CODE, V_ZERO)
+            high = self._code(ampere, A_PER_CODE, A_ZERO)
+            self.ring[self.pairs % self.RING_PAIRS] = low | high << 16
             self.pairs += 1
 
     def _code(self, value: float, per_code: float, zero: int) -> int:
@@ -221,11 +222,11 @@ class FakeBoard(hal.Hal):
 
     def capture_written(self) -> int:
         self._note("capture_written")
-        assert self.pairs is not None
-        return self.pairs + self.overtaken
+        return (self.stopped_pairs if self.pairs is None else self.pairs) + self.overtaken
 
     def capture_stop(self) -> bool:
         self._note("capture_stop")
+        self.stopped_pairs = self.pairs or 0
         self.pairs = None
         return self.conversions_lost
 
@@ -248,10 +249,10 @@ class FakeBoard(hal.Hal):
         if not self.loop_closed:
             self.seen_trips |= hal.TRIP_STOP_LOOP
         if self.pairs:
-            place = 2 * ((self.pairs - 1) % self.RING_PAIRS)
-            if self.ring[place] >= self.trip_codes[0]:
+            newest = self.ring[(self.pairs - 1) % self.RING_PAIRS]
+            if newest & 0xFFFF >= self.trip_codes[0]:
                 self.seen_trips |= hal.TRIP_OVER_VOLTAGE
-            if self.ring[place + 1] >= self.trip_codes[1]:
+            if newest >> 16 >= self.trip_codes[1]:
                 self.seen_trips |= hal.TRIP_OVER_CURRENT
         return self.seen_trips
 

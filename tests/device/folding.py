@@ -19,7 +19,7 @@ CONDUCTING_US = 2**33 + 12345
 
 
 def capture(ring_pairs: int = RING, threshold: int = THRESHOLD) -> Any:
-    made = Capture(array("H", bytes(4 * ring_pairs)), ring_pairs, Buffers())
+    made = Capture(array("I", bytes(4 * ring_pairs)), ring_pairs, Buffers())
     made.begin(threshold)
     return made
 
@@ -29,13 +29,20 @@ def feed(into: Any, pairs: np.ndarray, slices: Iterable[int]) -> None:
     written = 0
     cuts = iter(slices)
     while written < len(pairs):
-        many = min(next(cuts, into.ring_pairs - 2), len(pairs) - written)
+        many = min(next(cuts, into.ring_pairs - 17), len(pairs) - written)
         for v, i in pairs[written : written + many].tolist():
-            place = 2 * (written % into.ring_pairs)
-            into.ring[place] = v
-            into.ring[place + 1] = i
+            into.ring[written % into.ring_pairs] = v | i << 16
             written += 1
         into.drain(written)
+        # A call is bounded in time: a charge calls again before it waits.
+        while into.behind() >= 16 and not into.full:
+            into.drain(written)
+
+
+def finished(into: Any, pairs: np.ndarray) -> Any:
+    """The capture, once the ring stands still."""
+    into.finish(len(pairs))
+    return into
 
 
 def first_folded(pairs: np.ndarray, threshold: int = THRESHOLD) -> int | None:
@@ -81,11 +88,9 @@ def filled(pairs: np.ndarray) -> Any:
     for number, (v, i, sv, si) in enumerate(rows.tolist()):
         split = (v, i, sv & (1 << 29) - 1, sv >> 29, si & (1 << 29) - 1, si >> 29)
         made.bins[6 * number : 6 * number + 6] = array("I", split)
-    module = firmware_module("tracer.capture")
-    made.state[module.S_FOUND] = 1
-    made.state[module.S_BIN_PAIRS] = size
-    made.state[module.S_BIN] = len(pairs) // size
-    made.state[module.S_LEFT] = size - len(pairs) % size
+    made.control[firmware_module("tracer.capture").C_FOUND] = 1
+    made._bin_pairs = size
+    made._bin, made._held = divmod(len(pairs), size)
     return made
 
 

@@ -11,8 +11,8 @@ from kneewise.emulator.firmware import firmware_module
 
 module = firmware_module("tracer.capture")
 
-# One pair may still wait in the ring, and a full ring counts as overtaken.
-SLICES = st.lists(st.integers(0, RING - 2), max_size=60)
+# Part of a unit may still wait in the ring, and a full ring counts as overtaken.
+SLICES = st.lists(st.integers(0, RING - 17), max_size=60)
 
 
 def sweep(seed: int, dark: int, bright: int) -> np.ndarray:
@@ -26,6 +26,11 @@ def sweep(seed: int, dark: int, bright: int) -> np.ndarray:
 
 
 def check(filled, pairs: np.ndarray) -> None:
+    folding.finished(filled, pairs)
+    compare(filled, pairs)
+
+
+def compare(filled, pairs: np.ndarray) -> None:
     start = folding.first_folded(pairs)
     if start is None:
         assert not filled.conducts()
@@ -55,6 +60,7 @@ def test_no_pair_goes_astray_where_the_bins_double(count):
     pairs = sweep(count, 0, count + 1)
     filled = capture()
     feed(filled, pairs, [97] * 200)
+    folding.finished(filled, pairs)
     assert filled.pairs() == count
     assert filled.used_bins() == -(-count // filled.bin_pairs())
     check(filled, pairs)
@@ -64,6 +70,7 @@ def test_a_long_sweep_still_has_hundreds_of_bins():
     pairs = sweep(3, 10, 20000)
     filled = capture(ring_pairs=4096)
     feed(filled, pairs, [125] * 200)
+    folding.finished(filled, pairs)
     assert filled.bin_pairs() == 32
     assert 512 <= filled.used_bins() <= 1024
     check(filled, pairs)
@@ -73,15 +80,15 @@ def test_the_count_of_written_pairs_may_wrap():
     pairs = sweep(5, 20, 600)
     filled = capture()
     start = 2**30 - 300
-    filled.read = start
-    filled.state[module.S_AT] = start % RING
-    for number, pair in enumerate(pairs.tolist(), start=start):
-        place = 2 * (number % RING)
-        filled.ring[place], filled.ring[place + 1] = pair
+    filled.read = filled.written = start
+    filled.control[module.C_AT] = start % RING
+    for number, (v, i) in enumerate(pairs.tolist(), start=start):
+        filled.ring[number % RING] = v | i << 16
         if number % 100 == 99:
             filled.drain((number + 1) % 2**30)
     filled.drain((start + len(pairs)) % 2**30)
-    check(filled, pairs)
+    filled.finish((start + len(pairs)) % 2**30)
+    compare(filled, pairs)
 
 
 @pytest.mark.parametrize("found", [False, True])
@@ -109,6 +116,7 @@ def test_conduction_is_found_at_the_same_pair_wherever_a_slice_ends(closing, bor
     pairs = np.array([[2400, 40]] * closing + [[v, 1800] for v in range(20)])
     filled = capture()
     feed(filled, pairs, [border, 1, 1])
+    folding.finished(filled, pairs)
     # The first bright pair may have had its voltage taken before the closing.
     assert filled.skipped == closing + 1
     assert filled.pairs() == 19
@@ -120,6 +128,7 @@ def test_the_jump_at_the_closing_is_no_scatter():
     pairs = np.array([[2400, 40]] * 9 + [[24, 1800]] * 30)
     filled = capture()
     feed(filled, pairs, [])
+    folding.finished(filled, pairs)
     assert not folding.bins_of(filled)[:, 2:].any()
 
 
@@ -143,48 +152,72 @@ def test_one_noisy_pair_is_no_conduction(currents, conducts):
 
 
 @settings(max_examples=25)
-@given(st.integers(0, 2**32 - 1), st.lists(st.integers(1, RING - 2), min_size=1, max_size=12))
-def test_the_end_rule_sees_the_means_of_each_slice(seed, slices):
+@given(st.integers(0, 2**32 - 1), st.lists(st.integers(1, RING - 20), min_size=1, max_size=12))
+def test_the_end_rule_sees_the_means_of_what_each_call_folded(seed, slices):
     pairs = sweep(seed, 0, sum(slices))
-    filled = capture()
+    filled = capture(ring_pairs=4096)
     taken = 0
     for many in slices:
+        before = filled.pairs()
         feed_from(filled, pairs, taken, taken + many)
-        part = pairs[max(taken, 1) : taken + many]
-        assert filled.slice_means() is bool(len(part))
+        part = pairs[1 + before : 1 + filled.pairs()]
+        assert filled.recent_means() is bool(len(part))
         if len(part):
             means = (16 * part.sum(axis=0) // len(part)).tolist()
             assert [filled.voltage_x16, filled.current_x16] == means
         taken += many
-    assert filled.slice_means() is False
 
 
 def feed_from(filled, pairs: np.ndarray, start: int, stop: int) -> None:
     for number in range(start, stop):
-        place = 2 * (number % RING)
-        filled.ring[place], filled.ring[place + 1] = pairs[number].tolist()
+        v, i = pairs[number].tolist()
+        filled.ring[number % filled.ring_pairs] = v | i << 16
     filled.drain(stop)
 
 
 def test_a_capture_that_can_hold_no_more_says_so_and_keeps_what_it_has():
     filled = capture()
-    pairs = sweep(9, 0, 100)
+    pairs = sweep(9, 0, 200)
     feed(filled, pairs[:2], [])
-    filled.state[module.S_BIN_PAIRS] = module.MAX_BIN_PAIRS
-    filled.state[module.S_BIN] = module.BINS - 1
-    filled.state[module.S_LEFT] = 5
+    filled._bin_pairs = module.MAX_BIN_PAIRS
+    filled._bin = module.BINS - 1
+    filled._held = module.MAX_BIN_PAIRS - 32
+    filled.control[module.C_UNIT] = module.UNIT_PAIRS
     feed_from(filled, pairs, 2, 100)
     assert filled.full
     assert filled.pairs() == module.BINS * module.MAX_BIN_PAIRS
     assert filled.used_bins() == module.BINS
-    feed_from(filled, pairs, 50, 100)
+    feed_from(filled, pairs, 100, 200)
+    filled.finish(200)
     assert filled.pairs() == module.BINS * module.MAX_BIN_PAIRS
+
+
+def test_a_call_is_bounded_so_that_the_pulse_is_renewed_in_between():
+    """With a backlog of a whole ring in one call, the contact would open in mid-charge."""
+    filled = capture(ring_pairs=4096)
+    pairs = sweep(4, 0, 4000)
+    feed_from_all(filled, pairs)
+    turns = []
+    while filled.behind() >= module.UNIT_PAIRS:
+        before = filled.pairs()
+        filled.drain(len(pairs))
+        turns.append(filled.pairs() - before)
+    assert max(turns) <= module.DRAIN_PAIRS
+    assert 0 in turns  # a merge has calls of its own
+    check(filled, pairs)
+
+
+def feed_from_all(filled, pairs: np.ndarray) -> None:
+    for number, (v, i) in enumerate(pairs.tolist()):
+        filled.ring[number] = v | i << 16
+    filled.drain(len(pairs))
 
 
 def test_the_last_sweep_is_forgotten():
     filled = capture()
     feed(filled, sweep(1, 3, 3000), [])
     filled.drain(10**6)
+    filled.finish(10**6)
     filled.begin(THRESHOLD)
     assert (filled.overruns, filled.skipped, filled.pairs(), filled.full) == (0, 0, 0, False)
     pairs = sweep(2, 3, 50)

@@ -130,7 +130,8 @@ def test_each_slice_renews_the_wave_and_feeds_the_watchdog():
     rig.run()
     pulses = rig.pulses()
     steps = {b - a for a, b in pairwise(pulses)}
-    assert steps == {module.SLICE_US}
+    # No time passes on this board between two slices without a wait, as after a merge.
+    assert steps <= {0, module.SLICE_US}
     assert len(pulses) >= 10
     assert len(board.when("watchdog 2000")) >= len(pulses) - 1
     assert board.closings == 1

@@ -43,6 +43,7 @@ def test_folded_and_placed_as_one_holds_as_well():
     pairs = draw.integers(60, 4096, (5000, 2))
     filled = folding.capture()
     folding.feed(filled, pairs, [125] * 50)
+    folding.finished(filled, pairs)
     check_knots(pairs[1:], place(filled, 96), 96)
 
 

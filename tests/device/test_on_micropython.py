@@ -41,12 +41,15 @@ capture.begin(50)
 x = SEED
 written = 0
 while written < COUNT:
-    for _ in range(min(1 + x % 255, COUNT - written)):
+    for _ in range(min(1 + x % 239, COUNT - written)):
         x = (x * 1103515245 + 12345) & 0x7FFFFFFF
         pair = ((x >> 8) & 4095) | ((x >> 16) & 4095) << 16
         ring[4 * (written % 256) : 4 * (written % 256) + 4] = pair.to_bytes(4, "little")
         written += 1
     capture.drain(written)
+    while capture.behind() >= 16:
+        capture.drain(written)
+capture.finish(written)
 print(capture.skipped, capture.pairs(), capture.bin_pairs())
 print(hexlify(capture.bins).decode())
 count = knots.place(capture, 96, 384, 640, 2**33, 4, buffers)
@@ -168,7 +171,8 @@ def test_native_code_folds_and_places_what_cpython_does(seed, count):
     folded = pairs[start:]
     assert counts.split() == [str(n) for n in (start, len(folded), folding.bin_pairs(len(folded)))]
     filled = folding.filled(folded)
-    assert list(array("I", bytes.fromhex(bins))) == list(filled.bins)
+    words = 6 * filled.used_bins()  # what stands behind them is left from before
+    assert list(array("I", bytes.fromhex(bins)))[:words] == list(filled.bins)[:words]
     buffers = Buffers()
     knots = firmware_module("tracer.knots")
     number = knots.place(filled, 96, 384, 640, 2**33, PAIR_US, buffers)

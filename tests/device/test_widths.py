@@ -44,31 +44,39 @@ def words(values):
     return [Word(value) for value in values]
 
 
-def state_for(bin_pairs: int, left: int) -> list[Word]:
-    state = words([0] * module.S_WORDS)
-    state[module.S_MASK] = Word(8191)
-    state[module.S_BIN_PAIRS] = Word(bin_pairs)
-    state[module.S_LEFT] = Word(left)
-    return state
+def control_for(unit: int, units: int, last: int = 0) -> list[Word]:
+    control = words([0] * module.C_WORDS)
+    control[module.C_UNIT] = Word(unit)
+    control[module.C_UNITS] = Word(units)
+    control[module.C_LAST] = Word(last)
+    return control
 
 
-ALTERNATING = [code for pair in range(4000) for code in ((0, RAIL) if pair % 2 else (RAIL, 0))]
+def total(bins, low: int) -> int:
+    return int(bins[low]) + (int(bins[low + 1]) << module.SPLIT_BITS)
 
 
-def test_the_worst_codes_at_the_end_of_the_largest_bin_stay_within_bounds():
-    count = 4000
-    before = module.MAX_BIN_PAIRS - count
+def test_the_worst_codes_in_a_unit_stay_within_bounds():
+    pairs = [RAIL << 16, RAIL] * 8
+    bins = words([0] * 6)
+    module.fold_units(words(pairs), bins, control_for(16, 1, RAIL))
+    assert bins[:2] == [8 * RAIL] * 2
+    assert max(bins[:2]) < 2**16
+    assert bins[2:] == [16 * RAIL**2, 0, 16 * RAIL**2, 0]
+    assert max(bins[2], bins[4]) < 2**28
+
+
+def test_the_worst_units_at_the_end_of_the_largest_bin_stay_within_bounds():
+    count = 4095
+    before = module.MAX_BIN_PAIRS - 16 * count
     high = before * RAIL**2 // module.SPLIT
-    full = [before * RAIL, before * RAIL, LARGEST_LOW, high, LARGEST_LOW, high]
-    bins = words(full + [0] * 6)
-    state = state_for(module.MAX_BIN_PAIRS, count)
-    assert module.fold(words(ALTERNATING), bins, state, Word(count)) == count
+    bins = words([before * RAIL, before * RAIL, LARGEST_LOW, high, LARGEST_LOW, high])
+    unit = [16 * RAIL, 16 * RAIL, 16 * RAIL**2, 0, 16 * RAIL**2, 0]
+    module.add_units(bins, words(unit * count), 0, count)
     assert max(bins[:2]) < 2**28
     assert max(bins[2], bins[4]) < module.SPLIT
-    assert state[module.S_BIN] == 1
-    scatter = int(bins[2]) + (int(bins[3]) << module.SPLIT_BITS)
-    # The first voltage of these is 4095, after a 0; the first current is 0, after a 0.
-    assert scatter == LARGEST_LOW + (high << module.SPLIT_BITS) + count * RAIL**2
+    wanted = LARGEST_LOW + (high << module.SPLIT_BITS) + count * 16 * RAIL**2
+    assert total(bins, 2) == total(bins, 4) == wanted
 
 
 def test_two_worst_bins_merge_within_bounds():
@@ -76,32 +84,36 @@ def test_two_worst_bins_merge_within_bounds():
     high = half * RAIL**2 // module.SPLIT
     worst = [half * RAIL, half * RAIL, LARGEST_LOW, high, LARGEST_LOW, high]
     bins = words(worst * 4)
-    module.merge(bins, 4)
-    assert bins[:2] == [2 * half * RAIL] * 2
-    assert bins[12:] == [0] * 12
-    for low in (2, 4):
-        total = int(bins[low]) + (int(bins[low + 1]) << module.SPLIT_BITS)
-        assert total == 2 * (LARGEST_LOW + (high << module.SPLIT_BITS))
-        assert bins[low] < module.SPLIT
+    module.merge(bins, 0, 2)
+    for place in (0, 6):
+        assert bins[place : place + 2] == [2 * half * RAIL] * 2
+        for low in (place + 2, place + 4):
+            assert total(bins, low) == 2 * (LARGEST_LOW + (high << module.SPLIT_BITS))
+            assert bins[low] < module.SPLIT
+
+
+def test_the_sums_of_a_whole_call_stay_within_bounds():
+    units = module.DRAIN_PAIRS
+    control = control_for(1, units)
+    module.add_up(words([RAIL] * 6 * units), control)
+    assert control[module.C_VOLTAGE] == control[module.C_CURRENT] == units * RAIL
 
 
 @settings(max_examples=100)
 @given(
-    st.lists(st.tuples(*[st.integers(0, RAIL)] * 2), min_size=1, max_size=60),
+    st.lists(st.tuples(*[st.integers(0, RAIL)] * 2), min_size=1, max_size=16),
     st.integers(0, LARGEST_LOW),
     st.integers(0, LARGEST_LOW),
 )
 def test_split_words_add_up_whatever_stood_in_them(pairs, low_v, low_i):
-    ring = words([code for pair in pairs for code in pair])
+    unit = words([0] * 6)
+    module.fold_units([Word(v | i << 16) for v, i in pairs], unit, control_for(len(pairs), 1))
     bins = words([0, 0, low_v, 3, low_i, 5])
-    state = state_for(4096, 4096)
-    module.fold(ring, bins, state, Word(len(pairs)))
+    module.add_units(bins, unit, 0, 1)
     for channel, (low, high) in enumerate(((low_v, 3), (low_i, 5))):
         codes = [0, *(pair[channel] for pair in pairs)]
         added = sum((b - a) ** 2 for a, b in pairwise(codes))
-        place = 2 + 2 * channel
-        total = int(bins[place]) + (int(bins[place + 1]) << module.SPLIT_BITS)
-        assert total == low + (high << module.SPLIT_BITS) + added
+        assert total(bins, 2 + 2 * channel) == low + (high << module.SPLIT_BITS) + added
         assert bins[channel] == sum(codes)
 
 
