@@ -7,8 +7,6 @@ else; `sequencer.py` acts on it.
 
 UNIT_NONE = 0
 UNIT_MV = 1
-UNIT_MA = 2
-UNIT_MS = 3
 UNIT_CODES = 5
 
 ZERO_TOLERANCE_CODES = 24  # how far a current zero may stand from the profile's

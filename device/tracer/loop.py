@@ -5,7 +5,7 @@ from tracer.capture import Capture
 from tracer.charge import OVER_CURRENT, OVER_VOLTAGE, STOP_LOOP, SUPERVISION_LOST, Charge
 from tracer.ear import Ear
 from tracer.held import Held
-from tracer.interlocks import UNIT_MA, UNIT_MS, UNIT_MV, UNIT_NONE
+from tracer.interlocks import UNIT_NONE
 from tracer.profile import load
 from tracer.sequencer import Sequencer
 from tracer.service import Leave, Service
@@ -18,7 +18,7 @@ class Loop:
 
     def __init__(self, hal, buffers, profile_file=PROFILE_FILE):
         self.hal = hal
-        self.profile, self.profile_fault = load(profile_file, hal.device_id())
+        self.profile, _ = load(profile_file, hal.device_id())
         self.sequencer = Sequencer(hal, self.profile)
         self.held = Held(buffers)
         self.capture = Capture(hal.ring, hal.RING_PAIRS, buffers, hal.fold_units)
@@ -58,7 +58,7 @@ class Loop:
         except BaseException:
             sequencer.make_safe()
             raise
-        finding = finding_of(result.end_reason, self.profile)
+        finding = LATCHED.get(result.end_reason)
         if finding is None:
             sequencer.event(states.EV_OPENED)
         else:
@@ -77,14 +77,10 @@ class Loop:
             manifest["residual_sum"], manifest["residual_conversions"] = self.sequencer.residual
 
 
-def finding_of(end_reason, profile):
-    """The fault that an end of charge latches, or None. Nothing measured is lost by it."""
-    if end_reason == STOP_LOOP:
-        return 12, 0, 0, UNIT_NONE
-    if end_reason == OVER_VOLTAGE:
-        return 4, profile["rated_mv"], profile["rated_mv"], UNIT_MV
-    if end_reason == OVER_CURRENT:
-        return 6, profile["rated_ma"], profile["rated_ma"], UNIT_MA
-    if end_reason == SUPERVISION_LOST:
-        return 7, 0, 0, UNIT_MS
-    return None
+# What an end of charge latches. The trip itself is all that is known: no value is told with it.
+LATCHED = {
+    STOP_LOOP: (12, 0, 0, UNIT_NONE),
+    OVER_VOLTAGE: (4, 0, 0, UNIT_NONE),
+    OVER_CURRENT: (6, 0, 0, UNIT_NONE),
+    SUPERVISION_LOST: (7, 0, 0, UNIT_NONE),
+}

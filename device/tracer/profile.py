@@ -30,15 +30,8 @@ class Profile:
 
     def millivolts(self, channel, code_sum, conversions):
         """Mean of a channel ("voltage" or "capacitor") in mV."""
-        return self._micro(channel + "_nv_per_code", channel, code_sum, conversions) // 1000
-
-    def milliamperes(self, code_sum, conversions):
-        """Mean of the current channel in mA."""
-        return self._micro("current_na_per_code", "current", code_sum, conversions) // 1000
-
-    def _micro(self, scale, channel, code_sum, conversions):
         sixteenths = 16 * code_sum - self.values[channel + "_zero_x16"] * conversions
-        return sixteenths * self.values[scale] // (16000 * conversions)
+        return sixteenths * self.values[channel + "_nv_per_code"] // (16000 * conversions) // 1000
 
     def predicted_bleed_ms(self, from_mv, to_mv):
         """Time for the bleed to bring the capacitor from one voltage to the other."""

@@ -39,7 +39,6 @@ def times(edges: list[Edge], pin: int, level: int) -> list[float]:
 
 def board(plant: dict[str, Any]) -> Chip:
     """A board with the reference profile, its firmware started."""
-    pytest.importorskip("kneewise")
     from kneewire.profile_record import seal
     from kneewise.instrument.profile import BoardProfile
 

@@ -23,12 +23,10 @@ def test_the_reference_profile_is_accepted(reference):
 
 @settings(max_examples=200)
 @given(st.integers(0, 64 * 4095), st.integers(0, 65535), st.integers(1, 2 * 10**7))
-def test_codes_become_millivolts_and_milliamperes(code_sum, zero_x16, nano):
+def test_codes_become_millivolts(code_sum, zero_x16, nano):
     made = profile(
         voltage_nv_per_code=nano,
         voltage_zero_x16=zero_x16,
-        current_na_per_code=nano,
-        current_zero_x16=zero_x16,
         capacitor_nv_per_code=nano,
         capacitor_zero_x16=zero_x16,
     )
@@ -36,7 +34,6 @@ def test_codes_become_millivolts_and_milliamperes(code_sum, zero_x16, nano):
     for found in (
         made.millivolts("voltage", code_sum, 64),
         made.millivolts("capacitor", code_sum, 64),
-        made.milliamperes(code_sum, 64),
     ):
         assert true - 1.01 <= found <= true + 0.01
 

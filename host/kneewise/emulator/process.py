@@ -182,11 +182,6 @@ class ProcessTracer:
                 raise TimeoutError("the board did not lose power")
             time.sleep(IDLE_S)
 
-    def interrupt(self) -> None:
-        """Ctrl-C, as a terminal program would send it."""
-        assert self._terminal is not None
-        os.write(self._terminal, CTRL_C)
-
     def close(self) -> None:
         """Unplug and remove the emulated flash; twice is harmless."""
         self.unplug()

@@ -66,7 +66,6 @@ class Session:
         self.notices: deque[Message] = deque(maxlen=64)
         self.texts: deque[str] = deque(maxlen=16)
         self.frames_bad = 0
-        self.requests_repeated = 0
         self._decoder = framing.Decoder(RUN_BYTES, toward_device=False)
 
     def take_over(self, port: Port) -> None:
@@ -149,15 +148,12 @@ class Session:
         start = self.port.clock()
         end = start + deadline_s
         again = start
-        sent = 0
         while True:
             now = self.port.clock()
             if now >= end:
                 raise self._silent(name, deadline_s)
             if now >= again:
                 self.port.write(frame)
-                sent += 1
-                self.requests_repeated += 1 if sent > 1 else 0
                 again = now + again_s
             for message in self._pump(min(end, again) - now):
                 if message.sequence != sequence:
