@@ -25,8 +25,9 @@ from tracer import memory
 BINS = const(1024)
 MAX_BIN_PAIRS = 65536
 UNIT_PAIRS = const(16)
-SCRATCH_UNITS = const(16)
+SCRATCH_UNITS = const(48)  # a call of `drain` in one piece
 DRAIN_PAIRS = const(768)
+LAP_MARGIN = const(64)  # pairs (256 us) that may arrive between the count and the first fold
 MERGE_BINS = const(128)
 
 # Words of one bin.
@@ -52,7 +53,10 @@ C_THRESHOLD = const(6)
 C_FOUND = const(7)
 C_VOLTAGE = const(8)
 C_CURRENT = const(9)
-C_WORDS = const(10)
+C_BIN = const(10)  # place of the bin being filled, in words
+C_HELD = const(11)  # units that it holds already
+C_BIN_UNITS = const(12)  # units in a bin
+C_WORDS = const(13)
 
 # Constants cannot be imported into the native code, so they are written again and compared.
 if (BINS, WORDS, C_WORDS, UNIT_PAIRS, SCRATCH_UNITS) != (
@@ -104,20 +108,34 @@ def fold_units(ring: ptr32, bins: ptr32, control: ptr32):
 
 
 @micropython.viper
-def add_units(bins: ptr32, units: ptr32, place: int, count: int):
-    """Add `count` units, from the first on, to the bin at `place`."""
+def add_units(bins: ptr32, units: ptr32, control: ptr32):
+    """Add C_UNITS units, from the first on, to bins of C_BIN_UNITS units, from C_BIN on."""
+    place = control[C_BIN]
+    held = control[C_HELD]
     source = 0
-    end = count * WORDS
+    end = control[C_UNITS] * WORDS
     while source < end:
-        bins[place] = bins[place] + units[source]
-        bins[place + 1] = bins[place + 1] + units[source + 1]
-        low = bins[place + 2] + units[source + 2]
-        bins[place + 2] = low & (SPLIT - 1)
-        bins[place + 3] = bins[place + 3] + (low >> SPLIT_BITS)
-        low = bins[place + 4] + units[source + 4]
-        bins[place + 4] = low & (SPLIT - 1)
-        bins[place + 5] = bins[place + 5] + (low >> SPLIT_BITS)
+        if held == 0:
+            bins[place] = units[source]
+            bins[place + 1] = units[source + 1]
+            bins[place + 2] = units[source + 2]
+            bins[place + 3] = 0
+            bins[place + 4] = units[source + 4]
+            bins[place + 5] = 0
+        else:
+            bins[place] = bins[place] + units[source]
+            bins[place + 1] = bins[place + 1] + units[source + 1]
+            low = bins[place + 2] + units[source + 2]
+            bins[place + 2] = low & (SPLIT - 1)
+            bins[place + 3] = bins[place + 3] + (low >> SPLIT_BITS)
+            low = bins[place + 4] + units[source + 4]
+            bins[place + 4] = low & (SPLIT - 1)
+            bins[place + 5] = bins[place + 5] + (low >> SPLIT_BITS)
         source += WORDS
+        held += 1
+        if held == control[C_BIN_UNITS]:
+            held = 0
+            place += WORDS
 
 
 @micropython.viper
@@ -227,7 +245,7 @@ class Capture:
         """
         self._recent = 0
         behind = (written - self.read) & 0x3FFFFFFF
-        if behind >= self.ring_pairs:
+        if self._lapped(written):
             self.overruns += 1
             return
         self.written = written
@@ -260,7 +278,9 @@ class Capture:
 
         Called once the ring stands still.
         """
-        if (written - self.read) & 0x3FFFFFFF >= self.ring_pairs:
+        while self._merged >= 0:  # half merged, the bins mean nothing
+            self._merge_some()
+        if self._lapped(written):
             self.overruns += 1
             return
         while self._merged >= 0 or (
@@ -273,6 +293,10 @@ class Capture:
             self.control[C_UNIT] = rest
             self._fold(1)
             self.control[C_UNIT] = unit
+
+    def _lapped(self, written):
+        """True where the oldest unread pair is overwritten, or may be before it is read."""
+        return (written - self.read) & 0x3FFFFFFF > self.ring_pairs - LAP_MARGIN
 
     def _fold(self, units):
         """Fold up to so many whole units, as they lie in the ring; the pairs folded."""
@@ -294,7 +318,9 @@ class Capture:
             control[C_PLACE] = WORDS * self._bin
             target = self.bins
         else:
-            units = min(units, SCRATCH_UNITS, (self._bin_pairs - self._held) // unit or 1)
+            room = (BINS - self._bin) * self._bin_pairs - self._held
+            # At the end of a sweep a unit may be of any size, and there is room for it.
+            units = min(units, SCRATCH_UNITS, room // unit or 1)
             control[C_PLACE] = 0
             target = self.scratch
         control[C_UNITS] = units
@@ -302,24 +328,20 @@ class Capture:
         add_up(target, control)
         self._recent += units * unit
         self._passed(units * unit)
-        self._placed(units, units * unit)
+        self._placed(units * unit)
         return units * unit
 
-    def _placed(self, units, pairs):
+    def _placed(self, pairs):
         """Count what was folded into bins, and see whether they are full."""
-        if self._bin_pairs <= UNIT_PAIRS and pairs == units * self._bin_pairs:
-            self._bin += units
-        else:
-            place = WORDS * self._bin
-            if self._bin_pairs > UNIT_PAIRS:
-                if self._held == 0:
-                    for word in range(WORDS):
-                        self.bins[place + word] = 0
-                add_units(self.bins, self.scratch, place, units)
-            self._held += pairs
-            if self._held == self._bin_pairs:
-                self._held = 0
-                self._bin += 1
+        if self._bin_pairs > UNIT_PAIRS:
+            control = self.control
+            control[C_BIN] = WORDS * self._bin
+            control[C_HELD] = self._held // UNIT_PAIRS
+            control[C_BIN_UNITS] = self._bin_pairs // UNIT_PAIRS
+            add_units(self.bins, self.scratch, control)
+        pairs += self._held
+        self._bin += pairs // self._bin_pairs
+        self._held = pairs % self._bin_pairs
         if self._bin == BINS:
             if self._bin_pairs == MAX_BIN_PAIRS:
                 self.full = True

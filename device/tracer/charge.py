@@ -5,7 +5,7 @@ Between slices it listens for abort alone. The make-and-break output is a bounde
 each slice earns anew: only when both the supervision tick and the ring have moved on, and only
 while it still runs: a contact that has opened by itself is not closed again.
 
-Between two slices nothing is allocated. So time is counted in pairs, by the ring: a time in
+In the quiet nothing is allocated. So time is counted in pairs, by the ring: a time in
 microseconds since boot needs an object of its own from 18 minutes on.
 """
 
@@ -57,7 +57,11 @@ class EndRule:
     row. Never the slope of the voltage alone: a nearly dark substring crawls.
     """
 
-    def __init__(self, zero_x16, open_x16, voltage_zero_x16):
+    def __init__(self):
+        self.begin(0, 0, 0)
+
+    def begin(self, zero_x16, open_x16, voltage_zero_x16):
+        """Forget the last sweep. The codes, in sixteenths: current zero, open voltage, its zero."""
         self.zero_x16 = zero_x16
         self.near_open_x16 = open_x16 - max((open_x16 - voltage_zero_x16) // 1000, 8)
         self.peak_x16 = 0
@@ -87,18 +91,24 @@ class Charge:
         self.profile = profile
         self.capture = capture
         self.ear = ear
+        self.rule = EndRule()
 
     def run(self, closed_limit_ms, outputs):
         """Close, capture, open. `outputs` (the sequencer) is told what is commanded."""
         hal = self.hal
         result = Result()
-        hal.quiet_begin()
+        profile = self.profile
+        voltage_trip = profile.trip_code("voltage", profile["rated_mv"])
+        current_trip = profile.trip_code("current", profile["rated_ma"])
         try:
+            hal.quiet_begin()
             self._before(result)
             self._prepare(outputs)
-            result.end_reason = self._capture(result, closed_limit_ms)
+            result.end_reason = self._capture(result, closed_limit_ms, voltage_trip, current_trip)
         finally:
             self._end(result, outputs)
+        result.capture_us = hal.capture_began_us()
+        result.opened_us = hal.now_us()
         # Only now: no contact waits for it.
         self.capture.finish(result.pairs_written)
         return result
@@ -112,7 +122,6 @@ class Charge:
             result.pairs_written = hal.capture_written()
             hal.supervise_end()
             self._open(outputs)
-            result.opened_us = hal.now_us()
         except BaseException:
             outputs.make_safe()
             raise
@@ -146,16 +155,15 @@ class Charge:
         hal.bleed(True)
         outputs.bleed_engaged = True
 
-    def _capture(self, result, closed_limit_ms):
+    def _capture(self, result, closed_limit_ms, voltage_trip, current_trip):
         hal = self.hal
         profile = self.profile
         capture = self.capture
         zero_x16 = 16 * result.current_sum // READ_CONVERSIONS
         open_x16 = 16 * result.voltage_sum // READ_CONVERSIONS
-        rule = EndRule(zero_x16, open_x16, profile["voltage_zero_x16"])
+        rule = self.rule
+        rule.begin(zero_x16, open_x16, profile["voltage_zero_x16"])
         capture.begin(zero_x16 // 16 + CONDUCTING_CODES)
-        voltage_trip = profile.trip_code("voltage", profile["rated_mv"])
-        current_trip = profile.trip_code("current", profile["rated_ma"])
         pulse_us = profile["pulse_us"]
         pairs_a_ms = 1000 // hal.PAIR_US
         limit = pairs_a_ms * min(closed_limit_ms, profile["closed_limit_ms"])
@@ -164,7 +172,7 @@ class Charge:
         unticked = pairs_a_ms * FIRST_MS
         lapsed = (pulse_us - PULSE_MARGIN_US) // hal.PAIR_US
 
-        result.capture_us = hal.capture_start()
+        hal.capture_start()
         hal.supervise(voltage_trip, current_trip)
         self.ear.listen()
         if self.ear.aborted:

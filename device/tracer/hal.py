@@ -94,9 +94,13 @@ class Hal:
     # -- capture ---------------------------------------------------------------------
 
     def capture_start(self):
-        """Start pairs of V and I into `ring` from its first place.
+        """Start pairs of V and I into `ring` from its first place."""
+        raise NotImplementedError
 
-        Returns the time of the first voltage conversion, in us since boot.
+    def capture_began_us(self):
+        """Time of the last capture's first voltage conversion, in us since boot.
+
+        Not in the quiet: the number may have to be allocated.
         """
         raise NotImplementedError
 
@@ -127,7 +131,7 @@ class Hal:
     # -- time ------------------------------------------------------------------------
 
     def now_us(self):
-        """Microseconds since boot, 64 bits."""
+        """Microseconds since boot, 64 bits. Not in the quiet, as `capture_began_us`."""
         raise NotImplementedError
 
     def wait_us(self, us):
@@ -142,10 +146,14 @@ class Hal:
         raise NotImplementedError
 
     def quiet_begin(self):
-        """From here to `quiet_end`: no collection, nothing sent, waits are exact."""
+        """From here to `quiet_end`: nothing allocated, nothing sent, waits are exact.
+
+        Where the board can, an allocation raises MemoryError.
+        """
         raise NotImplementedError
 
     def quiet_end(self):
+        """Allowed at any time, any number of times."""
         raise NotImplementedError
 
     def watchdog(self, ms):

@@ -1,8 +1,8 @@
 """The board: `Hal` on the registers of an RP2040 under MicroPython.
 
 Comes in: calls of `hal.Hal`. Goes out: bits in registers. Thin: no decision is taken here.
-Registers carry the names of the RP2040 datasheet. Nothing that runs between `quiet_begin`
-and `quiet_end` allocates, with one exception that `now_us` names.
+Registers carry the names of the RP2040 datasheet. Between `quiet_begin` and `quiet_end` the heap
+is locked: an allocation would raise MemoryError.
 
 What DMA and the timer interrupt touch (the ring, `_words`, the DMA channel) belongs to this
 module and not to a `Hal` object, so a dropped object cannot hand the ring's memory back while
@@ -94,7 +94,10 @@ _W_CHANNEL = const(8)
 _W_RING = const(9)
 _W_TIME_HIGH = const(10)
 _W_TIME_LOW = const(11)
-_WORDS = const(12)
+_W_BEGAN_HIGH = const(12)
+_W_BEGAN_LOW = const(13)
+_W_QUIET = const(14)
+_WORDS = const(15)
 
 micropython.alloc_emergency_exception_buf(100)
 
@@ -179,8 +182,8 @@ def _begin_capture(words: ptr32):
     many[_CS] = _CS_START_MANY
     if raw[0] != high and low >= 0:
         high = raw[0]  # the carry came between the two reads
-    words[_W_TIME_HIGH] = high
-    words[_W_TIME_LOW] = low
+    words[_W_BEGAN_HIGH] = high
+    words[_W_BEGAN_LOW] = low
     words[_W_RUNNING] = 1
 
 
@@ -270,11 +273,20 @@ def _find_reset_cause():
 _reset_cause = _find_reset_cause()
 
 
-def _stamp():
-    # Shifting by 32 allocates, even a zero.
-    high = _words[_W_TIME_HIGH]
-    low = _words[_W_TIME_LOW]
-    return high << 32 | low if high else low
+# Ctrl-C is not delivered inside native code, so the mark and the lock cannot come apart: an
+# unlock too many would lock the heap for good.
+@micropython.viper
+def _lock(words: ptr32):
+    if words[_W_QUIET] == 0:
+        words[_W_QUIET] = 1
+        micropython.heap_lock()
+
+
+@micropython.viper
+def _unlock(words: ptr32):
+    if words[_W_QUIET] == 1:
+        words[_W_QUIET] = 0
+        micropython.heap_unlock()
 
 
 class Hal(hal.Hal):
@@ -354,7 +366,9 @@ class Hal(hal.Hal):
         irq = machine.disable_irq()
         _begin_capture(_words)
         machine.enable_irq(irq)
-        return _stamp()
+
+    def capture_began_us(self):
+        return _words[_W_BEGAN_HIGH] << 32 | _words[_W_BEGAN_LOW]
 
     def capture_written(self):
         return _written(_words)
@@ -387,12 +401,8 @@ class Hal(hal.Hal):
     # -- time ------------------------------------------------------------------------
 
     def now_us(self):
-        """As in `hal.Hal`. From 2**30 us (18 minutes) on, the number itself is allocated.
-
-        The same holds for what `capture_start` returns.
-        """
         _time(_words)
-        return _stamp()
+        return _words[_W_TIME_HIGH] << 32 | _words[_W_TIME_LOW]
 
     def wait_us(self, us):
         time.sleep_us(us)
@@ -401,11 +411,13 @@ class Hal(hal.Hal):
         self._link.wait(ms)
 
     def quiet_begin(self):
+        # Not for the allocations alone: with the heap unlocked MicroPython looks for a place for
+        # the frame of each larger function, which can take a millisecond on a full heap.
         gc.collect()
-        gc.disable()
+        _lock(_words)
 
     def quiet_end(self):
-        gc.enable()
+        _unlock(_words)
 
     def watchdog(self, ms):
         """As in `hal.Hal`; at most 8388 ms. MicroPython itself has no way to stop it."""

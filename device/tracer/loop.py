@@ -32,8 +32,12 @@ class Loop:
         except Leave:
             pass
         finally:
-            self.sequencer.make_safe()
+            self.leave()
             self.hal.watchdog(0)
+
+    def leave(self):
+        self.sequencer.make_safe()
+        self.hal.quiet_end()
 
     def step(self):
         """One turn of the loop."""
@@ -56,7 +60,7 @@ class Loop:
         try:
             result = charge.run(service.armed_limit_ms, sequencer)
         except BaseException:
-            sequencer.make_safe()
+            self.leave()
             raise
         finding = LATCHED.get(result.end_reason)
         if finding is None:

@@ -6,9 +6,9 @@ from micropython import const
 
 BINS = const(1024)
 BIN_WORDS = const(6)
-CONTROL_WORDS = const(10)
+CONTROL_WORDS = const(13)
 UNIT_PAIRS = const(16)
-SCRATCH_UNITS = const(16)
+SCRATCH_UNITS = const(48)
 MAX_KNOTS = const(512)
 RECORD_BYTES = const(40)  # a knot record; compared with the catalogue in held.py
 

@@ -17,7 +17,8 @@
 //                                          [pin, 0 or 1 or null, ns]; null = not driven
 //     {"do": "plant"}                      the plant's state
 //     {"do": "describe", "plant": {...}}   another description, see plant.mjs
-//     {"do": "drive", "pin": 5, "level": 0}
+//     {"do": "drive", "pin": 5, "level": 0}  the pin alone
+//     {"do": "stop_loop", "closed": 0}     with it the drive of both coils and of the wave
 //     {"do": "forge", "bytes": [3]}        bytes on the link that no host has sent
 //     {"do": "speed", "cap": 0}
 
@@ -219,6 +220,7 @@ const orders = {
   },
   plant: () => plant.state(nanos()),
   describe: (order) => { plant.describe(order.plant); return {}; },
+  stop_loop: (order) => { plant.stopLoop(order.closed, nanos()); return {}; },
   drive: (order) => { api.drive(order.pin, order.level); return {}; },
   forge: (order) => { usb.take(Buffer.from(order.bytes)); return {}; },
   speed: (order) => { speed = order.cap; return {}; },

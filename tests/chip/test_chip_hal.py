@@ -294,7 +294,7 @@ SOURCE = {
     "u_volt": [0, 30, 34, 36, 38, 39, 40],
     "i_ampere": [9.2, 9.1, 8.6, 7.6, 5.0, 2.9, 0],
     "c_farad": 0.0022,
-    "r_ohm": 0.12,
+    "line_ohm": 0.12,
     "bleed_ohm": 100,
     "volt_per_code": [0.015, 0.015],
     "ampere_per_code": 0.004,

@@ -23,7 +23,7 @@ def source() -> dict[str, Any]:
         "u_volt": volts[: end + 1],
         "i_ampere": [*amperes[:end], 0.0],
         "c_farad": 0.0022,
-        "r_ohm": 0.07,
+        "line_ohm": 0.07,
         "bleed_ohm": 100,
         "volt_per_code": [0.0165, 0.0165],
         "ampere_per_code": 0.0052,

@@ -63,6 +63,7 @@ class FakeBoard(hal.Hal):
         self.bleed_engaged = True
         self.pulse_until_us = 0
         self.pairs: int | None = None
+        self.began_us = 0
         self.stopped_pairs = 0
         self.pairs_stop_at: int | None = None
         self.overtaken = 0
@@ -215,10 +216,14 @@ class FakeBoard(hal.Hal):
         zero = (V_ZERO, A_ZERO, V_ZERO)[channel]
         return count * self._code(volt, V_PER_CODE, zero)
 
-    def capture_start(self) -> int:
+    def capture_start(self) -> None:
         self._note("capture_start")
         self.pairs = 0
-        return self.time_us
+        self.began_us = self.time_us
+
+    def capture_began_us(self) -> int:
+        assert not self.quiet, "a time was taken, and so allocated, in the quiet"
+        return self.began_us
 
     def capture_written(self) -> int:
         self._note("capture_written")
@@ -262,6 +267,7 @@ class FakeBoard(hal.Hal):
 
     def now_us(self) -> int:
         self._note("now_us")
+        assert not self.quiet, "a time was taken, and so allocated, in the quiet"
         return self.time_us
 
     def wait_us(self, us: int) -> None:

@@ -13,6 +13,7 @@ from kneewire.messages import KNOT_BYTES, unpack_knots
 from kneewise.emulator.firmware import firmware_module
 
 BINS = firmware_module("tracer.memory").BINS
+LAP_MARGIN = firmware_module("tracer.capture").LAP_MARGIN
 RING = 256  # pairs: small, so that it wraps often
 THRESHOLD = 50
 CONDUCTING_US = 2**33 + 12345
@@ -29,7 +30,7 @@ def feed(into: Any, pairs: np.ndarray, slices: Iterable[int]) -> None:
     written = 0
     cuts = iter(slices)
     while written < len(pairs):
-        many = min(next(cuts, into.ring_pairs - 17), len(pairs) - written)
+        many = min(next(cuts, into.ring_pairs - LAP_MARGIN - 17), len(pairs) - written)
         for v, i in pairs[written : written + many].tolist():
             into.ring[written % into.ring_pairs] = v | i << 16
             written += 1

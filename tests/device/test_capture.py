@@ -3,7 +3,7 @@
 import folding
 import numpy as np
 import pytest
-from folding import RING, THRESHOLD, capture, feed
+from folding import LAP_MARGIN, RING, THRESHOLD, capture, feed
 from hypothesis import example, given, settings
 from hypothesis import strategies as st
 
@@ -11,8 +11,8 @@ from kneewise.emulator.firmware import firmware_module
 
 module = firmware_module("tracer.capture")
 
-# Part of a unit may still wait in the ring, and a full ring counts as overtaken.
-SLICES = st.lists(st.integers(0, RING - 17), max_size=60)
+# Part of a unit may still wait in the ring, and a nearly full ring counts as overtaken.
+SLICES = st.lists(st.integers(0, RING - LAP_MARGIN - 17), max_size=60)
 
 
 def sweep(seed: int, dark: int, bright: int) -> np.ndarray:
@@ -102,12 +102,30 @@ def test_a_ring_that_was_overtaken_is_told_and_its_pairs_are_not_taken(found):
     assert filled.pairs() == before
 
 
-def test_a_ring_full_but_for_one_pair_is_no_overrun():
-    pairs = sweep(8, 0, RING - 1)
+@pytest.mark.parametrize("late", [0, 1])
+def test_a_pair_that_could_be_overwritten_while_it_is_read_counts_as_overtaken(late):
+    pairs = sweep(8, 0, RING - LAP_MARGIN + late)
     filled = capture()
-    feed(filled, pairs, [RING - 1])
-    assert filled.overruns == 0
-    check(filled, pairs)
+    feed(filled, pairs, [len(pairs)])
+    assert filled.overruns == late
+    if not late:
+        check(filled, pairs)
+
+
+@pytest.mark.parametrize("calls", range(4))
+def test_bins_stay_whole_where_the_ring_is_overtaken_in_the_middle_of_a_merge(calls):
+    pairs = sweep(9, 0, 1025)
+    filled = capture(ring_pairs=2048)
+    feed_from_all(filled, pairs)
+    while filled._merged < 0:
+        filled.drain(len(pairs))
+    for _ in range(calls):
+        filled.drain(len(pairs))
+    filled.drain(len(pairs) + 2048)
+    filled.finish(len(pairs) + 2048)
+    assert filled.overruns == 2
+    assert (filled.pairs(), filled.bin_pairs()) == (1024, 2)
+    assert folding.bins_of(filled).tolist() == folding.bins(pairs[1:]).tolist()
 
 
 @pytest.mark.parametrize("closing", range(12))

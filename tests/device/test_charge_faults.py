@@ -105,10 +105,11 @@ def test_a_second_error_in_the_clean_up_of_the_first_ends_safe_as_well():
 
 
 @pytest.mark.parametrize("acts", [False, True], ids=["before its act", "after its act"])
-def test_after_an_error_the_board_collects_and_sends_again(acts):
+def test_after_an_error_the_board_allocates_and_sends_again(acts):
     stays = []
-    for number in ALL[1:-1]:
+    for number in ALL:
         board, _, _, _ = run(number, acts=acts)
-        if board.quiet:
+        # Where the end of the quiet is itself what fails, `loop.py` ends it again.
+        if board.quiet and CALLS[number - 1] != "quiet_end":
             stays.append(number)
     assert stays == []

@@ -12,7 +12,9 @@ VOLTAGE_ZERO = 24 * 16
 
 
 def rule():
-    return module.EndRule(ZERO, OPEN, VOLTAGE_ZERO)
+    made = module.EndRule()
+    made.begin(ZERO, OPEN, VOLTAGE_ZERO)
+    return made
 
 
 def ended_after(voltages, currents):

@@ -72,7 +72,10 @@ def test_the_worst_units_at_the_end_of_the_largest_bin_stay_within_bounds():
     high = before * RAIL**2 // module.SPLIT
     bins = words([before * RAIL, before * RAIL, LARGEST_LOW, high, LARGEST_LOW, high])
     unit = [16 * RAIL, 16 * RAIL, 16 * RAIL**2, 0, 16 * RAIL**2, 0]
-    module.add_units(bins, words(unit * count), 0, count)
+    control = control_for(16, count)
+    control[module.C_HELD] = Word(1)
+    control[module.C_BIN_UNITS] = Word(module.MAX_BIN_PAIRS // 16)
+    module.add_units(bins, words(unit * count), control)
     assert max(bins[:2]) < 2**28
     assert max(bins[2], bins[4]) < module.SPLIT
     wanted = LARGEST_LOW + (high << module.SPLIT_BITS) + count * 16 * RAIL**2
@@ -109,7 +112,10 @@ def test_split_words_add_up_whatever_stood_in_them(pairs, low_v, low_i):
     unit = words([0] * 6)
     module.fold_units([Word(v | i << 16) for v, i in pairs], unit, control_for(len(pairs), 1))
     bins = words([0, 0, low_v, 3, low_i, 5])
-    module.add_units(bins, unit, 0, 1)
+    control = control_for(16, 1)
+    control[module.C_HELD] = Word(1)
+    control[module.C_BIN_UNITS] = Word(4)
+    module.add_units(bins, unit, control)
     for channel, (low, high) in enumerate(((low_v, 3), (low_i, 5))):
         codes = [0, *(pair[channel] for pair in pairs)]
         added = sum((b - a) ** 2 for a, b in pairwise(codes))

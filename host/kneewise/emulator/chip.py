@@ -61,14 +61,18 @@ def plant_description(scenario: Scenario, scaling: Scaling) -> dict[str, Any]:
         "u_volt": np.asarray(voltage).tolist(),
         "i_ampere": np.asarray(current).tolist(),
         "c_farad": bank.capacitance_f,
-        "r_ohm": bank.lead_resistance_ohm
-        + bank.contact_resistance_ohm
-        + bank.capacitor_esr_ohm
-        + circuit.switch_ohm
-        + circuit.shunt_ohm,
+        "esr_ohm": bank.capacitor_esr_ohm,
+        "line_ohm": circuit.line_ohm,
         "bleed_ohm": bank.bleed_ohm,
         "leak_ohm": bank.permanent_bleeder_ohm,
         "v_start": bank.capacitor_start_v,
+        "welded": 1 if board.contact_welded else 0,
+        "bleed_open": 1 if board.bleed_open else 0,
+        "relay_operate_us": circuit.relay_operate_us,
+        "relay_release_us": circuit.relay_release_us,
+        "bleed_operate_us": circuit.bleed_operate_us,
+        "bleed_release_us": circuit.bleed_release_us,
+        "switch_open_us": circuit.switch_open_us,
         "volt_per_code": [scaling.voltage_v_per_code, scaling.capacitor_v_per_code],
         "ampere_per_code": scaling.current_a_per_code,
         "zero_code": [

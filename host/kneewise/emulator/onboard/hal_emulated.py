@@ -26,6 +26,7 @@ class EmulatedHal(hal.Hal):
         self._device_id = device_id
         self._random = seed & 0xFFFFFFFF or 1
         self._quiet_us = 0
+        self._began_us = 0
         self._filled = 0
         self._ring_bytes = bytearray(4 * self.RING_PAIRS)
         # The same memory as 16-bit words: what the folding code reads.
@@ -80,9 +81,11 @@ class EmulatedHal(hal.Hal):
 
     def capture_start(self):
         self._filled = 0
-        start_us = self.now_us()
+        self._began_us = self.now_us()
         self._bus.call("capture_start", 0, 0)
-        return start_us
+
+    def capture_began_us(self):
+        return self._began_us
 
     def capture_written(self):
         data = self._bus.call("capture_take", 0, 0)
