@@ -1,4 +1,4 @@
-"""Goes to the chip as /emulated_board.py: the board of hal_rp2.py, with figures kept of each charge.
+"""Goes to the chip as /emulated_board.py: the board of hal_rp2.py, keeping figures of a charge.
 
 `report()` gives them as a dict once the prompt is there. The firmware's files are untouched;
 what is wrapped is wrapped here, outside any capture, and keeps its figures in words that are
@@ -10,6 +10,7 @@ from array import array
 
 import micropython
 from micropython import const
+
 from tracer import hal_rp2
 
 W_STARTED = const(0)
@@ -57,7 +58,7 @@ class Watched(hal_rp2.Hal):
         super().link_wait(ms)
 
     def watchdog(self, ms):
-        if ms and not self._watchdog_ms:
+        if ms and not self._watchdog_ms and not self._counting:
             heap["armed"] = free()
         super().watchdog(ms)
 

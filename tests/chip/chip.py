@@ -182,6 +182,10 @@ class Chip:
         assert not answer["dropped"]
         return [Edge(pin, level, ns / 1000) for pin, level, ns in answer["edges"]]
 
+    def said(self) -> str:
+        """The last of what the chip has sent over its link."""
+        return str(self.order("said")["text"])
+
     def now_us(self) -> float:
         return float(self.order("time")["ns"]) / 1000
 

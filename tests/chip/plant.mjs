@@ -65,6 +65,7 @@ export class Plant {
     this.random = this.d.seed >>> 0;
     this.v = this.d.v_start;
     this.closings = 0;
+    this.overlapNs = 0; // contact and bleed both conducting
     this.lastEdge = -Infinity;
     this.relay = new Contact(false);
     this.bleed = new Contact(true);
@@ -164,6 +165,7 @@ export class Plant {
       if (this.now < end) until = Math.min(until, end);
       const load = this.loads[this.bleed.closed ? 1 : 0];
       const seconds = (until - this.now) * 1e-9;
+      if (closed && this.bleed.closed) this.overlapNs += until - this.now;
       if (closed) {
         const middle = this.v + 0.5 * seconds * this.rate(load, this.v);
         this.v += seconds * this.rate(load, middle);
@@ -213,7 +215,8 @@ export class Plant {
   state(ns) {
     this.advance(ns);
     return {
-      v_capacitor: this.v, closed: this.closed(), bled: this.bleed.closed, closings: this.closings,
+      v_capacitor: this.v, closed: this.closed(), bled: this.bleed.closed,
+      closings: this.closings, overlap_ns: this.overlapNs,
     };
   }
 }

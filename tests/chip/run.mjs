@@ -14,7 +14,9 @@
 //   control  one JSON object a line in, one out:
 //     {"do": "time"}                       emulated time in ns, boots so far
 //     {"do": "edges"}                      changes of GP2, GP3, GP4 since the last call, as
-//                                          [pin, 0 or 1 or null, ns]; null = not driven
+//                                          [pin, 0 or 1 or null, ns]; null = not driven; and GP15
+//                                          as it goes high, for tests to mark a moment
+//     {"do": "said"}                       the last of what the chip has sent over its link
 //     {"do": "plant"}                      the plant's state
 //     {"do": "describe", "plant": {...}}   another description, see plant.mjs
 //     {"do": "drive", "pin": 5, "level": 0}  the pin alone
@@ -40,7 +42,9 @@ const FILES_AT = 0xa0000;
 const SLICE_NS = 4e6;
 const LATE_NS = 20e6; // further behind the wall clock than this: never caught up in a burst
 const EDGES_KEPT = 200_000;
-const WATCHED_PINS = [2, 3, 4];
+const OUTPUTS = [2, 3, 4];
+const MARK = 15;
+const SAID_KEPT = 8192;
 // Flash times of a W25Q16JV, typical.
 const ERASE_SECTOR_US = 45_000;
 const PROGRAM_PAGE_US = 400;
@@ -70,6 +74,7 @@ let mcu, core, api, usb; // of the present boot
 let resetWanted = null;
 let edges = [];
 let edgesDropped = 0;
+let said = Buffer.alloc(0);
 let speed = Number(options.speed);
 
 // ---- the chip ----
@@ -130,10 +135,9 @@ async function boot(carried) {
     core.stop = true;
   };
   usb = new UsbHost(mcu);
-  for (const pin of WATCHED_PINS) {
-    if (carried) noteEdge(pin, null, nanos()); // a chip in reset drives nothing
-    api.onPin(pin, (level, ns) => noteEdge(pin, level, ns));
-  }
+  if (carried) for (const pin of OUTPUTS) noteEdge(pin, null, nanos()); // in reset
+  for (const pin of OUTPUTS) api.onPin(pin, (level, ns) => noteEdge(pin, level, ns));
+  api.onPin(MARK, (level, ns) => { if (level === 1) noteEdge(MARK, level, ns); });
   plant.attach(api);
   mcu.core.PC = 0x10000000;
   core = (await import(`./core.mjs?boot=${world.boot}`)).makeCore(mcu);
@@ -157,7 +161,10 @@ class UsbHost {
       this.ready = true;
       setTimeout(() => this.setDtr(client !== null), 0);
     };
-    this.cdc.onSerialData = (bytes) => client?.write(Buffer.from(bytes));
+    this.cdc.onSerialData = (bytes) => {
+      said = Buffer.concat([said, bytes]).subarray(-SAID_KEPT);
+      client?.write(Buffer.from(bytes));
+    };
     chip.usbCtrl.onEndpointRead = (endpoint, size) => {
       if (endpoint !== this.cdc.outEndpoint) return;
       this.waiting.push(size);
@@ -218,6 +225,7 @@ const orders = {
     edgesDropped = 0;
     return answer;
   },
+  said: () => ({ text: said.toString('latin1') }),
   plant: () => plant.state(nanos()),
   describe: (order) => { plant.describe(order.plant); return {}; },
   stop_loop: (order) => { plant.stopLoop(order.closed, nanos()); return {}; },

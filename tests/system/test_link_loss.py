@@ -111,6 +111,25 @@ def test_reset_after_fire_is_outcome_unknown_and_never_a_second_fire(bench, rung
     assert len(closings) <= 1
 
 
+def test_a_session_that_the_device_does_not_know_is_opened_anew_and_the_sweep_fetched(
+    bench, rung, monkeypatch
+):
+    one = bench(rung)
+    tracer = one.tracer()
+    wait = type(tracer._session).wait_notice
+
+    def forget(session, *args):
+        found = wait(session, *args)
+        session.session ^= 1
+        return found
+
+    monkeypatch.setattr(type(tracer._session), "wait_notice", forget)
+    trace = tracer.sweep()
+    assert trace.sound
+    closings = [entry for entry in one.board.record if entry[1:] == ("switch_contact", 1)]
+    assert len(closings) == 1
+
+
 def test_without_power_the_port_is_lost(bench, rung):
     one = bench(rung)
     tracer = one.tracer()

@@ -10,6 +10,7 @@ from __future__ import annotations
 
 import importlib.util
 import sys
+from collections.abc import Mapping
 from functools import cache
 from types import ModuleType
 from typing import Any
@@ -92,7 +93,16 @@ class ChipTracer:
 
     rung = "chip"
 
-    def __init__(self, scenario: Scenario, scaling: Scaling, record: bytes) -> None:
+    def __init__(
+        self,
+        scenario: Scenario,
+        scaling: Scaling,
+        record: bytes,
+        *,
+        more_files: Mapping[str, bytes] | None = None,
+        uptime_us: int = 0,
+    ) -> None:
+        """`more_files` come on top of the firmware's; `uptime_us` is the timer's start."""
         lacking = missing()
         if lacking:
             raise UsageError(
@@ -110,7 +120,13 @@ class ChipTracer:
         }
         files["/main.py"] = (device_folder() / "main.py").read_bytes()
         files["/profile.bin"] = seal(record)
-        self.chip = runner.Chip(files=files, bare=True, plant=plant_description(scenario, scaling))
+        files |= more_files or {}
+        self.chip = runner.Chip(
+            files=files,
+            bare=True,
+            plant=plant_description(scenario, scaling),
+            uptime_us=uptime_us,
+        )
         self.chip.let_pass(START_MS)
         self._port_name = ""
 

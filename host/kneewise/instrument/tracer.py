@@ -20,6 +20,7 @@ from kneewise.errors import (
     DeviceFaultError,
     LinkError,
     OutcomeUnknownError,
+    RefusedError,
     TrustError,
 )
 from kneewise.instrument.assemble import assemble
@@ -29,6 +30,7 @@ from kneewise.instrument.sweep import Reassembly, fetch
 from kneewise.instrument.trace import Trace
 from kneewise.link.clock import Probe, estimate
 from kneewise.link.port import Port, open_port
+from kneewise.link.refusals import UNKNOWN_SESSION
 from kneewise.link.session import Session
 
 log = logging.getLogger(__name__)
@@ -224,10 +226,13 @@ class Tracer:
         boot_nonce = self.device["boot_nonce"]
         try:
             return action()
-        except LinkError:
-            self._rejoin()
-            self._same_sweep(boot_nonce, sweep_id)
-            return (again or action)()
+        except (LinkError, RefusedError) as error:
+            # A device that was reset over an unbroken link knows no session.
+            if isinstance(error, RefusedError) and error.code != UNKNOWN_SESSION:
+                raise
+        self._rejoin()
+        self._same_sweep(boot_nonce, sweep_id)
+        return (again or action)()
 
     def _same_sweep(self, boot_nonce: int, sweep_id: bytes) -> None:
         """OutcomeUnknownError where the device was reset, or does not know of the sweep."""

@@ -9,6 +9,9 @@ from kneewire.hazards import HAZARDS
 from kneewire.messages import Message
 from kneewise.errors import RefusedError
 
+CODES = {text: code for code, text in catalogue.REFUSALS.items()}
+UNKNOWN_SESSION = CODES["unknown session"]
+
 _STEPS = {
     "unknown kind": "use firmware and host of the same version",
     "malformed": "use firmware and host of the same version",

@@ -1,0 +1,43 @@
+"""The firmware whole on an emulated chip, beside the plant of a scenario, for whole sweeps."""
+
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
+from typing import Any
+
+from chip import HERE
+
+from kneewise.emulator.chip import CHIP_DEVICE_ID, ChipTracer
+from kneewise.emulator.opener import profile_for, scaling_of
+from kneewise.emulator.scenario import Scenario
+from kneewise.instrument.tracer import Opened, Tracer
+
+
+@contextmanager
+def chip_for(
+    scenario: Scenario,
+    *,
+    board: str = "",
+    files: Mapping[str, str] | None = None,
+    uptime_us: int = 0,
+) -> Iterator[ChipTracer]:
+    """`board`: a file beside this one, to stand between the firmware and hal_rp2.py."""
+    held = {path: text.encode() for path, text in (files or {}).items()}
+    if board:
+        held["/emulated_board.py"] = (HERE / board).read_bytes()
+    profile = profile_for(scenario)
+    record = profile.record(CHIP_DEVICE_ID)
+    made = ChipTracer(scenario, scaling_of(profile), record, more_files=held, uptime_us=uptime_us)
+    try:
+        yield made
+    finally:
+        made.close()
+
+
+def tracer_on(made: ChipTracer) -> Tracer:
+    return Tracer(Opened(connect=made.connect, close=lambda: None, rung="chip"))
+
+
+def capacitor(farad: float, **more: Any) -> Scenario:
+    """Clear noon with another capacitor and without noise."""
+    bank = {"capacitance_f": farad}
+    return Scenario.default().varied(load=bank, board={"adc_noise_codes": 0.0}, **more)
