@@ -225,6 +225,26 @@ def test_a_call_is_bounded_so_that_the_pulse_is_renewed_in_between():
     check(filled, pairs)
 
 
+@pytest.mark.parametrize("bin_pairs", [1, 8, 16, 32, 64, 1024, 65536])
+def test_a_call_folds_in_few_pieces_whatever_a_bin_holds(bin_pairs):
+    """Each piece costs the interpreter 0.2 ms; at one piece a bin, bins of 32 fell behind."""
+    filled = capture(ring_pairs=4096)
+    feed_from_all(filled, sweep(4, 0, 2))
+    filled._bin_pairs = bin_pairs
+    filled.control[module.C_UNIT] = min(bin_pairs, module.UNIT_PAIRS)
+    pieces = []
+
+    def counted(ring, bins, control, fold=filled.fold):
+        pieces.append(int(control[module.C_UNITS]))
+        fold(ring, bins, control)
+
+    filled.fold = counted
+    before = filled.behind()
+    filled.drain(before + module.DRAIN_PAIRS + 1)
+    assert sum(pieces) * filled.control[module.C_UNIT] >= module.DRAIN_PAIRS - module.UNIT_PAIRS
+    assert len(pieces) <= 3
+
+
 def feed_from_all(filled, pairs: np.ndarray) -> None:
     for number, (v, i) in enumerate(pairs.tolist()):
         filled.ring[number] = v | i << 16
