@@ -6,6 +6,8 @@ from tracer.memory import Buffers
 
 GC_THRESHOLD = 8192
 
+loop = None  # the one tracer of this board, with the sweep that it holds
+
 
 def board():
     """The board that this firmware runs on: an emulator brings its own file."""
@@ -19,13 +21,20 @@ def board():
 
 
 def main():
-    """Serve until the host asks for the prompt; `main.py` calls this."""
-    # Collecting often keeps what lives long together; the heap is small and must not splinter.
-    gc.threshold(GC_THRESHOLD)
-    hal = board()
-    buffers = Buffers()
-    # Only now: what is compiled and loaded here would leave no room in one piece for the above.
-    from tracer.loop import Loop
+    """Serve until the host asks for the prompt.
 
-    gc.collect()
-    Loop(hal, buffers).run()
+    `main.py` calls this, and a host that finds the prompt does so again: what was held is still
+    held, and the session goes on.
+    """
+    global loop
+    if loop is None:
+        # Collecting often keeps what lives long together; the heap is small and must not splinter.
+        gc.threshold(GC_THRESHOLD)
+        hal = board()
+        buffers = Buffers()
+        # Only now: what is compiled and loaded here would leave no room in one piece for these.
+        from tracer.loop import Loop
+
+        gc.collect()
+        loop = Loop(hal, buffers)
+    loop.run()

@@ -33,6 +33,7 @@ HOST_LOST = const(7)
 NO_CURRENT = const(8)
 RING_OVERRUN = const(9)
 SUPERVISION_LOST = const(10)
+INTERRUPTED = const(11)
 
 
 class Result:
@@ -45,6 +46,7 @@ class Result:
         self.conversions = READ_CONVERSIONS
         self.capture_us = 0
         self.opened_us = 0
+        self.capturing = False
         self.conversions_lost = False
         self.pairs_written = 0
 
@@ -94,17 +96,23 @@ class Charge:
         self.rule = EndRule()
 
     def run(self, closed_limit_ms, outputs):
-        """Close, capture, open. `outputs` (the sequencer) is told what is commanded."""
+        """Close, capture, open. `outputs` (the sequencer) is told what is commanded.
+
+        Ctrl-C ends the charge as an abort would; what was measured is kept.
+        """
         hal = self.hal
         result = Result()
         profile = self.profile
         voltage_trip = profile.trip_code("voltage", profile["rated_mv"])
         current_trip = profile.trip_code("current", profile["rated_ma"])
+        self.capture.begin(0)
         try:
             hal.quiet_begin()
             self._before(result)
             self._prepare(outputs)
             result.end_reason = self._capture(result, closed_limit_ms, voltage_trip, current_trip)
+        except KeyboardInterrupt:
+            result.end_reason = INTERRUPTED
         finally:
             self._end(result, outputs)
         result.capture_us = hal.capture_began_us()
@@ -119,7 +127,8 @@ class Charge:
         try:
             hal.pulse(0)
             result.conversions_lost = hal.capture_stop()
-            result.pairs_written = hal.capture_written()
+            if result.capturing:
+                result.pairs_written = hal.capture_written()
             hal.supervise_end()
             self._open(outputs)
         except BaseException:
@@ -172,6 +181,7 @@ class Charge:
         unticked = pairs_a_ms * FIRST_MS
         lapsed = (pulse_us - PULSE_MARGIN_US) // hal.PAIR_US
 
+        result.capturing = True
         hal.capture_start()
         hal.supervise(voltage_trip, current_trip)
         self.ear.listen()

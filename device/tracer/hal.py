@@ -42,6 +42,9 @@ class Hal:
     fold_units = None
     """A faster stand-in for `fold_units` of capture.py, where the board has one."""
 
+    cobs_into = None
+    """A faster stand-in for `cobs_into` of coder.py, where the board has one."""
+
     # -- identity --------------------------------------------------------------------
 
     def device_id(self):

@@ -23,6 +23,7 @@ from machine import Pin
 from micropython import const
 
 from tracer import hal
+from tracer.coder_thumb import cobs_into
 from tracer.fold_thumb import fold_units
 from tracer.pulse_pio import BoundedPulse
 from tracer.usb_serial import UsbSerial
@@ -298,6 +299,7 @@ class Hal(hal.Hal):
     ring = uctypes.bytearray_at(_ring_at, 1 << _RING_BITS)  # type: ignore[assignment]
 
     fold_units = staticmethod(fold_units)  # type: ignore[assignment]
+    cobs_into = staticmethod(cobs_into)  # type: ignore[assignment]
 
     def __init__(self):
         self._pulse = BoundedPulse()

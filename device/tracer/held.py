@@ -1,21 +1,26 @@
 """The finished sweep, held until the host has it: knots as wire records, and its manifest."""
 
-from kneewire.messages import KNOT_BYTES
+from kneewire.catalogue import MAX_FRAME
+from kneewire.framing import CRC_BYTES
+from kneewire.messages import KNOT_BYTES, pack
 from kneewire.seam import crc32
+from tracer import coder
 from tracer import knots as placing
+from tracer.memory import MAX_FRAME as FRAME_BYTES
 from tracer.memory import RECORD_BYTES
 
 NO_ID = bytes(16)
 
-if RECORD_BYTES != KNOT_BYTES:
+if (RECORD_BYTES, FRAME_BYTES) != (KNOT_BYTES, MAX_FRAME):
     raise ValueError("memory.py and the catalogue disagree")
 
 
 class Held:
     """One sweep at most, in the buffer for its records."""
 
-    def __init__(self, buffers):
+    def __init__(self, buffers, cobs_into=None):
         self._buffers = buffers
+        self._cobs_into = cobs_into or coder.cobs_into
         self.count = 0
         self.sweep_id = NO_ID
         self.manifest = {}
@@ -41,7 +46,6 @@ class Held:
             pair_us,
             self._buffers,
         )
-        self.sweep_id = sweep_id
         self.manifest = {
             "sweep_id": sweep_id,
             "end_reason": result.end_reason,
@@ -62,9 +66,19 @@ class Held:
             "residual_conversions": 0,
             "profile_crc": profile.crc,
         }
+        self.sweep_id = sweep_id  # last: from here on it is there, whole
 
-    def knots_between(self, first, count):
-        """The records of `count` knots."""
-        return bytes(
-            memoryview(self._buffers.records)[first * KNOT_BYTES : (first + count) * KNOT_BYTES]
-        )
+    def block(self, session, sequence, first, count):
+        """The frame of one block, of `count` knots from `first` on; good until the next call."""
+        body = self._buffers.body
+        head = pack("block", session, sequence, {"first": first, "data": b""})
+        place = len(head)
+        body[:place] = head
+        body[place - 1] = count
+        after = place + count * KNOT_BYTES
+        records = memoryview(self._buffers.records)
+        body[place:after] = records[first * KNOT_BYTES : (first + count) * KNOT_BYTES]
+        crc = crc32(memoryview(body)[:after])
+        body[after : after + CRC_BYTES] = crc.to_bytes(CRC_BYTES, "little")
+        coded = self._buffers.coded
+        return memoryview(coded)[: self._cobs_into(body, after + CRC_BYTES, coded)]

@@ -2,7 +2,14 @@
 
 from tracer import sequencer as states
 from tracer.capture import Capture
-from tracer.charge import OVER_CURRENT, OVER_VOLTAGE, STOP_LOOP, SUPERVISION_LOST, Charge
+from tracer.charge import (
+    INTERRUPTED,
+    OVER_CURRENT,
+    OVER_VOLTAGE,
+    STOP_LOOP,
+    SUPERVISION_LOST,
+    Charge,
+)
 from tracer.ear import Ear
 from tracer.held import Held
 from tracer.interlocks import UNIT_NONE
@@ -14,24 +21,29 @@ PROFILE_FILE = "profile.bin"
 
 
 class Loop:
-    """One tracer: `run` serves until the host asks for the prompt."""
+    """One tracer: `run` serves until the host asks for the prompt, and may be run again."""
 
     def __init__(self, hal, buffers, profile_file=PROFILE_FILE):
         self.hal = hal
         self.profile, _ = load(profile_file, hal.device_id())
         self.sequencer = Sequencer(hal, self.profile)
-        self.held = Held(buffers)
+        self.held = Held(buffers, hal.cobs_into)
         self.capture = Capture(hal.ring, hal.RING_PAIRS, buffers, hal.fold_units)
         self.ear = Ear(hal)
+        self.left = False  # to the prompt, at least once
+        self.bleeding_for = None  # the sweep whose bleed is under way
         self.service = Service(hal, self.profile, self.sequencer, self.held)
 
     def run(self):
         try:
+            if self.left:
+                self.sequencer.resume()
             while True:
                 self.step()
         except Leave:
             pass
         finally:
+            self.left = True
             self.leave()
             self.hal.watchdog(0)
 
@@ -42,12 +54,15 @@ class Loop:
     def step(self):
         """One turn of the loop."""
         self.service.poll()
-        if self.service.fired is not None:
-            self.charge(self.service.fired)
+        sweep_id = self.service.fired
+        if sweep_id is not None:
+            # Spent before it is carried out: no way out of the charge may lead to a second one.
             self.service.fired = None
+            self.charge(sweep_id)
             self.service.feed(self.ear.kept())
         self.sequencer.tick()
         self.note_residual()
+        self.tell_bleed_ended()
         self.sequencer.pause()
 
     def charge(self, sweep_id):
@@ -69,6 +84,18 @@ class Loop:
             sequencer.fault(finding)
         service.charge_ended(sweep_id, result.end_reason)
         self.held.keep(sweep_id, service.armed_knots, result, self.capture, self.hal, self.profile)
+        self.bleeding_for = sweep_id
+        if result.end_reason == INTERRUPTED:
+            raise KeyboardInterrupt
+
+    def tell_bleed_ended(self):
+        """Once for each sweep, so that a host need not ask again and again."""
+        state = self.sequencer.state
+        if self.bleeding_for is not None and state != states.BLEEDING:
+            self.service.send_message(
+                "bleed_ended", 0, {"sweep_id": self.bleeding_for, "state": state}
+            )
+            self.bleeding_for = None
 
     def note_residual(self):
         """Once the bleed has done its work, the manifest says what it left."""

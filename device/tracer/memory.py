@@ -10,6 +10,7 @@ CONTROL_WORDS = const(13)
 UNIT_PAIRS = const(16)
 SCRATCH_UNITS = const(48)
 MAX_KNOTS = const(512)
+MAX_FRAME = const(256)  # compared in held.py, as is the next
 RECORD_BYTES = const(40)  # a knot record; compared with the catalogue in held.py
 
 
@@ -24,6 +25,8 @@ class Buffers:
         self.scratch = array("I", range(BIN_WORDS * SCRATCH_UNITS))
         self.wrapped = array("I", range(UNIT_PAIRS))
         self.records = bytearray(MAX_KNOTS * RECORD_BYTES)
+        self.body = bytearray(MAX_FRAME)
+        self.coded = bytearray(MAX_FRAME + 3)  # two bytes of COBS, the delimiter
         # For placing the knots (`knots.py`).
         self.xs = array("i", range(BINS))
         self.ys = array("i", range(BINS))

@@ -29,6 +29,7 @@ EV_CHARGED = const(4)
 EV_BLED = const(5)
 EV_FAULT = const(6)
 EV_CLEAR = const(7)
+EV_RESUME = const(8)
 
 TRANSITIONS = {
     (SAFE, EV_ARM): ARMED,
@@ -43,11 +44,17 @@ TRANSITIONS = {
     (BLEEDING, EV_FAULT): FAULT,
     (FAULT, EV_FAULT): FAULT,
     (FAULT, EV_CLEAR): BLEEDING,
+    (SAFE, EV_RESUME): BLEEDING,
+    (ARMED, EV_RESUME): BLEEDING,
+    (CHARGING, EV_RESUME): BLEEDING,
+    (BLEEDING, EV_RESUME): BLEEDING,
+    (FAULT, EV_RESUME): FAULT,
 }
 
 CONVERSIONS = const(64)  # averaged in each reading
 LOOK_MS = const(100)  # between looks at the capacitor while safe; ten times as often bleeding
 WATCHDOG_MS = const(2000)
+WELDED = const(2)  # the hazard
 NO_FINDING = (0, 0, 0, 0)
 
 
@@ -86,6 +93,15 @@ class Sequencer:
             self._start_bleed()
         # On from arming until safe and bled; only then may the board stand still.
         self.hal.watchdog(0 if self.state == SAFE else WATCHDOG_MS)
+
+    def resume(self):
+        """Begin, or begin again after the prompt, where nothing was watched over."""
+        self.make_safe()
+        if self.profile is None:
+            return
+        self.event(EV_RESUME)
+        if self.finding[0] == WELDED:
+            self._release_bleed()
 
     def make_safe(self):
         """Contact open, bleed engaged."""
@@ -127,12 +143,15 @@ class Sequencer:
         self.finding = finding
         self.event(EV_FAULT)
         self.make_safe()
-        if finding[0] == 2:
-            # A bleed across a live source would burn.
-            self.hal.bleed(False)
-            self.bleed_engaged = False
+        if finding[0] == WELDED:
+            self._release_bleed()
         elif begins:
             self._start_bleed()
+
+    def _release_bleed(self):
+        # A bleed across a live source would burn.
+        self.hal.bleed(False)
+        self.bleed_engaged = False
 
     def clear(self):
         """Leave a fault, through bleeding, which looks anew at what is wrong."""
@@ -184,9 +203,10 @@ class Sequencer:
         self._bleed_start_us = self.hal.now_us()
 
     def _look_at_bleed(self, now):
+        # An eighth below the limit that arming will ask for, so that noise does not refuse it.
         limit_mv = self._limit_mv()
         capacitor_mv = self._capacitor_mv()
-        if capacitor_mv <= limit_mv:
+        if capacitor_mv <= limit_mv * 7 // 8:
             if self.state == BLEEDING:
                 self.event(EV_BLED)
             return
@@ -198,5 +218,5 @@ class Sequencer:
             limit_mv,
         )
         # A contact may weld in the charge that ended in another fault.
-        if finding is not None and self.finding[0] not in (2, finding[0]):
+        if finding is not None and self.finding[0] not in (WELDED, finding[0]):
             self.fault(finding)

@@ -86,7 +86,7 @@ class Service:
         """Write one frame; False where the host has stopped reading and it was cut short."""
         if self._cut:
             # End the frame that was cut, so that only that one is lost.
-            frame = framing.DELIMITER + frame
+            self.hal.link_write(framing.DELIMITER)
         self._cut = self.hal.link_write(frame) < len(frame)
         return not self._cut
 
@@ -297,12 +297,14 @@ class Service:
         first = request["first"]
         self._in_range(first, 0, self.held.count - 1)
         self._in_range(request["count"], 1, self.held.count - first)
-        count = min(request["count"], WINDOW * KNOTS_A_BLOCK)
+        self._in_range(request["a_block"], 0, KNOTS_A_BLOCK)
+        a_block = request["a_block"] or KNOTS_A_BLOCK
+        count = min(request["count"], WINDOW * a_block)
         place = first
         while place < first + count:
-            many = min(KNOTS_A_BLOCK, first + count - place)
-            values = {"first": place, "data": self.held.knots_between(place, many)}
-            if not self.send_message("block", request.sequence, values):
+            many = min(a_block, first + count - place)
+            frame = self.held.block(self.session, request.sequence, place, many)
+            if not self.send(frame):
                 break
             place += many
         return {"first": first, "count": count}

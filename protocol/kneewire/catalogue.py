@@ -48,6 +48,7 @@ END_REASONS = {
     8: "no current",
     9: "ring overrun",
     10: "supervision lost",
+    11: "interrupted",
 }
 
 REFUSALS = {
@@ -206,6 +207,7 @@ MESSAGES: "dict[int, tuple[str, int, bool, bool, tuple[tuple[str, str], ...]]]" 
         False,
         (("sweep_id", "b16"), ("end_reason", "u8")),
     ),
+    0xE2: ("bleed_ended", TO_HOST, False, False, (("sweep_id", "b16"), ("state", "u8"))),
     0x30: ("read_manifest", TO_DEVICE, False, False, ()),
     0xB0: (
         "manifest",
@@ -242,6 +244,7 @@ MESSAGES: "dict[int, tuple[str, int, bool, bool, tuple[tuple[str, str], ...]]]" 
             ("sweep_id", "b16"),
             ("first", "u16"),
             ("count", "u16"),
+            ("a_block", "u8"),
         ),
     ),
     0xB1: (

@@ -8,6 +8,10 @@ byte is Ctrl-C and empties the input ring. So after COBS, in that direction only
 from kneewire.seam import cobs_decode, cobs_encode, crc32
 
 DELIMITER = b"\x00"
+# Before each frame toward the device: should a MicroPython prompt be there in the firmware's
+# place, "#" makes the line a comment, and a line that is not empty takes no control byte for an
+# order. A decoder ignores a run of this byte alone.
+GUARD = b"#" + DELIMITER
 CRC_BYTES = 4
 
 # Why a run of bytes between delimiters is not a frame.
@@ -97,7 +101,7 @@ class Decoder:
             if self._overflow:
                 out.append(Bad(BAD_LONG, bytes(self._run)))
                 self.bad += 1
-            elif self._run:
+            elif self._run and self._run != b"#":
                 item = decode_run(bytes(self._run), self.toward_device)
                 if isinstance(item, Bad):
                     self.bad += 1

@@ -40,6 +40,7 @@ class Rig:
         self.ear = Ear(hal)
         self.ear.expect(ABORT)
         self.capture = Capture(board.ring, board.RING_PAIRS, Buffers())
+        self.result: Any = None
         self.charge = module.Charge(hal, profile(**changes), self.capture, self.ear)
 
     def run(self, closed_limit_ms: int = 120_000) -> Any:

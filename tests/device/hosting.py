@@ -23,6 +23,7 @@ class Device:
 
     def __init__(self, board: FakeBoard, folder: Path, *, bare: bool = False, **changes: Any):
         self.board = board
+        self.bled: list[Message] = []  # the notices that a bleed has ended
         path = folder / "profile.bin"
         if not bare:
             path.write_bytes(seal(record(**changes)))
@@ -62,7 +63,9 @@ class Device:
         self.board.sent.clear()
         items = self.decoder.feed(data)
         assert not [item for item in items if isinstance(item, framing.Bad)]
-        return [unpack(item) for item in items]
+        messages = [unpack(item) for item in items]
+        self.bled += [message for message in messages if message.name == "bleed_ended"]
+        return [message for message in messages if message.name != "bleed_ended"]
 
     def ask(self, name: str, values: dict[str, Any] | None = None, **header: int) -> Message:
         """One request, one answer."""

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import pytest
 from fake_board import FakeBoard
-from hosting import SWEEP_ID, Device, loop_module, refusal, service_module
+from hosting import STATES, SWEEP_ID, Device, loop_module, refusal, service_module
 from test_service import WRONG_STATE
 
 from kneewise.emulator.firmware import firmware_module
@@ -119,6 +119,73 @@ def test_an_aborted_sweep_is_held_as_one(device):
     assert ended["end_reason"] == charge.ABORTED
     assert answer.name == "abort_reply"
     assert device.ask("read_manifest")["end_reason"] == charge.ABORTED
+
+
+def test_the_end_of_the_bleed_is_told_once_for_each_sweep(device):
+    device.sweep()
+    assert device.bled == []
+    device.turns(ms=3000)
+    device.heard()
+    (told,) = device.bled
+    assert told["sweep_id"] == SWEEP_ID
+    assert (STATES[told["state"]], device.state()) == ("safe", "safe")
+
+
+def test_after_ctrl_c_in_mid_charge_the_sweep_so_far_is_held_and_the_session_goes_on(device):
+    def interrupt(*values):
+        del board.capture_written
+        raise KeyboardInterrupt
+
+    board = device.board
+    device.fire(device.arm()["token"])
+    board.after_closing(3000, lambda: setattr(board, "capture_written", interrupt))
+    with pytest.raises(KeyboardInterrupt):
+        device.loop.run()
+    (ended,) = device.heard()
+    assert ended["end_reason"] == charge.INTERRUPTED
+    assert (board.relay_closed, board.bleed_engaged, board.quiet) == (False, True, False)
+    capacitor_v = board.capacitor_v
+    assert capacitor_v > 5
+    # Re-entered from the prompt: nothing is taken as empty before it is measured.
+    board.incoming += device.frame("prompt")
+    device.loop.run()
+    device.heard()
+    assert device.state() == "bleeding"
+    manifest = device.ask("read_manifest")
+    assert (manifest["sweep_id"], manifest["end_reason"]) == (SWEEP_ID, charge.INTERRUPTED)
+    assert 500 <= manifest["pairs"] <= 1000
+    assert manifest["knots"] == 32
+    device.turns(ms=3000)
+    device.heard()
+    assert [STATES[told["state"]] for told in device.bled] == ["safe"]
+
+
+def test_before_the_capture_ctrl_c_leaves_a_sweep_without_pairs_not_the_last_one(device):
+    device.sweep()
+    device.turns(lambda: device.state() == "safe")
+    device.ask("acknowledge", {"sweep_id": SWEEP_ID})
+    device.fire(device.arm()["token"], bytes(16)[:-1] + b"2")
+
+    def interrupt(*values):
+        del device.board.bleed
+        raise KeyboardInterrupt
+
+    device.board.bleed = interrupt
+    with pytest.raises(KeyboardInterrupt):
+        device.loop.run()
+    device.heard()
+    manifest = device.ask("read_manifest")
+    assert (manifest["pairs"], manifest["knots"], manifest["ring_overruns"]) == (0, 0, 0)
+
+
+def test_a_latched_weld_keeps_the_bleed_released_over_the_prompt(device):
+    device.board.welded = True
+    device.board.capacitor_v = device.board.source_v
+    device.turns(lambda: device.state() == "fault", ms=20_000)
+    device.board.safe()  # as main.py leaves the pins
+    device.loop.sequencer.resume()
+    assert device.state() == "fault"
+    assert not device.board.bleed_engaged
 
 
 def test_a_dark_source_gives_a_sweep_without_knots(device):

@@ -157,7 +157,9 @@ def test_a_sweep_is_told_held_and_fetched_whole(device):
     assert (status["held"], status["sweep_id"]) == (1, SWEEP_ID)
     manifest = device.ask("read_manifest")
     assert (manifest["sweep_id"], manifest["knots"]) == (SWEEP_ID, 32)
-    answers = device.say(device.frame("fetch", {"sweep_id": SWEEP_ID, "first": 0, "count": 32}))
+    answers = device.say(
+        device.frame("fetch", {"sweep_id": SWEEP_ID, "first": 0, "count": 32, "a_block": 0})
+    )
     assert [answer.name for answer in answers[-1:]] == ["fetch_reply"]
     assert answers[-1]["count"] == 32
     data = b"".join(answer["data"] for answer in answers[:-1])
@@ -170,7 +172,7 @@ def test_a_sweep_is_told_held_and_fetched_whole(device):
 
 def test_a_gap_is_fetched_as_it_was_asked_for(device):
     device.sweep()
-    asked = {"sweep_id": SWEEP_ID, "first": 7, "count": 11}
+    asked = {"sweep_id": SWEEP_ID, "first": 7, "count": 11, "a_block": 0}
     *blocks, end = device.say(device.frame("fetch", asked))
     assert [block["first"] for block in blocks] == list(range(7, 18, KNOTS_A_BLOCK))
     assert (end["first"], end["count"]) == (7, 11)
@@ -180,7 +182,7 @@ def test_a_gap_is_fetched_as_it_was_asked_for(device):
 @pytest.mark.parametrize(("first", "count"), [(32, 1), (0, 0), (0, 33), (31, 2), (65535, 65535)])
 def test_knots_that_are_not_there_are_out_of_range(device, first, count):
     device.sweep()
-    asked = {"sweep_id": SWEEP_ID, "first": first, "count": count}
+    asked = {"sweep_id": SWEEP_ID, "first": first, "count": count, "a_block": 0}
     assert refusal(device.ask("fetch", asked)) == OUT_OF_RANGE
 
 
@@ -189,7 +191,7 @@ def test_a_burst_is_no_longer_than_its_window(device):
     device.turns(ms=1)
     device.heard()
     *blocks, end = device.say(
-        device.frame("fetch", {"sweep_id": SWEEP_ID, "first": 0, "count": 200})
+        device.frame("fetch", {"sweep_id": SWEEP_ID, "first": 0, "count": 200, "a_block": 0})
     )
     assert len(blocks) == 16
     assert end["count"] == 16 * KNOTS_A_BLOCK
@@ -198,7 +200,9 @@ def test_a_burst_is_no_longer_than_its_window(device):
 def test_a_burst_stops_where_the_host_stops_reading(device):
     device.sweep()
     device.board.write_room = 400
-    device.board.incoming += device.frame("fetch", {"sweep_id": SWEEP_ID, "first": 0, "count": 32})
+    device.board.incoming += device.frame(
+        "fetch", {"sweep_id": SWEEP_ID, "first": 0, "count": 32, "a_block": 0}
+    )
     device.service.poll()
     assert len(device.board.sent) == 400
     device.board.write_room = None
@@ -227,7 +231,7 @@ def test_a_repeated_acknowledge_has_the_answer_of_the_first(device):
 
 def test_without_a_held_sweep_there_is_none_to_read(device):
     assert refusal(device.ask("read_manifest")) == NO_SWEEP
-    asked = {"sweep_id": SWEEP_ID, "first": 0, "count": 1}
+    asked = {"sweep_id": SWEEP_ID, "first": 0, "count": 1, "a_block": 0}
     assert refusal(device.ask("fetch", asked)) == NO_SWEEP
     device.sweep()
     assert refusal(device.ask("fetch", {**asked, "sweep_id": OTHER_ID})) == NO_SWEEP

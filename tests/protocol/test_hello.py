@@ -26,7 +26,7 @@ from kneewire.seam import crc32
 from kneewise.errors import LinkError
 from kneewise.link.session import HELLO_SEQUENCE, LETTERS, Session
 
-REPEATS = 8  # as many as a session sends in its deadline
+REPEATS = 11
 CODE_AND_VERSION = {0x12, 0x06, PROTOCOL[0], PROTOCOL[1]}  # COBS codes and the version bytes
 
 

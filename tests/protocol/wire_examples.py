@@ -96,6 +96,7 @@ EXAMPLES: dict[str, dict[str, Any]] = {
     "clear_fault": {},
     "clear_fault_reply": {"state": 0},
     "charge_ended": {"sweep_id": SWEEP_ID, "end_reason": 1},
+    "bleed_ended": {"sweep_id": SWEEP_ID, "state": 0},
     "read_manifest": {},
     "manifest": {
         "sweep_id": SWEEP_ID,
@@ -117,7 +118,7 @@ EXAMPLES: dict[str, dict[str, Any]] = {
         "residual_conversions": 64,
         "profile_crc": 0x8899AABB,
     },
-    "fetch": {"sweep_id": SWEEP_ID, "first": 6, "count": 258},
+    "fetch": {"sweep_id": SWEEP_ID, "first": 6, "count": 258, "a_block": 3},
     "fetch_reply": {"first": 6, "count": 90},
     "block": {"first": 515, "data": b""},  # the maker puts KNOTS here
     "acknowledge": {"sweep_id": SWEEP_ID},

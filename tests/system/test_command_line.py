@@ -19,6 +19,7 @@ from kneewire import catalogue, framing
 from kneewire.messages import HEADER_BYTES, pack, unpack
 from kneewise.archive.store import load
 from kneewise.emulator.converters import Scaling
+from kneewise.emulator.opener import DEVICE_ID, profile_for, scaling_of
 from kneewise.emulator.process import ProcessTracer
 from kneewise.emulator.scenario import Scenario, example_text
 
@@ -172,7 +173,8 @@ def test_a_scenario_that_cannot_be(text, part, tmp_path):
 @needs_micropython
 def test_a_prompt_instead_of_firmware(tmp_path):
     """A board without firmware shows MicroPython's prompt; the user must be told just that."""
-    tracer = ProcessTracer(Scenario.default(), Scaling(), b"", b"KNEEWISE", program="")
+    bare = "import sys\nsys.path[:] = []\n"
+    tracer = ProcessTracer(Scenario.default(), Scaling(), b"", b"KNEEWISE", program=bare)
     try:
         done = run("sweep", "--on", tracer.port_name, folder=tmp_path)
         assert_message(done, 1, "a MicroPython prompt", "the Kneewise firmware", "reset the board")
@@ -181,12 +183,26 @@ def test_a_prompt_instead_of_firmware(tmp_path):
 
 
 @needs_micropython
+def test_a_firmware_left_at_the_prompt_is_started_from_there(tmp_path):
+    program = "print('main.py did not get far')\n"
+    profile = profile_for(Scenario.default())
+    record = profile.record(DEVICE_ID)
+    values = (Scenario.default(), scaling_of(profile), record, DEVICE_ID)
+    tracer = ProcessTracer(*values, program=program)
+    try:
+        done = run("sweep", "--on", tracer.port_name, "--json", folder=tmp_path)
+        assert done.returncode == 0, done.stderr
+    finally:
+        tracer.close()
+
+
+@needs_micropython
 def test_a_firmware_that_crashes_at_start(tmp_path):
-    program = "raise OSError('flash is worn')\n"
+    program = "import sys\nsys.path[:] = []\nraise OSError('flash is worn')\n"
     tracer = ProcessTracer(Scenario.default(), Scaling(), b"", b"KNEEWISE", program=program)
     try:
         done = run("sweep", "--on", tracer.port_name, folder=tmp_path)
-        assert_message(done, 1, "the Kneewise firmware")
+        assert_message(done, 1, "OSError: flash is worn", "the Kneewise firmware")
     finally:
         tracer.close()
 

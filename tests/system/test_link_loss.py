@@ -96,14 +96,14 @@ def test_reset_after_fire_is_outcome_unknown_and_never_a_second_fire(bench, rung
     """After a reset the host cannot know whether the contact closed: it must not close it."""
     one = bench(rung)
     tracer = one.tracer()
-    wait = type(tracer._session).wait_notice
+    wait = type(tracer._session).wait_quiet
 
     def reset_instead(session, *args):
         one.emulated.unplug()
         one.emulated.plug()
         return wait(session, *args)
 
-    monkeypatch.setattr(type(tracer._session), "wait_notice", reset_instead)
+    monkeypatch.setattr(type(tracer._session), "wait_quiet", reset_instead)
     closings = [entry for entry in one.board.record if entry[1:] == ("pulse", 1)]
     with pytest.raises(OutcomeUnknownError, match="reset after it was told to fire"):
         tracer.sweep()
@@ -116,14 +116,14 @@ def test_a_session_that_the_device_does_not_know_is_opened_anew_and_the_sweep_fe
 ):
     one = bench(rung)
     tracer = one.tracer()
-    wait = type(tracer._session).wait_notice
+    wait = type(tracer._session).wait_quiet
 
     def forget(session, *args):
         found = wait(session, *args)
         session.session ^= 1
         return found
 
-    monkeypatch.setattr(type(tracer._session), "wait_notice", forget)
+    monkeypatch.setattr(type(tracer._session), "wait_quiet", forget)
     trace = tracer.sweep()
     assert trace.sound
     closings = [entry for entry in one.board.record if entry[1:] == ("switch_contact", 1)]

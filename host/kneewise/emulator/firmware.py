@@ -29,7 +29,7 @@ from kneewise.emulator.board import OPS
 # What the wire's fields and hazards mean: for people, not for the firmware's memory.
 _PROSE = ("hazards.py", "meanings.py", "spec.py")
 # Written in the RP2040's own instructions, or for its modules.
-_ARM_ONLY = ("fold_thumb.py", "hal_rp2.py", "pulse_pio.py", "usb_serial.py")
+_ARM_ONLY = ("fold_thumb.py", "coder_thumb.py", "hal_rp2.py", "pulse_pio.py", "usb_serial.py")
 _ONBOARD = Path(__file__).parent / "onboard"
 _ONBOARD_FILES = ("hal_emulated.py", "emulated_board.py", "machine.py")
 

@@ -12,12 +12,12 @@ import numpy as np
 
 from kneewire import catalogue
 from kneewire.fields import FIXED
-from kneewire.messages import KNOT_BYTES, Message
+from kneewire.messages import KNOT_BYTES, KNOTS_A_BLOCK, Message
 from kneewise.errors import LinkError
 from kneewise.instrument.trace import RawKnots
 from kneewise.link.session import Session
 
-TRIES = 12
+TRIES = 40  # bursts in a row that bring nothing
 
 
 class Reassembly:
@@ -51,6 +51,10 @@ class Reassembly:
         runs = np.split(missing, np.flatnonzero(np.diff(missing) > 1) + 1)
         return [(int(run[0]), len(run)) for run in runs]
 
+    def missing(self) -> int:
+        """Knots that have not come."""
+        return int(self.count - np.count_nonzero(self._have))
+
     def ask_again(self) -> None:
         """From now on every block that comes is one that had to be asked for again."""
         self._asked_again = True
@@ -70,27 +74,48 @@ class Reassembly:
 
 
 def fetch(session: Session, manifest: Message) -> Reassembly:
-    """All knots of a manifest; gaps are asked for after each burst. LinkError."""
+    """All knots of a manifest; gaps are asked for after each burst. LinkError.
+
+    Where most of what was asked for is lost, smaller blocks are asked for.
+    """
     reassembly = Reassembly(manifest)
-    sweep_id = manifest["sweep_id"]
-    for _ in range(TRIES):
+    a_block = KNOTS_A_BLOCK
+    fruitless = 0
+    while fruitless < TRIES:
+        missing = reassembly.missing()
         for first, count in reassembly.gaps():
-            start, after = first, first + count
-            while start < after:
-                wanted = {"sweep_id": sweep_id, "first": start, "count": after - start}
-                reply = session.request("fetch", wanted, on_block=reassembly.take)
-                start += max(reply["count"], 1)
-        if not reassembly.gaps():
+            _fetch_run(session, reassembly, first, count, a_block)
+        left = reassembly.missing()
+        if not left:
             if reassembly.crc_ok():
                 return reassembly
             reassembly.forget()
+        fruitless = fruitless + 1 if left == missing else 0
+        if 2 * left > missing:
+            a_block = max(1, a_block // 3)
         reassembly.ask_again()
     raise LinkError(
-        f"fetching sweep {sweep_id.hex()[:8]}",
-        found=f"{len(reassembly.gaps())} gaps after {TRIES} bursts",
+        f"fetching sweep {manifest['sweep_id'].hex()[:8]}",
+        found=f"{reassembly.missing()} of {reassembly.count} knots missing, and nothing in the "
+        f"last {TRIES} bursts ({session.frames.summary()})",
         expected="all knots, with the CRC of the manifest",
         next_step="use a shorter or better cable, then sweep again: the held sweep comes first",
     )
+
+
+def _fetch_run(
+    session: Session, reassembly: Reassembly, first: int, count: int, a_block: int
+) -> None:
+    """Ask once for each part of a run of knots that fits into the device's window."""
+    most = session.device["window"] * a_block
+    for start in range(first, first + count, most):
+        wanted = {
+            "sweep_id": reassembly.manifest["sweep_id"],
+            "first": start,
+            "count": min(most, first + count - start),
+            "a_block": a_block,
+        }
+        session.burst(wanted, reassembly.take)
 
 
 def unpack_records(data: bytes) -> RawKnots:

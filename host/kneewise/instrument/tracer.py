@@ -30,7 +30,7 @@ from kneewise.instrument.sweep import Reassembly, fetch
 from kneewise.instrument.trace import Trace
 from kneewise.link.clock import Probe, estimate
 from kneewise.link.port import Port, open_port
-from kneewise.link.refusals import UNKNOWN_SESSION
+from kneewise.link.refusals import CODES
 from kneewise.link.session import Session
 
 log = logging.getLogger(__name__)
@@ -41,6 +41,9 @@ BLEED_S = 60.0
 FAULT_BLEED_S = 5.0
 SAFE_TO_SHOW_V = 1.0  # in a fault, readings are waited for down to here
 REJOIN_S = 20.0
+NOTICE_S = 5.0
+MANIFEST_S = 10.0
+ARMINGS = 3
 SETTLE_S = 0.25
 
 T = TypeVar("T")
@@ -178,17 +181,22 @@ class Tracer:
     ) -> Trace:
         progress("getting ready")
         self._wait_safe()
-        progress("arming")
-        armed = self._session.request(
-            "arm",
-            {
-                "knots": knots,
-                "closed_limit_ms": round(limit_s * 1000),
-                "confirmed": 1 if self.source_stands_alone else 0,
-            },
-        )
         sweep_id = secrets.token_bytes(16)
-        self._fire(armed["token"], sweep_id, progress)
+        values = {
+            "knots": knots,
+            "closed_limit_ms": round(limit_s * 1000),
+            "confirmed": 1 if self.source_stands_alone else 0,
+        }
+        for left in reversed(range(ARMINGS)):
+            progress("arming")
+            token = self._session.request("arm", values)["token"]
+            try:
+                self._fire(token, sweep_id, progress)
+                break
+            except RefusedError as error:
+                # Refused means not fired, for good: on a bad link the token has died on its way.
+                if not left or error.code not in (CODES["bad token"], CODES["wrong state"]):
+                    raise
         progress("bleeding")
         trace = self._after_fire(sweep_id, lambda: self._finish(sweep_id, progress))
         self._hand_over(trace, sweep_id, keep)
@@ -211,10 +219,8 @@ class Tracer:
         progress("charging")
 
         def go() -> None:
-            fired = session.request(
-                "fire", {"token": token, "sweep_id": sweep_id}, deadline_s=5.0, again_s=1.0
-            )
-            session.wait_notice("charge_ended", fired["quiet_ms"] / 1000, session.beat)
+            fired = session.request("fire", {"token": token, "sweep_id": sweep_id})
+            session.wait_quiet(fired["quiet_ms"] / 1000)
 
         # The charge may be under way when the link goes: whatever happened, the device knows.
         self._after_fire(sweep_id, go, lambda: None)
@@ -228,7 +234,7 @@ class Tracer:
             return action()
         except (LinkError, RefusedError) as error:
             # A device that was reset over an unbroken link knows no session.
-            if isinstance(error, RefusedError) and error.code != UNKNOWN_SESSION:
+            if isinstance(error, RefusedError) and error.code != CODES["unknown session"]:
                 raise
         self._rejoin()
         self._same_sweep(boot_nonce, sweep_id)
@@ -250,10 +256,15 @@ class Tracer:
             self._session.abort()
             raise OutcomeUnknownError(
                 f"sweep {sweep_id.hex()[:8]}",
-                found="the device holds no such sweep: the fire did not arrive",
+                found="the device holds no such sweep: the fire did not arrive, or the firmware "
+                "failed in the charge" + self._crash(),
                 expected="a held sweep",
-                next_step="nothing was closed; sweep again",
+                next_step="measure the capacitor, then sweep again",
             )
+
+    def _crash(self) -> str:
+        tracebacks = self._session.tracebacks
+        return f" ({tracebacks[-1].splitlines()[-1]})" if tracebacks else ""
 
     def _rejoining(self, action: Callable[[], T]) -> T:
         try:
@@ -280,18 +291,9 @@ class Tracer:
 
     def _finish(self, sweep_id: bytes, progress: Callable[[str], None]) -> Trace:
         """Wait for the bleed, fetch the held sweep, make the trace."""
-        status, fault = self._wait_bled()
-        if status.held_sweep != sweep_id.hex():
-            if fault is not None:
-                raise fault
-            raise TrustError(
-                f"sweep {sweep_id.hex()[:8]}",
-                found=f"the device holds {status.held_sweep or 'no sweep'}",
-                expected="this sweep",
-                next_step="sweep again; another program may be talking to the tracer",
-            )
+        fault = self._await_bleed(sweep_id)
         progress("fetching")
-        manifest = self._session.request("read_manifest")
+        manifest = self._manifest(sweep_id, fault)
         reassembly = fetch(self._session, manifest)
         probes = [self._probe() for _ in range(CLOCK_PROBES)]
         try:
@@ -300,6 +302,37 @@ class Tracer:
             # Not a curve: held on, it would only stand in the way of the next sweep.
             self._session.request("acknowledge", {"sweep_id": sweep_id})
             raise (fault or error) from None
+
+    def _manifest(self, sweep_id: bytes, fault: DeviceFaultError | None) -> Message:
+        try:
+            manifest = self._session.request("read_manifest", deadline_s=MANIFEST_S)
+            held = manifest["sweep_id"]
+        except RefusedError as error:
+            if error.code != CODES["no held sweep"]:
+                raise
+            held = b""
+        if held == sweep_id:
+            return manifest
+        if fault is not None:
+            raise fault
+        raise TrustError(
+            f"sweep {sweep_id.hex()[:8]}",
+            found=f"the device holds {held.hex() or 'no sweep'}",
+            expected="this sweep",
+            next_step="sweep again; another program may be talking to the tracer",
+        )
+
+    def _await_bleed(self, sweep_id: bytes) -> DeviceFaultError | None:
+        """Until the bleed after a charge has ended, by its notice; a fault that is latched."""
+        notice = self._session.wait_notice("bleed_ended", NOTICE_S)
+        if (
+            notice is not None
+            and notice["sweep_id"] == sweep_id
+            and catalogue.STATES.get(notice["state"]) != "fault"
+        ):
+            return None
+        _, fault = self._wait_bled()
+        return fault
 
     def _trace(self, manifest: Message, reassembly: Reassembly, probes: list[Probe]) -> Trace:
         started, uncertainty_s = self._utc(manifest["conducting_us"], probes)
@@ -337,7 +370,7 @@ class Tracer:
         start = port.clock()
         end = start + BLEED_S
         while True:
-            message = self._session.request("status", deadline_s=5.0)
+            message = self._session.request("status")
             status = status_of(message, self.profile)
             if status.state == "fault":
                 fault = fault_of(message)

@@ -1,16 +1,16 @@
-"""A refusal on the wire, made into an exception that people can act on."""
+"""What a device refuses, or says in place of an answer, made into exceptions that help."""
 
 from __future__ import annotations
 
+import re
 from typing import Any
 
-from kneewire import catalogue
+from kneewire import PROTOCOL, catalogue
 from kneewire.hazards import HAZARDS
-from kneewire.messages import Message
-from kneewise.errors import RefusedError
+from kneewire.messages import Message, fingerprint
+from kneewise.errors import LinkError, ProtocolError, RefusedError
 
 CODES = {text: code for code, text in catalogue.REFUSALS.items()}
-UNKNOWN_SESSION = CODES["unknown session"]
 
 _STEPS = {
     "unknown kind": "use firmware and host of the same version",
@@ -67,4 +67,69 @@ def refused(name: str, message: Message) -> RefusedError:
         next_step=step,
         code=values["code"],
         guard=values["guard"],
+    )
+
+
+_TRACEBACK = re.compile(r"Traceback \(most recent call last\):\r?\n(?:[ \t].*\n)*[^\r\n]*")
+_ERROR = re.compile(r"^\w+(?:Error|Exception)\b[^\r\n]*", re.MULTILINE)
+
+
+def traceback_in(said: str) -> str:
+    """The last traceback in what a device said outside frames, or ""."""
+    # What was said before the port was open is cut short: its last line may be all that is left.
+    found = _TRACEBACK.findall(said) or _ERROR.findall(said)
+    return found[-1].replace("\r", "") if found else ""
+
+
+def silent(
+    asked: str, deadline_s: float, said: str, at_prompt: bool, crash: str, summary: str
+) -> LinkError | ProtocolError:
+    """The exception for a request without a reply.
+
+    `said` is what came outside frames, `crash` the traceback that an earlier prompt showed.
+    """
+    # Without the firmware's files, the line that starts it ends in an ImportError.
+    traceback = traceback_in(said)
+    if traceback and "ImportError" not in traceback:
+        return ProtocolError(
+            asked,
+            found=f"a traceback: {_brief(traceback)}",
+            expected="the Kneewise firmware",
+            next_step="reset the board; if it happens again, store the firmware on it anew "
+            "(device/README.md) or report the traceback",
+        )
+    if at_prompt:
+        return ProtocolError(
+            asked,
+            found="a MicroPython prompt, and no firmware that could be started from it"
+            + (f", after a traceback: {_brief(crash)}" if crash else ""),
+            expected="the Kneewise firmware",
+            next_step="reset the board to start the firmware; if the prompt comes back, "
+            "store the firmware on it (device/README.md)",
+        )
+    return LinkError(
+        asked,
+        found=f"no answer in {deadline_s:g} s ({summary})",
+        expected="a reply",
+        next_step="check that this is the tracer's port and that the tracer has power; "
+        "the capacitor may hold charge",
+    )
+
+
+def _brief(traceback: str) -> str:
+    """Where it was, and what."""
+    return ", ".join(line.strip() for line in traceback.splitlines()[-2:])
+
+
+def other_version(port_name: str, reply: dict[str, Any]) -> ProtocolError:
+    """The exception for a device whose hello names another version."""
+    firmware = ".".join(str(reply[f"firmware_{part}"]) for part in ("major", "minor", "patch"))
+    return ProtocolError(
+        f"greeting {port_name}",
+        found=f"the device has protocol {reply['major']}.{reply['minor']}, "
+        f"catalogue {reply['fingerprint']:08x} (firmware {firmware})",
+        expected=f"the host has protocol {PROTOCOL[0]}.{PROTOCOL[1]}, "
+        f"catalogue {fingerprint():08x}",
+        next_step="store the firmware that came with this host on the device, "
+        "or install the host version that came with that firmware",
     )

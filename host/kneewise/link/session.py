@@ -1,13 +1,15 @@
 """One session with a device: requests with one deadline each, replies, notices, blocks.
 
 The thread that calls owns the port. A request is sent again, with the same sequence, while its
-reply is missing; the device acts on it once. What comes outside frames is kept as text and
-shown as what it is.
+reply is missing; the device acts on it once. Where a MicroPython prompt answers in the
+firmware's place, the firmware is started again by one line, without a reset: what it held is
+still held, and the session goes on.
 """
 
 from __future__ import annotations
 
 import logging
+import math
 import random
 from collections import deque
 from collections.abc import Callable
@@ -17,18 +19,29 @@ from zlib import crc32
 from kneewire import PROTOCOL, catalogue, framing
 from kneewire.messages import NO_SESSION, Message, Refused, fingerprint, pack, unpack
 from kneewise.errors import LinkError, ProtocolError
+from kneewise.link.frames import FrameLog
 from kneewise.link.port import Port
-from kneewise.link.refusals import refused
+from kneewise.link.refusals import other_version, refused, silent, traceback_in
 
 log = logging.getLogger(__name__)
 log.addHandler(logging.NullHandler())
 
 # A prompt shows itself, or echoes what it is sent: the sequence of a hello.
-PROMPT_SIGNS = (">>>", "MicroPython", "HiKne")
+PROMPT_SIGNS = (">>>", "raw REPL", "MicroPython v", "HiKne")
+# Ends a line, a block, a raw prompt; then starts what main.py starts. With the firmware's
+# modules loaded already, it goes on where it was.
+LEAVE_LINE = b"\r\x03\x03\x02"
+START_LINE = b"from tracer import app; app.main()\r"
 RUN_BYTES = 4096  # far more than a frame: a whole traceback is to be shown
+TEXT_CHARACTERS = 8192
 HELLO_S = 3.0
-REQUEST_S = 2.0
-AGAIN_S = 0.4
+REQUEST_S = 6.0
+RESCUE_S = 8.0
+AGAIN_S = 0.15
+PROMPT_S = 0.3
+BEAT_S = 0.5
+NUDGE_AFTER = 3  # tries, before a line end is sent along to make a prompt show itself
+SMALL_FRAME = 64  # bytes of body and CRC that any device takes; hello tells the rest
 # Bytes of a hello that mean nothing to a MicroPython prompt (see the catalogue).
 HELLO_SEQUENCE = int.from_bytes(b"iKne", "little")
 LETTERS = b"abcdefghijklmnopqrstuvwxyzABCDEFGHIJKLMNOPQRSTUVWXYZ"
@@ -64,27 +77,28 @@ class Session:
         self.sequence = 0
         self.device: dict[str, Any] = {}
         self.notices: deque[Message] = deque(maxlen=64)
-        self.texts: deque[str] = deque(maxlen=16)
-        self.frames_bad = 0
+        self.frames = FrameLog()
+        self.text = ""
+        """What came outside frames since the last rescue, its end at least."""
+        self.tracebacks: deque[str] = deque(maxlen=4)
+        self._beats: set[int] = set()
+        self._beat_answered = False
         self._decoder = framing.Decoder(RUN_BYTES, toward_device=False)
+
+    @property
+    def frames_bad(self) -> int:
+        """Damaged frames from the device."""
+        return self.frames.counters.bad
 
     def take_over(self, port: Port) -> None:
         """Go on over another port, after the link was lost. `hello` must follow."""
         self.port = port
+        self.text = ""
         self._decoder = framing.Decoder(RUN_BYTES, toward_device=False)
 
     def hello(self, deadline_s: float = HELLO_S) -> dict[str, Any]:
         """Open or resume the session; the device's answer. ProtocolError, LinkError."""
-        body = hello_body(self.host_nonce)
-        # "#" makes a prompt's line a comment; the delimiter ends it as a frame for the firmware.
-        frame = b"#" + framing.DELIMITER + framing.encode(body, toward_device=True)
-        reply = self._converse("hello", HELLO_SEQUENCE, frame, deadline_s, AGAIN_S)
-        self._check_version(reply)
-        if reply["session"] != self.session:
-            self.sequence = 0
-        self.session = reply["session"]
-        self.device = reply.values
-        return self.device
+        return self._greet(deadline_s, rescues=1)
 
     def request(
         self,
@@ -93,153 +107,233 @@ class Session:
         *,
         deadline_s: float = REQUEST_S,
         again_s: float = AGAIN_S,
-        on_block: Callable[[Message], None] | None = None,
     ) -> Message:
-        """Send a request and return its reply; blocks that come before it go to `on_block`.
+        """Send a request and return its reply.
 
-        Raises RefusedError where the device refuses, LinkError where no reply comes in time.
+        Raises RefusedError where the device refuses, LinkError where no reply comes in time,
+        ProtocolError where something else answers.
         """
-        self.sequence += 1
-        frame = framing.encode(pack(name, self.session, self.sequence, values), toward_device=True)
-        return self._converse(name, self.sequence, frame, deadline_s, again_s, on_block)
+        body = self._next(name, values)
+        return self._converse(name, self.sequence, body, deadline_s, again_s)
+
+    def burst(
+        self, values: dict[str, Any], on_block: Callable[[Message], None], idle_s: float = AGAIN_S
+    ) -> bool:
+        """One `fetch`: its blocks go to `on_block`; True where its end was heard.
+
+        Not sent again: what is missing is for the caller to see, and to ask for.
+        """
+        self._send(self._next("fetch", values))
+        quiet_from = self.port.clock()
+        while self.port.clock() - quiet_from < idle_s:
+            for message in self._pump(idle_s):
+                if message.sequence != self.sequence:
+                    self.frames.counters.late += 1
+                    continue
+                quiet_from = self.port.clock()
+                if message.name == "block":
+                    on_block(message)
+                elif message.name == "refusal":
+                    raise refused("fetch", message)
+                else:
+                    return True
+            if self._at_prompt():
+                self._rescue()
+                return False
+        return False
 
     def abort(self) -> None:
         """Send the abort of this session; the reply, if any, is nobody's business here."""
-        frame = framing.encode(pack("abort", self.session, 0), toward_device=True)
-        self.port.write(framing.DELIMITER + frame)
+        self._send(pack("abort", self.session, 0))
 
-    def wait_notice(
-        self, name: str, deadline_s: float, beat: Callable[[], None] | None = None
-    ) -> Message | None:
-        """The next notice of that name, or None when the time is over.
+    def wait_notice(self, name: str, deadline_s: float) -> Message | None:
+        """The next notice of that name, or None when the time is over."""
+        return self._wait(name, deadline_s, lambda: False)
 
-        `beat` is called about twice a second while waiting.
+    def wait_quiet(self, deadline_s: float) -> Message | None:
+        """Wait out a charge, with a heartbeat twice a second: its notice, or None where that was
+        not heard. A device that answers a heartbeat is charging no more.
         """
+        self._beat_answered = False
+        self._beats.clear()
+        return self._wait("charge_ended", deadline_s, lambda: self._beat_answered, self.beat)
+
+    def beat(self) -> None:
+        """Let the device know that the host is there, without waiting for the reply."""
+        self._send(self._next("heartbeat", None))
+        self._beats.add(self.sequence)
+
+    # -- conversation --------------------------------------------------------------------
+
+    def _next(self, name: str, values: dict[str, Any] | None) -> bytes:
+        self.sequence += 1
+        return pack(name, self.session, self.sequence, values)
+
+    def _send(self, body: bytes, *, again: bool = False, nudge: bool = False) -> None:
+        room = self.device.get("max_frame", SMALL_FRAME)
+        if len(body) + framing.CRC_BYTES > room:
+            raise ValueError(f"a body of {len(body)} bytes; the device takes {room} with its CRC")
+        coded = framing.GUARD + framing.encode(body, toward_device=True)
+        if nudge:
+            coded = b"\r" + framing.DELIMITER + coded
+        self.port.write(coded)
+        self.frames.sent(self.port.clock(), coded, body, again=again)
+
+    def _wait(
+        self,
+        name: str,
+        deadline_s: float,
+        over: Callable[[], bool],
+        beat: Callable[[], None] | None = None,
+    ) -> Message | None:
         end = self.port.clock() + deadline_s
+        due = self.port.clock() + BEAT_S
         while True:
             while self.notices:
                 notice = self.notices.popleft()
                 if notice.name == name:
                     return notice
-            left = end - self.port.clock()
-            if left <= 0:
+            now = self.port.clock()
+            if now >= end or over():
                 return None
-            before = self.port.clock()
-            self._pump(min(left, 0.5))
-            if beat is not None and self.port.clock() - before >= 0.5:
+            if beat is not None and now >= due:
                 beat()
+                due = now + BEAT_S
+            # What answers here answers a request that was given up, or one sent twice.
+            self.frames.counters.late += len(self._pump(min(end - now, BEAT_S)))
+            if self._at_prompt():
+                self._rescue()
 
-    def beat(self) -> None:
-        """Let the device know that the host is there, without waiting for the reply."""
-        self.sequence += 1
-        frame = framing.encode(pack("heartbeat", self.session, self.sequence), toward_device=True)
-        self.port.write(frame)
+    def _greet(self, deadline_s: float, rescues: int) -> dict[str, Any]:
+        body = hello_body(self.host_nonce)
+        reply = self._converse("hello", HELLO_SEQUENCE, body, deadline_s, 2 * AGAIN_S, rescues)
+        self._check_version(reply)
+        if reply["session"] != self.session:
+            self.sequence = 0
+        self.session = reply["session"]
+        self.device = reply.values
+        return self.device
 
     def _converse(
         self,
         name: str,
         sequence: int,
-        frame: bytes,
+        body: bytes,
         deadline_s: float,
         again_s: float,
-        on_block: Callable[[Message], None] | None = None,
+        rescues: int = 2,
     ) -> Message:
         kind = catalogue.KINDS[name]
-        start = self.port.clock()
-        end = start + deadline_s
-        again = start
+        end = self.port.clock() + deadline_s
+        again = self.port.clock()
+        tries = 0
+        # A hello shows a prompt by its echo, and must not run a line there.
+        nudge_after = NUDGE_AFTER if name != "hello" else math.inf
         while True:
             now = self.port.clock()
             if now >= end:
                 raise self._silent(name, deadline_s)
             if now >= again:
-                self.port.write(frame)
+                self._send(body, again=tries > 0, nudge=tries >= nudge_after)
+                tries += 1
                 again = now + again_s
             for message in self._pump(min(end, again) - now):
                 if message.sequence != sequence:
-                    continue
-                if message.name == "refusal" and message["of_kind"] == kind:
+                    self.frames.counters.late += 1
+                elif message.name == "refusal" and message["of_kind"] == kind:
                     raise refused(name, message)
-                if message.name == "block":
-                    # A burst under way is an answer under way: no need to ask again.
-                    again = self.port.clock() + again_s
-                    if on_block is not None:
-                        on_block(message)
                 elif catalogue.KINDS[message.name] == kind | catalogue.REPLY:
                     return message
+            if rescues and self._at_prompt():
+                rescues -= 1
+                self._rescue()
+                # The rescue had a deadline of its own; this request has what it had left.
+                end += self.port.clock() - now
+                again = self.port.clock()
 
     def _pump(self, timeout_s: float) -> list[Message]:
         """Read once; messages other than notices, in order."""
         out: list[Message] = []
-        for item in self._decoder.feed(self.port.read(timeout_s)):
+        data = self.port.read(max(timeout_s, 0.0))
+        for item in self._decoder.feed(data):
+            now = self.port.clock()
             if isinstance(item, framing.Bad):
-                self._note_bad(item)
+                self._hear(self.frames.bad(now, item))
                 continue
+            self.frames.received(now, item)
             try:
                 message = unpack(item)
             except Refused as error:
-                self.frames_bad += 1
                 log.warning("a frame that is no message of this catalogue: %s", error)
                 continue
-            if message.name == "charge_ended":
+            if message.name in ("charge_ended", "bleed_ended"):
                 self.notices.append(message)
+            elif message.sequence in self._beats:
+                self._beats.discard(message.sequence)
+                self._beat_answered = True
             else:
                 out.append(message)
         return out
 
-    def _note_bad(self, bad: framing.Bad) -> None:
-        text = bad.text()
+    # -- the prompt ------------------------------------------------------------------------
+
+    def _hear(self, text: str) -> None:
         if text:
-            self.texts.append(text)
+            self.text = (self.text + text)[-TEXT_CHARACTERS:]
             log.warning("text from the device, outside any frame: %s", text.strip())
-        else:
-            self.frames_bad += 1
-            log.info("bad frame (%s), %d bytes", bad.reason, len(bad.raw))
 
     def _said(self) -> str:
         """All text heard outside frames, with what is pending."""
-        return "".join(self.texts) + framing.readable(self._decoder.pending())
+        return self.text + framing.readable(self._decoder.pending())
+
+    def _at_prompt(self) -> bool:
+        said = self._said()
+        return any(sign in said for sign in PROMPT_SIGNS)
+
+    def _rescue(self) -> None:
+        """From the prompt back into the service. ProtocolError where it does not come up."""
+        said = self._said()
+        traceback = traceback_in(said)
+        if traceback:
+            self.tracebacks.append(traceback)
+        log.warning("a prompt answered in the firmware's place; starting the firmware again")
+        self.frames.counters.rescues += 1
+        end = self.port.clock() + RESCUE_S
+        while True:
+            self.port.write(LEAVE_LINE)
+            self._settle()
+            self.port.write(START_LINE)
+            try:
+                self._greet(min(1.5, max(end - self.port.clock(), 0.1)), rescues=0)
+                return
+            except LinkError:
+                # A line that was damaged on its way; the prompt is there again.
+                if self.port.clock() >= end:
+                    raise
+            except ProtocolError:
+                if self.port.clock() >= end or "Error" in self._said():
+                    raise
+            finally:
+                self.text = ""
+
+    def _settle(self) -> None:
+        """Let the prompt say what it says, and forget it."""
+        end = self.port.clock() + PROMPT_S
+        while (left := end - self.port.clock()) > 0:
+            self.port.read(left)
+        self._decoder = framing.Decoder(RUN_BYTES, toward_device=False)
+        self.text = ""
 
     def _silent(self, name: str, deadline_s: float) -> LinkError | ProtocolError:
-        said = self._said()
         asked = f"asking {self.port.name} for {name}"
-        if any(sign in said for sign in PROMPT_SIGNS):
-            return ProtocolError(
-                asked,
-                found="a MicroPython prompt",
-                expected="the Kneewise firmware",
-                next_step="reset the board to start the firmware; if the prompt comes back, "
-                "store the firmware on it (device/README.md)",
-            )
-        if "Traceback" in said:
-            return ProtocolError(
-                asked,
-                found="a traceback: " + said[said.index("Traceback") :].strip()[-300:],
-                expected="the Kneewise firmware",
-                next_step="reset the board; if it happens again, report the traceback",
-            )
-        return LinkError(
-            asked,
-            found=f"no answer in {deadline_s:g} s"
-            + (f", only {self.frames_bad} damaged frames" if self.frames_bad else ""),
-            expected="a reply",
-            next_step="check that this is the tracer's port and that the tracer has power; "
-            "the capacitor may hold charge",
+        crash = self.tracebacks[-1] if self.tracebacks else ""
+        return silent(
+            asked, deadline_s, self._said(), self._at_prompt(), crash, self.frames.summary()
         )
 
     def _check_version(self, reply: Message) -> None:
         device = (reply["major"], reply["minor"])
         same_catalogue = reply["fingerprint"] == fingerprint()
         # While the major version is 0, every catalogue of its own is a version of its own.
-        if device[0] == PROTOCOL[0] and (same_catalogue or device[0] > 0):
-            return
-        host = f"protocol {PROTOCOL[0]}.{PROTOCOL[1]}, catalogue {fingerprint():08x}"
-        firmware = ".".join(str(reply[f"firmware_{part}"]) for part in ("major", "minor", "patch"))
-        raise ProtocolError(
-            f"greeting {self.port.name}",
-            found=f"the device has protocol {device[0]}.{device[1]}, "
-            f"catalogue {reply['fingerprint']:08x} (firmware {firmware})",
-            expected=f"the host has {host}",
-            next_step="store the firmware that came with this host on the device, "
-            "or install the host version that came with that firmware",
-        )
+        if device[0] != PROTOCOL[0] or not (same_catalogue or device[0] > 0):
+            raise other_version(self.port.name, reply.values)
