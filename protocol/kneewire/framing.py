@@ -1,8 +1,9 @@
 """Frames: COBS(body + CRC-32) + 0x00, and the decoder that survives any bytes.
 
 Bytes that travel toward the device never contain 0x03: on the RP2 port of MicroPython that
-byte is Ctrl-C and empties the input ring. So after COBS, in that direction only, 02 becomes
-02 04 and then 03 becomes 02 05.
+byte is Ctrl-C and empties the input ring. Should a damaged byte become one all the same, the rest
+of the frame arrives at a prompt, where 01 and 05 change its mode and 04 resets the board. So
+after COBS, in that direction only, 01 to 05 become 02 followed by 41 to 45.
 """
 
 from kneewire.seam import cobs_decode, cobs_encode, crc32
@@ -13,6 +14,12 @@ DELIMITER = b"\x00"
 # order. A decoder ignores a run of this byte alone.
 GUARD = b"#" + DELIMITER
 CRC_BYTES = 4
+
+# 02 comes first: what stands for the others holds it.
+ESCAPED = ((b"\x02", b"\x02B"), (b"\x01", b"\x02A"), (b"\x03", b"\x02C")) + (
+    (b"\x04", b"\x02D"),
+    (b"\x05", b"\x02E"),
+)
 
 # Why a run of bytes between delimiters is not a frame.
 BAD_LONG = "too long"
@@ -26,7 +33,8 @@ def encode(body: bytes, toward_device: bool) -> bytes:
     """One whole frame, delimiter included."""
     coded = cobs_encode(body + crc32(body).to_bytes(CRC_BYTES, "little"))
     if toward_device:
-        coded = coded.replace(b"\x02", b"\x02\x04").replace(b"\x03", b"\x02\x05")
+        for plain, escaped in ESCAPED:
+            coded = coded.replace(plain, escaped)
     return coded + DELIMITER
 
 
@@ -54,10 +62,14 @@ def decode_run(run: bytes, toward_device: bool) -> "bytes | Bad":
     """The body inside one run of bytes between delimiters, or why there is none."""
     coded = run
     if toward_device:
-        escapes = run.count(b"\x02\x04") + run.count(b"\x02\x05")
-        if run.count(b"\x02") != escapes or b"\x03" in run:
+        marks = run.count(b"\x02")
+        for plain, escaped in reversed(ESCAPED):
+            marks -= run.count(escaped)
+            if plain in run and plain != b"\x02":
+                return Bad(BAD_ESCAPE, run)
+            coded = coded.replace(escaped, plain)
+        if marks:
             return Bad(BAD_ESCAPE, run)
-        coded = run.replace(b"\x02\x05", b"\x03").replace(b"\x02\x04", b"\x02")
     try:
         whole = cobs_decode(coded)
     except ValueError:

@@ -269,7 +269,7 @@ def test_a_crc_without_a_body_is_no_frame(body_size: int) -> None:
 
 
 @pytest.mark.parametrize(
-    "run", [b"\x02", b"\x02\x02\x04", b"\x02\x06", b"a\x02", b"\x03", b"\x02\x03"]
+    "run", [b"\x02", b"\x02\x02B", b"\x02\x06", b"a\x02", b"\x01", b"\x02\x03", b"\x04", b"\x05"]
 )
 def test_a_run_toward_the_device_has_one_spelling(run: bytes) -> None:
     # A host that forgets to escape must fail in every test, not first on an RP2040.

@@ -27,7 +27,8 @@ from kneewise.errors import LinkError
 from kneewise.link.session import HELLO_SEQUENCE, LETTERS, Session
 
 REPEATS = 11
-CODE_AND_VERSION = {0x12, 0x06, PROTOCOL[0], PROTOCOL[1]}  # COBS codes and the version bytes
+# COBS codes, and the mark of what is escaped, which moves a prompt's cursor.
+CODE_AND_VERSION = {0x12, 0x06, PROTOCOL[0], 0x02}
 
 
 class SilentPort:

@@ -62,7 +62,7 @@ def frame(content: bytes, toward_device: bool) -> bytes:
     if toward_device:
         out = bytearray()
         for byte in coded:
-            out += {2: b"\x02\x04", 3: b"\x02\x05"}.get(byte, bytes([byte]))
+            out += bytes([2, 0x40 + byte]) if 1 <= byte <= 5 else bytes([byte])
         coded = bytes(out)
     return coded + b"\x00"
 
@@ -180,9 +180,10 @@ def framing_vectors() -> dict[str, Any]:
         ("02", b"\x02"),
         ("03", b"\x03"),
         ("02 03", b"\x02\x03"),
-        ("02 04", b"\x02\x04"),
-        ("02 05", b"\x02\x05"),
-        ("02 04 05", b"\x02\x04\x05"),
+        ("01 to 05", b"\x01\x02\x03\x04\x05"),
+        ("05 to 01", b"\x05\x04\x03\x02\x01"),
+        ("02 42", b"\x02\x42"),
+        ("02 41 43", b"\x02\x41\x43"),
         ("02 02 03 03", b"\x02\x02\x03\x03"),
         ("COBS codes of 02 and 03", b"\x11\x00\x11\x22\x00\x11\x00"),
         ("32 bytes of 03", b"\x03" * 32),
@@ -248,7 +249,7 @@ def streams() -> list[dict[str, Any]]:
         way = "toward the device" if toward_device else "toward the host"
         one, two = frame(first, toward_device), frame(second, toward_device)
         crc = struct.pack("<I", zlib.crc32(first) ^ 0x400)
-        wrong_crc = cobs.encode(b"first" + bytes([1, 8, 6]) + crc)
+        wrong_crc = cobs.encode(b"first" + bytes([9, 8, 6]) + crc)
         empty = frame(b"", toward_device)
         add(f"two frames {way}", toward_device, one + two, [first, second])
         add(f"delimiters alone {way}", toward_device, bytes(4), [])
@@ -268,7 +269,13 @@ def streams() -> list[dict[str, Any]]:
         add(
             f"CRC of nothing {way}", toward_device, empty + two, [("too short", empty[:-1]), second]
         )
-        add(f"one byte {way}", toward_device, b"\x01\x00" + two, [("too short", b"\x01"), second])
+        nothing = b"\x02A" if toward_device else b"\x01"
+        add(
+            f"one byte {way}",
+            toward_device,
+            nothing + b"\x00" + two,
+            [("too short", nothing), second],
+        )
         add(
             f"block cut short {way}",
             toward_device,
@@ -310,10 +317,13 @@ def streams() -> list[dict[str, Any]]:
         prompt = b"\r\nMicroPython v1.29.0\r\n>>> "
         add(f"a prompt {way}", toward_device, prompt + b"\x00" + two, [("cobs", prompt), second])
     for name, run in (
-        ("02 alone", b"\x04ab\x02"),
-        ("02 and neither 04 nor 05", b"\x05a\x02\x06b"),
-        ("02 twice, then 04", b"\x05a\x02\x02\x04"),
-        ("03 not escaped", b"\x04a\x03b"),
+        ("02 alone", b"\x06ab\x02"),
+        ("02 and nothing that it may mark", b"\x06a\x02\x46b"),
+        ("02 twice, then 42", b"\x06a\x02\x02\x42"),
+        ("01 not escaped", b"\x06a\x01b"),
+        ("03 not escaped", b"\x06a\x03b"),
+        ("04 not escaped", b"\x06a\x04b"),
+        ("05 not escaped", b"\x06a\x05b"),
     ):
         add(name, True, run + b"\x00" + frame(second, True), [("escape", run), second])
     return out

@@ -7,6 +7,7 @@ time has reached the host's deadline. So the same seed gives the same bytes, alw
 
 from __future__ import annotations
 
+import math
 import tempfile
 import threading
 from pathlib import Path
@@ -16,10 +17,20 @@ from kneewire.profile_record import seal
 from kneewise.emulator.board import OPS, Board, PowerLost
 from kneewise.emulator.converters import Scaling
 from kneewise.emulator.firmware import boot_seed, firmware_module
+from kneewise.emulator.prompt import RESET, Prompt
 from kneewise.emulator.scenario import Scenario
 from kneewise.errors import LinkError
 
+CTRL_C = b"\x03"
+PROMPT_POLL_MS = 10
 INPUT_RING = 512  # bytes, as on the RP2 port; more than that is lost
+
+
+INTERRUPT = (
+    b"Traceback (most recent call last):\r\n"
+    b'  File "main.py", line 1, in <module>\r\n'
+    b"KeyboardInterrupt: \r\n"
+)
 
 
 class _DirectBus:
@@ -57,6 +68,8 @@ class InProcessTracer:
         self._host_until_us = 0
         self._sleeping = False
         self._stopping = False
+        self._interrupted = False
+        self._prompt: Prompt | None = None
         self._cable: Cable | None = None
         self.firmware: Any = None
         self.plug()
@@ -97,14 +110,22 @@ class InProcessTracer:
             self._sleeping = False
 
     def put_input(self, data: bytes) -> None:
-        """Bytes from the host; what its ring does not hold is lost."""
+        """Bytes from the host; what its ring does not hold is lost.
+
+        As on the RP2 port, Ctrl-C empties the ring and interrupts what runs.
+        """
+        if self._prompt is None and CTRL_C in data:
+            self._to_device.clear()
+            self._interrupted = True
+            data = data[data.rindex(CTRL_C) + 1 :]
         self._to_device += data[: INPUT_RING - len(self._to_device)]
 
     def _device_until(self, seconds: float) -> None:
         if self._thread is None:
             raise no_power(self.crash)
         if self.crash is None:
-            self._host_until_us = self.board.virtual_us + max(round(seconds * 1e6), 0)
+            # Up, not to nothing: a wait that lets no time pass would be waited for ever.
+            self._host_until_us = self.board.virtual_us + max(math.ceil(seconds * 1e6), 0)
             self._device_turn.release()
             self._host_turn.acquire()
 
@@ -115,6 +136,8 @@ class InProcessTracer:
         if self._thread is not None:
             return
         self._stopping = False
+        self._interrupted = False
+        self._prompt = None
         self.crash = None
         self._to_device.clear()
         self._to_host.clear()
@@ -146,24 +169,55 @@ class InProcessTracer:
         try:
             if self._stopping:
                 return
-            hal = firmware_module("hal_emulated").EmulatedHal(
-                _DirectBus(self.board),
-                _Link(self),
-                self._device_id,
-                boot_seed(self.scenario.seed, self._boots),
-            )
-            buffers = firmware_module("tracer.memory").Buffers()
-            loop = firmware_module("tracer.loop").Loop
-            with tempfile.TemporaryDirectory() as folder:
-                profile = Path(folder) / "profile.bin"
-                profile.write_bytes(seal(self._record))
-                self.firmware = loop(hal, buffers, str(profile))
-            self.firmware.run()
-            self.crash = SystemExit("the firmware left to its prompt")
+            while True:
+                self.firmware = self._boot()
+                while self._serve() != RESET:
+                    pass
+                self._boots += 1
         except BaseException as error:  # what ends the firmware is told to the host
             self.crash = error
         finally:
             self._host_turn.release()
+
+    def _boot(self) -> Any:
+        hal = firmware_module("hal_emulated").EmulatedHal(
+            _DirectBus(self.board),
+            _Link(self),
+            self._device_id,
+            boot_seed(self.scenario.seed, self._boots),
+        )
+        buffers = firmware_module("tracer.memory").Buffers()
+        loop = firmware_module("tracer.loop").Loop
+        with tempfile.TemporaryDirectory() as folder:
+            profile = Path(folder) / "profile.bin"
+            profile.write_bytes(seal(self._record))
+            return loop(hal, buffers, str(profile))
+
+    def _serve(self) -> str:
+        """Run the firmware, then the prompt that it leaves to; what the prompt was told."""
+        try:
+            self.firmware.run()
+        except KeyboardInterrupt:
+            self.put_output(INTERRUPT)
+        self._prompt = Prompt()
+        link = _Link(self)
+        buffer = bytearray(64)
+        while True:
+            self.put_output(self._prompt.said)
+            self._prompt.said = b""
+            link.wait(PROMPT_POLL_MS)
+            done, rest = self._prompt.feed(bytes(buffer[: link.read(buffer)]))
+            if done:
+                self.put_output(self._prompt.said)
+                self._to_device[:0] = rest
+                self._prompt = None
+                return done
+
+    def interruption(self) -> None:
+        """Raise KeyboardInterrupt where Ctrl-C has come."""
+        if self._interrupted:
+            self._interrupted = False
+            raise KeyboardInterrupt
 
     def hand_over(self) -> None:
         """Called by the firmware's thread: let the host go on, wait for the next turn."""
@@ -250,6 +304,7 @@ class _Link:
         return owner.input_waiting
 
     def read(self, buffer: bytearray) -> int:
+        self._owner.interruption()
         data = self._owner.take_input(len(buffer))
         buffer[: len(data)] = data
         return len(data)
@@ -260,3 +315,4 @@ class _Link:
 
     def pace(self, us: int) -> None:
         self._owner.hand_over()
+        self._owner.interruption()

@@ -7,8 +7,9 @@ late are told apart here: an answer that comes after its request was given up co
 from __future__ import annotations
 
 from collections import deque
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import asdict, dataclass
+from itertools import count
 from typing import Any
 
 from kneewire import catalogue, framing
@@ -73,22 +74,32 @@ def shown(name: str, value: Any) -> Any:
     return _CODES[name].get(value, value) if name in _CODES else value
 
 
+def of_bad(time_s: float, way: str, bad: framing.Bad) -> Seen:
+    """The entry of what is no frame: as text where people can read it."""
+    text = bad.text()
+    remark = f"text: {text.strip()}" if text else f"bad frame: {bad.reason}"
+    return Seen(time_s, way, len(bad.raw), b"", remark)
+
+
 class FrameLog:
-    """The last KEPT entries each way, and the counters."""
+    """The last KEPT entries each way, and the counters. `watch` is told of each entry."""
 
     def __init__(self) -> None:
         self.counters = Counters()
-        self._sent: deque[Seen] = deque(maxlen=KEPT)
-        self._received: deque[Seen] = deque(maxlen=KEPT)
+        self.watch: Callable[[Seen], object] = lambda seen: None
+        self._sent: deque[tuple[int, Seen]] = deque(maxlen=KEPT)
+        self._received: deque[tuple[int, Seen]] = deque(maxlen=KEPT)
+        self._numbers = count()
 
     def sent(self, time_s: float, coded: bytes, body: bytes, *, again: bool) -> None:
         self.counters.sent += 1
         self.counters.sent_again += again
-        self._sent.append(Seen(time_s, TO_DEVICE, len(coded), body))
+        self._keep(self._sent, Seen(time_s, TO_DEVICE, len(coded), body))
 
     def received(self, time_s: float, body: bytes) -> None:
         self.counters.received += 1
-        self._received.append(Seen(time_s, TO_HOST, len(body), body))
+        coded_bytes = len(framing.encode(body, toward_device=False))
+        self._keep(self._received, Seen(time_s, TO_HOST, coded_bytes, body))
 
     def bad(self, time_s: float, bad: framing.Bad) -> str:
         """Note what is no frame; its text where it is one."""
@@ -97,18 +108,32 @@ class FrameLog:
             self.counters.texts += 1
         else:
             self.counters.bad += 1
-        remark = f"text: {text.strip()}" if text else f"bad frame: {bad.reason}"
-        self._received.append(Seen(time_s, TO_HOST, len(bad.raw), b"", remark))
+        self._keep(self._received, of_bad(time_s, TO_HOST, bad))
         return text
 
+    def _keep(self, entries: deque[tuple[int, Seen]], seen: Seen) -> None:
+        entries.append((next(self._numbers), seen))
+        self.watch(seen)
+
     def entries(self) -> Iterator[Seen]:
-        """Both ways, in order of time."""
-        yield from sorted([*self._sent, *self._received], key=lambda seen: seen.time_s)
+        """Both ways, in the order in which they went."""
+        for _, seen in sorted([*self._sent, *self._received], key=lambda numbered: numbered[0]):
+            yield seen
 
     def summary(self) -> str:
         """The counters that are not zero, for messages."""
-        words = {name.replace("_", " "): count for name, count in asdict(self.counters).items()}
-        return ", ".join(f"{count} {name}" for name, count in words.items() if count)
+        words = {name.replace("_", " "): found for name, found in asdict(self.counters).items()}
+        return ", ".join(f"{found} {name}" for name, found in words.items() if found)
 
 
-__all__ = ["KEPT", "TO_DEVICE", "TO_HOST", "Counters", "FrameLog", "Message", "Seen", "shown"]
+__all__ = [
+    "KEPT",
+    "TO_DEVICE",
+    "TO_HOST",
+    "Counters",
+    "FrameLog",
+    "Message",
+    "Seen",
+    "of_bad",
+    "shown",
+]
