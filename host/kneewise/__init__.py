@@ -10,9 +10,11 @@ from __future__ import annotations
 
 from importlib import metadata
 
-from kneewise.errors import KneewiseError
-from kneewise.instrument.trace import Trace
+from kneewise.errors import KneewiseError, UsageError
+from kneewise.instrument.trace import REPLAY, Trace
 from kneewise.instrument.tracer import Opened, Tracer, register_opener
+from kneewise.link.recording import read_recording
+from kneewise.link.replay import ReplayPort
 
 __version__ = metadata.version("kneewise")
 __all__ = ["KneewiseError", "Trace", "Tracer", "__version__"]
@@ -26,3 +28,26 @@ def _emulator(target: str) -> Opened:
 
 # The instrument does not know the emulator; here, above both, they are put together.
 register_opener("emulator", _emulator)
+
+
+def _replay(target: str) -> Opened:
+    file = target.partition(":")[2]
+    if not file:
+        raise UsageError(
+            f"opening {target}",
+            found="no file in it",
+            expected="replay:FILE, a recording",
+            next_step="`kneewise sweep --record FILE` makes one",
+        )
+    recording = read_recording(file)
+    port = ReplayPort(recording)
+    return Opened(
+        connect=port.connect,
+        close=port.close,
+        rung=REPLAY,
+        utc=port.utc,
+        remark=f"REPLAYED from {file}, {recording.remark()}; nothing is measured now",
+    )
+
+
+register_opener("replay", _replay)

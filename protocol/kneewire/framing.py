@@ -6,14 +6,18 @@ of the frame arrives at a prompt, where 01 and 05 change its mode and 04 resets 
 after COBS, in that direction only, 01 to 05 become 02 followed by 41 to 45.
 """
 
-from kneewire.seam import cobs_decode, cobs_encode, crc32
+from kneewire.seam import CobsErrors, cobs_encode, crc32, run_decode
 
 DELIMITER = b"\x00"
 # Before each frame toward the device: should a MicroPython prompt be there in the firmware's
 # place, "#" makes the line a comment, and a line that is not empty takes no control byte for an
 # order. A decoder ignores a run of this byte alone.
-GUARD = b"#" + DELIMITER
+LONE_GUARD = b"#"
+GUARD = LONE_GUARD + DELIMITER
 CRC_BYTES = 4
+# What the CRC over a body and its CRC always is: the residue of CRC-32/ISO-HDLC in the CRC
+# catalogue, debb20e3, after the final exclusive or.
+CRC_RESIDUE = 0x2144DF1C
 
 # 02 comes first: what stands for the others holds it.
 ESCAPED = ((b"\x02", b"\x02B"), (b"\x01", b"\x02A"), (b"\x03", b"\x02C")) + (
@@ -71,15 +75,14 @@ def decode_run(run: bytes, toward_device: bool) -> "bytes | Bad":
         if marks:
             return Bad(BAD_ESCAPE, run)
     try:
-        whole = cobs_decode(coded)
-    except ValueError:
+        whole = run_decode(coded)
+    except CobsErrors:
         return Bad(BAD_COBS, run)
     if len(whole) <= CRC_BYTES:
         return Bad(BAD_SHORT, run)
-    body = whole[:-CRC_BYTES]
-    if crc32(body).to_bytes(CRC_BYTES, "little") != whole[-CRC_BYTES:]:
+    if crc32(whole) != CRC_RESIDUE:
         return Bad(BAD_CRC, run)
-    return body
+    return whole[:-CRC_BYTES]
 
 
 class Decoder:
@@ -103,26 +106,28 @@ class Decoder:
     def feed(self, data: bytes) -> "list[bytes | Bad]":
         """What `data` completes, in order."""
         out: list[bytes | Bad] = []
-        start = 0
-        while True:
-            stop = data.find(DELIMITER, start)
-            if stop < 0:
-                self._keep(data[start:])
-                return out
-            self._keep(data[start:stop])
+        runs = data.split(DELIMITER)
+        unfinished = runs.pop()
+        toward_device = self.toward_device
+        for run in runs:
+            whole = self._whole(run) if self._run or len(run) > self.limit else run
             if self._overflow:
-                out.append(Bad(BAD_LONG, bytes(self._run)))
-                self.bad += 1
-            elif self._run and self._run != b"#":
-                item = decode_run(bytes(self._run), self.toward_device)
-                if isinstance(item, Bad):
-                    self.bad += 1
-                else:
-                    self.good += 1
-                out.append(item)
-            self._run = bytearray()
-            self._overflow = False
-            start = stop + 1
+                self._overflow = False
+                out.append(Bad(BAD_LONG, whole))
+            elif whole and whole != LONE_GUARD:
+                out.append(decode_run(whole, toward_device))
+        bad = sum([isinstance(item, Bad) for item in out])
+        self.bad += bad
+        self.good += len(out) - bad
+        self._keep(unfinished)
+        return out
+
+    def _whole(self, piece: bytes) -> bytes:
+        """The run that `piece` ends, as far as it is kept."""
+        self._keep(piece)
+        whole = bytes(self._run)
+        self._run = bytearray()
+        return whole
 
     def _keep(self, piece: bytes) -> None:
         room = self.limit - len(self._run)

@@ -1,5 +1,7 @@
 """Messages: a body from a name and values, and a message back from a body."""
 
+import struct
+
 from kneewire import catalogue, fields
 from kneewire.seam import crc32
 
@@ -29,6 +31,8 @@ def fingerprint() -> int:
 
 class Message:
     """One message: `name`, `session`, `sequence` and its `values` by field name."""
+
+    __slots__ = ("name", "sequence", "session", "values")
 
     def __init__(self, name: str, session: int, sequence: int, values: "dict[str, Any]") -> None:
         self.name = name
@@ -69,24 +73,56 @@ def pack(name: str, session: int, sequence: int, values: "dict[str, Any] | None"
     return bytes(out)
 
 
+# Types that `struct` knows; a message's other fields are read one by one.
+_STRUCT = {"u8": "B", "u16": "H", "u32": "I", "u64": "Q", "i32": "i", "b8": "8s", "b16": "16s"}
+_layouts: "dict[int, Any]" = {}
+_BLOCK = catalogue.KINDS["block"]
+_BLOCK_FORM = "<BIIHB"  # header, first, and the count of `data`; a test holds it to the catalogue
+_DATA_AT = struct.calcsize(_BLOCK_FORM)
+
+
+def _layout(kind: int) -> "Any":
+    """Name, `struct` format, names of the fields that it covers, its size, the rows behind."""
+    name, _, _, _, rows = catalogue.MESSAGES[kind]
+    names = []
+    form = "<BII"
+    for row in rows:
+        if row[1] not in _STRUCT:
+            break
+        form += _STRUCT[row[1]]
+        names.append(row[0])
+    made = (name, form, tuple(names), struct.calcsize(form), rows[len(names) :])
+    _layouts[kind] = made
+    return made
+
+
 def unpack(body: bytes) -> Message:
     """The message in a body; extra bytes at its end are ignored. Raises `Refused`."""
     if len(body) < HEADER_BYTES:
         raise Refused(2, body[0] if body else 0, 0, 0)
     kind = body[0]
-    session = int.from_bytes(body[1:5], "little")
-    sequence = int.from_bytes(body[5:9], "little")
+    if kind == _BLOCK and len(body) >= _DATA_AT:
+        # A sweep is made of these, so they have a way of their own.
+        _, session, sequence, first, count = struct.unpack_from(_BLOCK_FORM, body)
+        after = _DATA_AT + count * KNOT_BYTES
+        if after <= len(body):
+            return Message(
+                "block", session, sequence, {"first": first, "data": body[_DATA_AT:after]}
+            )
     if kind not in catalogue.MESSAGES:
-        raise Refused(1, kind, session, sequence)
-    name, _, _, _, rows = catalogue.MESSAGES[kind]
-    values: dict[str, Any] = {}
-    place = HEADER_BYTES
+        raise Refused(1, kind, *struct.unpack_from("<II", body, 1))
+    name, form, names, size, rows = _layouts.get(kind) or _layout(kind)
+    if len(body) < size:
+        raise Refused(2, kind, *struct.unpack_from("<II", body, 1))
+    found = struct.unpack_from(form, body)
+    values: dict[str, Any] = dict(zip(names, found[3:]))  # noqa: B905  # not on MicroPython
+    place = size
     for row in rows:
         try:
             values[row[0]], place = fields.read(body, place, row[1], KNOT_BYTES)
         except ValueError:
-            raise Refused(2, kind, session, sequence) from None
-    return Message(name, session, sequence, values)
+            raise Refused(2, kind, found[1], found[2]) from None
+    return Message(name, found[1], found[2], values)
 
 
 def pack_knot(knot: "dict[str, int]") -> bytes:

@@ -118,7 +118,7 @@ def test_an_error_ends_at_the_prompt_and_is_told(name: str, told: str, level: in
         chip = made.chip
         with tracer_on(made) as tracer:
             fire(tracer)
-            chip.let_pass(400)
+            chip.let_pass(1500)  # what was measured is placed and kept first
             assert told in chip.said()
         check_safe(after(made), wave_us=AT_ONCE_US, bleed_us=OPENING_US + BLED_US)
         # With the heap still locked the prompt could not even compile this.

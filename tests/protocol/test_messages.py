@@ -383,3 +383,20 @@ def test_every_hazard_says_what_was_wrong_and_what_to_do() -> None:
         assert 1 <= number <= 21  # the hazards of the device's table
         assert len(texts) == 3
         assert all(text == text.strip() != "" for text in texts)
+
+
+def test_the_short_way_of_a_block_is_that_of_the_catalogue() -> None:
+    """Its form is written out by hand, so a change of the table must not leave it behind."""
+    rows = catalogue.MESSAGES[catalogue.KINDS["block"]][4]
+    assert rows == (("first", "u16"), ("data", "knots"))
+    assert [kind for _, kind in catalogue.HEADER] == ["u8", "u32", "u32"]
+    data = bytes(range(240))
+    body = pack("block", 7, 9, {"first": 300, "data": data})
+    for end in range(len(body) + 2):
+        cut = (body + b"x")[:end]
+        if end < len(body):
+            with pytest.raises(Refused) as refused:
+                unpack(cut)
+            assert refused.value.code == 2
+        else:
+            assert unpack(cut).values == {"first": 300, "data": data}

@@ -71,7 +71,7 @@ def test_codec_agrees_with_vectors(name: str, coder: str, monkeypatch: pytest.Mo
 def use_pure_coder(monkeypatch: pytest.MonkeyPatch) -> None:
     """What MicroPython runs: no `cobs` package."""
     monkeypatch.setattr(framing, "cobs_encode", seam.pure_encode)
-    monkeypatch.setattr(framing, "cobs_decode", seam.pure_decode)
+    monkeypatch.setattr(framing, "run_decode", seam.pure_decode)
 
 
 def test_both_coders_give_the_same_results_on_the_same_seeds(

@@ -279,7 +279,7 @@ def _targets(trace: Trace, folder: Path, what: str) -> list[Path]:
     if started.tzinfo is not None:
         started = started.astimezone(UTC)
     identity = re.sub(r"[^0-9A-Za-z]", "_", trace.trace_id)
-    label = f"-{trace.label}" if trace.label else ""
+    label = f"-{trace.label.replace(', ', '-')}" if trace.label else ""
     stem = f"{started:%Y%m%dT%H%M%SZ}"
     return [folder / f"{stem}-{part}{label}.parquet" for part in (identity[:8], identity)]
 

@@ -12,7 +12,7 @@ from typing import Annotated
 import typer
 
 import kneewise
-from kneewise.cli import emulate, rest, sweep
+from kneewise.cli import emulate, rest, sweep, wire
 from kneewise.errors import KneewiseError
 
 app = typer.Typer(
@@ -26,6 +26,7 @@ app = typer.Typer(
 )
 app.command("sweep", epilog="Example: kneewise sweep --on emulator --knots 128")(sweep.sweep)
 app.command("rest", epilog="Example: kneewise rest --on emulator")(rest.rest)
+app.command("wire", epilog="Example: kneewise wire session.jsonl")(wire.wire)
 app.command("emulate", epilog="Example: kneewise emulate --example > my_module.toml")(
     emulate.emulate
 )

@@ -8,8 +8,7 @@ from typing import Annotated
 
 import typer
 
-from kneewise.cli.targets import On, target_of
-from kneewise.instrument.tracer import Tracer
+from kneewise.cli.targets import On, Record, opened
 
 
 def rest(
@@ -17,16 +16,17 @@ def rest(
     clear_fault: Annotated[
         bool, typer.Option("--clear-fault", help="Clear a latched fault first.")
     ] = False,
+    record: Record = None,
     as_data: Annotated[
         bool, typer.Option("--json", help="One JSON object on stdout, messages on stderr.")
     ] = False,
 ) -> None:
     """Stop, bleed, and show the state; the contact is open and the bleed engaged afterwards."""
-    with Tracer.open(target_of(on)) as tracer:
+    with opened(on, record) as tracer:
         if clear_fault and tracer.status().state == "fault":
             tracer.clear_fault()
         status = tracer.rest()
-        label = "EMULATED" if tracer.emulated else ""
+        label = tracer.label
     if as_data:
         typer.echo(json.dumps({"label": label, **asdict(status)}))
         return

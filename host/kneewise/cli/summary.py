@@ -15,6 +15,7 @@ RUNGS = {
     "in-process": "the firmware ran in-process on CPython against the emulated plant",
     "chip": "the firmware ran on an emulated RP2040 with the emulated plant beside it",
     "emulator": "an emulated tracer behind a port",
+    "replay": "a recording, replayed; nothing was measured anew",
     "tracer": "a tracer",
 }
 NAMES = {

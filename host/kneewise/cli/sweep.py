@@ -9,10 +9,9 @@ from typing import Annotated
 import typer
 
 from kneewise.cli.summary import as_json, as_text
-from kneewise.cli.targets import On, target_of
+from kneewise.cli.targets import On, Record, opened
 from kneewise.errors import TrustError
 from kneewise.instrument.trace import Trace
-from kneewise.instrument.tracer import Tracer
 
 CAUTION = (
     "Caution: a PV source in light is live, and a charged capacitor can injure. Local codes and "
@@ -39,12 +38,12 @@ def sweep(
             "no inverter, no parallel string.",
         ),
     ] = False,
+    record: Record = None,
     as_data: Annotated[
         bool, typer.Option("--json", help="One JSON object on stdout, messages on stderr.")
     ] = False,
 ) -> None:
     """Sweep once: arm, fire, capture, bleed, fetch, check, store, draw."""
-    target = target_of(on)
     files: list[Path] = []
 
     def say(text: str) -> None:
@@ -55,8 +54,8 @@ def sweep(
 
         files.append(save(trace, store))
 
-    with Tracer.open(target, source_stands_alone=stands_alone) as tracer:
-        if not tracer.emulated:
+    with opened(on, record, stands_alone=stands_alone) as tracer:
+        if not tracer.label:
             say(CAUTION)
         earlier = tracer.held(keep=keep)
         if earlier is not None:

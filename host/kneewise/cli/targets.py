@@ -1,12 +1,16 @@
-"""Which tracer is meant: the one named, or the only one plugged in."""
+"""Which tracer is meant: the one named, or the only one plugged in; and opening it."""
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+from contextlib import contextmanager
+from pathlib import Path
 from typing import Annotated
 
 import typer
 
 from kneewise.errors import LinkError, UsageError
+from kneewise.instrument.tracer import Tracer
 
 # USB identity of the RP2 port of MicroPython (its published board definition, from memory).
 USB_VENDOR = 0x2E8A
@@ -17,10 +21,33 @@ On = Annotated[
     typer.Option(
         "--on",
         metavar="TARGET",
-        help="Tracer: a serial port, usb:SERIAL, tcp:HOST:PORT, emulator or "
-        "emulator:SCENARIO.toml. May be left out with one tracer plugged in.",
+        help="Tracer: a serial port, usb:SERIAL, tcp:HOST:PORT, emulator, "
+        "emulator:SCENARIO.toml or replay:FILE. May be left out with one tracer plugged in.",
     ),
 ]
+Record = Annotated[
+    Path | None,
+    typer.Option(
+        "--record",
+        metavar="FILE",
+        help="Record all that goes over the link to a new file, for `kneewise wire FILE` "
+        "and --on replay:FILE.",
+    ),
+]
+
+
+@contextmanager
+def opened(on: str, record: Path | None = None, *, stands_alone: bool = False) -> Iterator[Tracer]:
+    """The tracer that is meant; people are told of a replay and of what became of a recording."""
+    target = target_of(on)
+    with Tracer.open(target, source_stands_alone=stands_alone, record=record) as tracer:
+        if tracer.remark:
+            typer.echo(tracer.remark, err=True)
+        try:
+            yield tracer
+        finally:
+            if tracer.recorder is not None:
+                typer.echo(tracer.recorder.outcome(), err=True)
 
 
 def target_of(named: str) -> str:

@@ -1,6 +1,6 @@
-"""A link that loses, damages and repeats bytes, seeded: a port around another port.
+"""A link that loses, damages, repeats and holds back what it carries, seeded.
 
-It stands on the host's side of any port, so it serves every rung.
+A port around another port, on the host's side, so it serves every rung.
 """
 
 from __future__ import annotations
@@ -13,11 +13,17 @@ from kneewise.link.port import Port
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class LinkFaults:
-    """Probabilities for each byte, both ways alike."""
+    """Probabilities, both ways alike: the first three for each byte, the others for each piece
+    that is read or written at once.
+    """
 
     lose: float = 0.0
     corrupt: float = 0.0
     repeat: float = 0.0
+    lose_piece: float = 0.0
+    repeat_piece: float = 0.0
+    delay_piece: float = 0.0
+    """Held back until the next piece, and then carried before or behind it."""
 
 
 class FaultyPort:
@@ -30,6 +36,7 @@ class FaultyPort:
         self.spoilt = 0
         self._port = port
         self._random = Random(seed)
+        self._held = {True: b"", False: b""}  # of what was written, of what was read
 
     def clock(self) -> float:
         return self._port.clock()
@@ -38,30 +45,44 @@ class FaultyPort:
         self._port.sleep(seconds)
 
     def read(self, timeout_s: float) -> bytes:
-        return self._spoil(self._port.read(timeout_s))
+        return self._spoil(self._port.read(timeout_s), False)
 
     def write(self, data: bytes) -> None:
-        self._port.write(self._spoil(data))
+        spoilt = self._spoil(data, True)
+        if spoilt:
+            self._port.write(spoilt)
 
     def close(self) -> None:
         self._port.close()
 
-    def _spoil(self, data: bytes) -> bytes:
+    def _spoil(self, data: bytes, written: bool) -> bytes:
         self.carried += len(data)
-        faults = self.faults
-        out = bytearray()
-        for byte in data:
-            draw = self._random.random()
-            if draw < faults.lose:
-                self.spoilt += 1
-                continue
-            draw -= faults.lose
-            if draw < faults.corrupt:
-                self.spoilt += 1
-                out.append(byte ^ self._random.randrange(1, 256))
-                continue
-            out.append(byte)
-            if draw - faults.corrupt < faults.repeat:
-                self.spoilt += 1
-                out.append(byte)
-        return bytes(out)
+        data = b"".join(self._byte(byte) for byte in data)
+        faults, draw = self.faults, self._random.random()
+        held, self._held[written] = self._held[written], b""
+        if not data:
+            return held
+        if draw < faults.lose_piece:
+            self.spoilt += len(data)
+            return held
+        draw -= faults.lose_piece
+        if draw < faults.repeat_piece:
+            data += data
+        elif draw - faults.repeat_piece < faults.delay_piece:
+            self._held[written] = data
+            data = b""
+        return held + data if self._random.random() < 0.5 else data + held
+
+    def _byte(self, byte: int) -> bytes:
+        faults, draw = self.faults, self._random.random()
+        if draw < faults.lose:
+            self.spoilt += 1
+            return b""
+        draw -= faults.lose
+        if draw < faults.corrupt:
+            self.spoilt += 1
+            return bytes([byte ^ self._random.randrange(1, 256)])
+        if draw - faults.corrupt < faults.repeat:
+            self.spoilt += 1
+            return bytes([byte, byte])
+        return bytes([byte])

@@ -11,7 +11,9 @@ START_LINE = "from tracer import app; app.main()"
 START = "start"
 RESET = "reset"
 
-BANNER = b'\r\nMicroPython v1.28.0 on CPython, in-process\r\nType "help()" for more information.\r\n'
+BANNER = (
+    b'\r\nMicroPython v1.28.0 on CPython, in-process\r\nType "help()" for more information.\r\n'
+)
 PROMPT = b">>> "
 RAW = b"raw REPL; CTRL-B to exit\r\n>"
 _CTRL_A, _CTRL_B, _CTRL_C, _CTRL_D, _RETURN, _BACKSPACE = 1, 2, 3, 4, 13, 8
@@ -60,7 +62,7 @@ class Prompt:
             if text == START_LINE:
                 return START
             self.said += (_ERROR if text and not text.startswith("#") else b"") + PROMPT
-        elif byte >= 32:
+        elif 32 <= byte < 127:
             line.append(byte)
             self.said += bytes([byte])
         return ""

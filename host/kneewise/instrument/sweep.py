@@ -90,6 +90,7 @@ def fetch(session: Session, manifest: Message) -> Reassembly:
             if reassembly.crc_ok():
                 return reassembly
             reassembly.forget()
+            left = reassembly.missing()
         fruitless = fruitless + 1 if left == missing else 0
         if 2 * left > missing:
             a_block = max(1, a_block // 3)

@@ -20,6 +20,16 @@ Floats = npt.NDArray[np.float64]
 Counts = npt.NDArray[np.uint64]
 
 
+REPLAY = "replay"
+"""The rung of what comes from a recording."""
+
+
+def label_of(emulated: bool, rung: str) -> str:
+    """ "EMULATED", "REPLAYED", both, or "" for what a tracer measures now."""
+    words = (("EMULATED", emulated), ("REPLAYED", rung == REPLAY))
+    return ", ".join(word for word, holds in words if holds)
+
+
 @dataclass(frozen=True, slots=True)
 class RawKnots:
     """Knots as measured, arrays of shape (n,), uint64.
@@ -124,8 +134,8 @@ class Trace:
 
     @property
     def label(self) -> str:
-        """ "EMULATED" or "" - stands on the face of all that comes from this trace."""
-        return "EMULATED" if self.emulated else ""
+        """See `label_of` - stands on the face of all that comes from this trace."""
+        return label_of(self.emulated, self.rung)
 
     @cached_property
     def _figures(self) -> Figures:

@@ -11,6 +11,7 @@ import secrets
 from collections.abc import Callable
 from dataclasses import dataclass
 from datetime import UTC, datetime, timedelta
+from pathlib import Path
 from types import TracebackType
 from typing import Any, Self, TypeVar
 
@@ -27,9 +28,11 @@ from kneewise.instrument.assemble import assemble
 from kneewise.instrument.profile import read_record
 from kneewise.instrument.status import Status, fault_of, status_of
 from kneewise.instrument.sweep import Reassembly, fetch
-from kneewise.instrument.trace import Trace
+from kneewise.instrument.trace import Trace, label_of
 from kneewise.link.clock import Probe, estimate
+from kneewise.link.frames import FrameLog
 from kneewise.link.port import Port, open_port
+from kneewise.link.recording import Recorder
 from kneewise.link.refusals import CODES
 from kneewise.link.session import Session
 
@@ -54,13 +57,18 @@ _OPENERS: dict[str, Opener] = {}
 
 @dataclass(frozen=True, slots=True)
 class Opened:
-    """What an opener gives: a way to get a port, and what is known of an emulated source."""
+    """What an opener gives: a way to get a port, and what is known of an emulated source.
+
+    `utc` is the time of day at the tracer, now; `remark` is for people to know of the target.
+    """
 
     connect: Callable[[], Port]
     close: Callable[[], None]
     rung: str
     scenario: dict[str, Any] | None = None
     truth: dict[str, float] | None = None
+    utc: Callable[[], datetime] = lambda: datetime.now(UTC)
+    remark: str = ""
 
 
 def register_opener(prefix: str, opener: Opener) -> None:
@@ -75,14 +83,24 @@ def _open_serial(target: str) -> Opened:
 class Tracer:
     """One tracer, real or emulated. Open it with `Tracer.open`, close it or use `with`."""
 
-    def __init__(self, opened: Opened, *, source_stands_alone: bool = False) -> None:
+    def __init__(
+        self,
+        opened: Opened,
+        *,
+        source_stands_alone: bool = False,
+        recorder: Recorder | None = None,
+    ) -> None:
         self._opened = opened
+        self.remark = opened.remark
+        self.recorder = recorder
         self._closed = False
         try:
-            self._session = Session(opened.connect())
+            self._session = Session(self._connect())
         except BaseException:
             opened.close()
             raise
+        self.frames: FrameLog = self._session.frames
+        """What went over the link lately."""
         try:
             self.device = self._session.hello()
             record = self._session.request("read_profile")["record"]
@@ -93,16 +111,25 @@ class Tracer:
         self.source_stands_alone = source_stands_alone or self.emulated
 
     @classmethod
-    def open(cls, target: str, *, source_stands_alone: bool = False) -> Self:
-        """Open "/dev/ttyACM0", "COM5", "usb:SERIAL", "tcp:host:port", "emulator" and the like.
+    def open(
+        cls, target: str, *, source_stands_alone: bool = False, record: Path | str | None = None
+    ) -> Self:
+        """Open "/dev/ttyACM0", "COM5", "usb:SERIAL", "tcp:host:port", "emulator", "replay:FILE"
+        and the like.
 
         `source_stands_alone`: the operator confirms that nothing else (battery, inverter,
         parallel strings) feeds the source's terminals; without it a real tracer refuses.
+        `record`: a new file for all that goes over the link, for `replay:FILE`.
         Raises UsageError, LinkError, ProtocolError.
         """
         prefix = target.split(":", 1)[0]
         opened = _OPENERS.get(prefix, _open_serial)(target)
-        return cls(opened, source_stands_alone=source_stands_alone)
+        recorder = None if record is None else Recorder(record, target)
+        return cls(opened, source_stands_alone=source_stands_alone, recorder=recorder)
+
+    def _connect(self) -> Port:
+        port = self._opened.connect()
+        return port if self.recorder is None else self.recorder.wrap(port)
 
     @property
     def emulated(self) -> bool:
@@ -116,12 +143,19 @@ class Tracer:
             return "emulator"
         return self._opened.rung
 
+    @property
+    def label(self) -> str:
+        """What stands on the face of all that comes from here; see `Trace.label`."""
+        return label_of(self.emulated, self.rung)
+
     def close(self) -> None:
         """Close the port; twice is harmless."""
         if not self._closed:
             self._closed = True
             self._session.port.close()
             self._opened.close()
+            if self.recorder is not None:
+                self.recorder.close()
 
     def __enter__(self) -> Self:
         return self
@@ -139,6 +173,10 @@ class Tracer:
     def status(self) -> Status:
         """State and live readings."""
         return status_of(self._session.request("status"), self.profile)
+
+    def listen(self, seconds: float) -> None:
+        """Hear what comes unasked for so long: frames and text go to `frames`."""
+        self._session.wait_notice("", seconds)
 
     def rest(self) -> Status:
         """Stop whatever is under way, wait until the capacitor is bled; the state then.
@@ -280,7 +318,7 @@ class Tracer:
         port.close()
         while True:
             try:
-                self._session.take_over(self._opened.connect())
+                self._session.take_over(self._connect())
                 self.device = self._session.hello()
                 return
             except LinkError:
@@ -400,6 +438,6 @@ class Tracer:
 
     def _utc(self, device_us: int, probes: list[Probe]) -> tuple[str, float]:
         offset = estimate(probes)
-        now = datetime.now(UTC)
+        now = self._opened.utc()
         ago_s = self._session.port.clock() + offset.offset_s - device_us / 1e6
         return (now - timedelta(seconds=ago_s)).isoformat(), offset.uncertainty_s

@@ -9,7 +9,6 @@ still held, and the session goes on.
 from __future__ import annotations
 
 import logging
-import math
 import random
 from collections import deque
 from collections.abc import Callable
@@ -40,7 +39,11 @@ RESCUE_S = 8.0
 AGAIN_S = 0.15
 PROMPT_S = 0.3
 BEAT_S = 0.5
-NUDGE_AFTER = 3  # tries, before a line end is sent along to make a prompt show itself
+# After so many tries something is sent along to make a prompt show itself: the end of a line and
+# of a raw prompt. A hello shows a plain prompt by its echo, and must not run a line there.
+NUDGE_AFTER = 3
+NUDGE = b"\r\x02" + framing.DELIMITER
+HELLO_NUDGE = b"\x02" + framing.DELIMITER
 SMALL_FRAME = 64  # bytes of body and CRC that any device takes; hello tells the rest
 # Bytes of a hello that mean nothing to a MicroPython prompt (see the catalogue).
 HELLO_SEQUENCE = int.from_bytes(b"iKne", "little")
@@ -169,13 +172,11 @@ class Session:
         self.sequence += 1
         return pack(name, self.session, self.sequence, values)
 
-    def _send(self, body: bytes, *, again: bool = False, nudge: bool = False) -> None:
+    def _send(self, body: bytes, *, again: bool = False, nudge: bytes = b"") -> None:
         room = self.device.get("max_frame", SMALL_FRAME)
         if len(body) + framing.CRC_BYTES > room:
             raise ValueError(f"a body of {len(body)} bytes; the device takes {room} with its CRC")
-        coded = framing.GUARD + framing.encode(body, toward_device=True)
-        if nudge:
-            coded = b"\r" + framing.DELIMITER + coded
+        coded = nudge + framing.GUARD + framing.encode(body, toward_device=True)
         self.port.write(coded)
         self.frames.sent(self.port.clock(), coded, body, again=again)
 
@@ -227,14 +228,13 @@ class Session:
         end = self.port.clock() + deadline_s
         again = self.port.clock()
         tries = 0
-        # A hello shows a prompt by its echo, and must not run a line there.
-        nudge_after = NUDGE_AFTER if name != "hello" else math.inf
+        nudge = HELLO_NUDGE if name == "hello" else NUDGE
         while True:
             now = self.port.clock()
             if now >= end:
                 raise self._silent(name, deadline_s)
             if now >= again:
-                self._send(body, again=tries > 0, nudge=tries >= nudge_after)
+                self._send(body, again=tries > 0, nudge=nudge if tries >= NUDGE_AFTER else b"")
                 tries += 1
                 again = now + again_s
             for message in self._pump(min(end, again) - now):
@@ -311,7 +311,8 @@ class Session:
                 if self.port.clock() >= end:
                     raise
             except ProtocolError:
-                if self.port.clock() >= end or "Error" in self._said():
+                # Without the firmware's files no other try helps.
+                if self.port.clock() >= end or "ImportError" in self._said():
                     raise
             finally:
                 self.text = ""
