@@ -9,6 +9,7 @@ from __future__ import annotations
 from zlib import crc32
 
 import numpy as np
+import numpy.typing as npt
 
 from kneewire import catalogue
 from kneewire.fields import FIXED
@@ -119,15 +120,23 @@ def _fetch_run(
         session.burst(wanted, reassembly.take)
 
 
+# One record as it lies on the wire; numpy has no integer of 48 bits.
+_WIDE = {"u32": "<u4", "u48": "V6", "u64": "<u8"}
+KNOT_DTYPE = np.dtype([(name, _WIDE[kind]) for name, kind in catalogue.KNOT])
+
+
+def knot_view(data: bytes) -> npt.NDArray[np.void]:
+    """Knot records as a structured array over the same memory, shape (knots,)."""
+    return np.frombuffer(data, dtype=KNOT_DTYPE)
+
+
 def unpack_records(data: bytes) -> RawKnots:
     """Knot records as arrays."""
-    rows = np.frombuffer(data, dtype=np.uint8).reshape(-1, KNOT_BYTES)
+    view = knot_view(data)
     columns = {}
-    place = 0
     for name, kind in catalogue.KNOT:
         size, _ = FIXED[kind]
-        wide = np.zeros((len(rows), 8), dtype=np.uint8)
-        wide[:, :size] = rows[:, place : place + size]
+        wide = np.zeros((len(view), 8), dtype=np.uint8)
+        wide[:, :size] = np.ascontiguousarray(view[name]).view(np.uint8).reshape(-1, size)
         columns[name] = wide.view("<u8").reshape(-1).astype(np.uint64)
-        place += size
     return RawKnots(**columns)
