@@ -15,6 +15,7 @@ import wire_golden
 from kneewire import catalogue, framing, seam
 
 NAMES = sorted(wire_golden.FILES)
+CHECKED = sorted(wire_checks.CHECKS)
 
 
 def stored(name: str) -> Any:
@@ -22,8 +23,10 @@ def stored(name: str) -> Any:
 
 
 def test_no_vector_file_is_without_its_maker() -> None:
-    assert sorted(path.name for path in wire_golden.VECTORS.iterdir()) == NAMES
-    assert sorted(wire_checks.CHECKS) == NAMES
+    files = sorted(path.name for path in wire_golden.VECTORS.iterdir() if path.is_file())
+    assert files == sorted([*NAMES, "conversations.json"])
+    # The catalogue is for building the other side of a version; there is no codec in it.
+    assert [name for name in NAMES if name != "catalogue.json"] == CHECKED
 
 
 @pytest.mark.parametrize("name", NAMES)
@@ -57,7 +60,7 @@ def test_framing_vectors_cover_every_reason_and_the_lengths_that_usb_packets_mak
 
 
 @pytest.mark.parametrize("coder", ["seam", "pure"])
-@pytest.mark.parametrize("name", NAMES)
+@pytest.mark.parametrize("name", CHECKED)
 def test_codec_agrees_with_vectors(name: str, coder: str, monkeypatch: pytest.MonkeyPatch) -> None:
     if coder == "pure":
         use_pure_coder(monkeypatch)

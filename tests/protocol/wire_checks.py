@@ -118,6 +118,8 @@ def check_messages(vectors):
         body = unhex(row["body"])
         made = messages.pack(row["name"], row["session"], row["sequence"], values)
         yield compared(name + ", packed", made, body)
+        to_device = catalogue.MESSAGES[kind][1] == catalogue.TO_DEVICE
+        yield compared(name + ", framed", framing.encode(body, to_device), unhex(row["frame"]))
         for tail in (b"", b"\x00", b"new field"):
             message = messages.unpack(body + tail)
             head = (message.name, message.session, message.sequence)

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import json
 import struct
+import sys
 import zlib
 from pathlib import Path
 from typing import Any
@@ -23,7 +24,7 @@ from wire_examples import (
     SESSION,
 )
 
-from kneewire import catalogue, profile_record
+from kneewire import PROTOCOL, catalogue, profile_record
 
 VECTORS = Path(__file__).resolve().parents[2] / "protocol" / "vectors"
 ROWS = {name: rows for name, _, _, _, rows in catalogue.MESSAGES.values()}
@@ -339,8 +340,9 @@ def _session_of(name: str) -> tuple[int, int]:
 
 def messages_vectors() -> dict[str, Any]:
     golden = []
-    for kind, (name, *_) in catalogue.MESSAGES.items():
+    for kind, (name, direction, *_) in catalogue.MESSAGES.items():
         session, sequence = _session_of(name)
+        content = body(name, session, sequence, EXAMPLES[name])
         golden.append(
             {
                 "name": name,
@@ -348,7 +350,8 @@ def messages_vectors() -> dict[str, Any]:
                 "session": session,
                 "sequence": sequence,
                 "values": plain(EXAMPLES[name]),
-                "body": body(name, session, sequence, EXAMPLES[name]).hex(),
+                "body": content.hex(),
+                "frame": frame(content, direction == catalogue.TO_DEVICE).hex(),
             }
         )
     fire = body("fire", SESSION, 515, EXAMPLES["fire"])
@@ -365,9 +368,9 @@ def messages_vectors() -> dict[str, Any]:
         ("length cut in two", profile[:10], 2, 0x91, SESSION, 515),
     ]
     return {
-        "about": "One body of every message, before framing. All integers are exact, up to 64 "
-        "bits; byte fields and knot records as hex. A body with more bytes at its end is the same "
-        "message.",
+        "about": "One body of every message, and its frame in the direction that it travels. All "
+        "integers are exact, up to 64 bits; byte fields and knot records as hex. A body with more "
+        "bytes at its end is the same message.",
         "fingerprint": fingerprint(),
         "knots": [
             {"values": values, "bytes": data.hex()}
@@ -415,11 +418,34 @@ def profile_vectors() -> dict[str, Any]:
     }
 
 
+def catalogue_vectors() -> dict[str, Any]:
+    """The tables themselves, so that a device or a host of this version can be built later."""
+    return {
+        "about": "The catalogue of this version as data: what is needed to play one side of it.",
+        "protocol": list(PROTOCOL),
+        "fingerprint": fingerprint(),
+        "header": [list(row) for row in catalogue.HEADER],
+        "knot": [list(row) for row in catalogue.KNOT],
+        "messages": [
+            {
+                "kind": kind,
+                "name": name,
+                "to_device": direction == catalogue.TO_DEVICE,
+                "frozen": frozen,
+                "changes": changes,
+                "fields": [list(row) for row in rows],
+            }
+            for kind, (name, direction, frozen, changes, rows) in catalogue.MESSAGES.items()
+        ],
+    }
+
+
 FILES = {
     "cobs.json": cobs_vectors,
     "framing.json": framing_vectors,
     "messages.json": messages_vectors,
     "profile.json": profile_vectors,
+    "catalogue.json": catalogue_vectors,
 }
 
 
@@ -428,6 +454,18 @@ def written(name: str) -> str:
     return json.dumps(FILES[name](), indent=1) + "\n"
 
 
+def main() -> None:
+    """Write the files; with a version as argument also freeze them in a folder of its name."""
+    folders = [VECTORS]
+    for version in sys.argv[1:]:
+        folders.append(VECTORS / version)
+        if folders[-1].exists():
+            raise SystemExit(f"{version} is frozen already; a released version never changes")
+        folders[-1].mkdir()
+    for folder in folders:
+        for file_name in FILES:
+            (folder / file_name).write_text(written(file_name), encoding="ascii")
+
+
 if __name__ == "__main__":
-    for file_name in FILES:
-        (VECTORS / file_name).write_text(written(file_name), encoding="ascii")
+    main()

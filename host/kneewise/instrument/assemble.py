@@ -45,6 +45,14 @@ def assemble(
             if end_reason == "no current"
             else "clear what ended the sweep, then sweep again",
         )
+    if not profile or not values["conversions"] or not raw.pairs.all():
+        raise TrustError(
+            f"sweep {values['sweep_id'].hex()[:8]}",
+            found="no valid profile on the device" if not profile else "sums over nothing",
+            expected="knots of at least one pair each, readings, and the scales for them",
+            next_step="store the profile of this board on the device, and use firmware and host "
+            "of the same version; then sweep again",
+        )
     scales = Scales.of(profile)
     static = Reading(values["voltage_sum"], values["conversions"])
     zero = Reading(values["current_sum"], values["conversions"])

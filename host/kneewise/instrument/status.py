@@ -36,10 +36,10 @@ def status_of(message: Message, profile: dict[str, Any]) -> Status:
     scales = Scales.of(profile) if profile else None
 
     def mean(name: str) -> float:
-        return float(values[name]) / float(values["conversions"])
+        return float(values[name]) / values["conversions"] if values["conversions"] else nan
 
     return Status(
-        state=catalogue.STATES[values["state"]],
+        state=catalogue.STATES.get(values["state"], f"state {values['state']}"),
         contact_closed=bool(values["contact_closed"]),
         bleed_engaged=bool(values["bleed_engaged"]),
         stop_loop_closed=bool(values["stop_loop_closed"]),

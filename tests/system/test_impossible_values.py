@@ -1,0 +1,50 @@
+"""If these fail, a device that sends what cannot be shows its user a traceback."""
+
+from __future__ import annotations
+
+import contextlib
+import math
+
+import pytest
+
+from kneewise.errors import KneewiseError
+from kneewise.link.session import Session
+
+
+def changed(monkeypatch, kind, **changes):
+    """Let replies of a kind arrive with other values, their CRC right."""
+    plain = Session.request
+
+    def request(session, name, *args, **more):
+        reply = plain(session, name, *args, **more)
+        if name == kind:
+            reply.values.update(changes)
+        return reply
+
+    monkeypatch.setattr(Session, "request", request)
+
+
+@pytest.mark.clause("B7")
+def test_a_state_that_this_host_does_not_know_is_shown_as_its_number(bench, monkeypatch):
+    tracer = bench("in-process").tracer()
+    changed(monkeypatch, "status", state=77)
+    assert tracer.status().state == "state 77"
+
+
+def test_a_reading_over_no_conversions_is_no_number(bench, monkeypatch):
+    tracer = bench("in-process").tracer()
+    changed(monkeypatch, "status", conversions=0)
+    assert math.isnan(tracer.status().source_v)
+
+
+@pytest.mark.parametrize(
+    "changes", [{"conversions": 0}, {"knots": 0}, {"knots": 3}, {"pair_ns": 0}, {"end_reason": 200}]
+)
+def test_a_manifest_that_cannot_be_is_an_error_of_ours_or_an_unsound_trace(
+    bench, monkeypatch, changes
+):
+    tracer = bench("in-process").tracer()
+    changed(monkeypatch, "read_manifest", **changes)
+    with contextlib.suppress(KneewiseError):
+        trace = tracer.sweep(knots=16)
+        assert not trace.sound or "pair_ns" in changes
