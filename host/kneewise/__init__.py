@@ -11,8 +11,9 @@ from __future__ import annotations
 from importlib import metadata
 
 from kneewise.errors import KneewiseError, UsageError
+from kneewise.instrument.opened import Opened, register_opener
 from kneewise.instrument.trace import REPLAY, Trace
-from kneewise.instrument.tracer import Opened, Tracer, register_opener
+from kneewise.instrument.tracer import Tracer
 from kneewise.link.recording import read_recording
 from kneewise.link.replay import ReplayPort
 

@@ -16,9 +16,10 @@ from kneewise.emulator.faults import FaultyPort, LinkFaults
 from kneewise.emulator.opener import connector, start
 from kneewise.emulator.scenario import Scenario
 from kneewise.errors import KneewiseError
+from kneewise.instrument.opened import Opened
 from kneewise.instrument.sweep import knot_view, unpack_records
 from kneewise.instrument.trace import RawKnots, Trace
-from kneewise.instrument.tracer import Opened, Tracer
+from kneewise.instrument.tracer import Tracer
 
 from .m0 import Core
 from .row import Row

@@ -9,7 +9,8 @@ from chip import HERE
 from kneewise.emulator.chip import CHIP_DEVICE_ID, ChipTracer
 from kneewise.emulator.opener import profile_for, scaling_of
 from kneewise.emulator.scenario import Scenario
-from kneewise.instrument.tracer import Opened, Tracer
+from kneewise.instrument.opened import Opened
+from kneewise.instrument.tracer import Tracer
 
 
 @contextmanager

@@ -12,8 +12,9 @@ from kneewise.emulator import process
 from kneewise.emulator.opener import connector, profile_for, scaling_of, start
 from kneewise.emulator.plant import Plant
 from kneewise.emulator.scenario import Scenario
+from kneewise.instrument.opened import Opened
 from kneewise.instrument.trace import Trace
-from kneewise.instrument.tracer import Opened, Tracer
+from kneewise.instrument.tracer import Tracer
 
 pytestmark = pytest.mark.skipif(missing() is not None, reason=str(missing()))
 

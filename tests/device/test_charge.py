@@ -114,6 +114,7 @@ def test_contact_and_bleed_take_turns_with_their_dead_times():
     assert max(board.when("read 0") + board.when("read 1")) <= released
 
 
+@pytest.mark.clause("W6")
 def test_nothing_is_sent_and_no_channel_is_read_in_the_capture():
     board = FakeBoard()
     Rig(board).run()
@@ -183,6 +184,7 @@ def test_a_stall_shorter_than_the_pulse_does_no_harm(stall_us):
 
 
 @pytest.mark.parametrize("after_us", range(0, 2000, 130))
+@pytest.mark.clause("W6", "A1")
 def test_an_abort_opens_the_contact_within_a_slice(after_us):
     board = slow()
     rig = Rig(board)
@@ -205,6 +207,7 @@ def test_an_abort_before_the_closing_keeps_the_contact_open(before):
     assert board.bleed_engaged
 
 
+@pytest.mark.clause("W7")
 def test_a_host_that_beats_may_watch_a_long_charge():
     board = slow()
     rig = Rig(board, heartbeat_lost_ms=50)

@@ -106,6 +106,7 @@ def test_a_request_right_behind_the_fire_is_answered_after_the_charge(device, na
         assert refusal(answer) == WRONG_STATE
 
 
+@pytest.mark.clause("W6")
 def test_what_was_asked_during_the_charge_is_answered_after_it(device):
     device.board.after_closing(3000, lambda: device.board.incoming.extend(device.frame("status")))
     _, ended, answer = device.sweep()
@@ -121,6 +122,7 @@ def test_an_aborted_sweep_is_held_as_one(device):
     assert device.ask("read_manifest")["end_reason"] == charge.ABORTED
 
 
+@pytest.mark.clause("W8")
 def test_the_end_of_the_bleed_is_told_once_for_each_sweep(device):
     device.sweep()
     assert device.bled == []
@@ -131,6 +133,7 @@ def test_the_end_of_the_bleed_is_told_once_for_each_sweep(device):
     assert (STATES[told["state"]], device.state()) == ("safe", "safe")
 
 
+@pytest.mark.clause("W13", "R3", "R4")
 def test_after_ctrl_c_in_mid_charge_the_sweep_so_far_is_held_and_the_session_goes_on(device):
     def interrupt(*values):
         del board.capture_written
@@ -206,6 +209,7 @@ def test_leaving_to_the_prompt_leaves_a_safe_board_without_watchdog(device):
 
 @pytest.mark.parametrize("kind", [KeyboardInterrupt, OSError, SystemExit])
 @pytest.mark.parametrize("broken", ["wait_us", "capture_written", "trips", "link_read"])
+@pytest.mark.clause("R4")
 def test_an_error_in_mid_charge_leaves_the_loop_with_a_safe_board(device, kind, broken):
     board = device.board
 

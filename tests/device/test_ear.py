@@ -63,6 +63,7 @@ CUTS = st.lists(st.integers(0, 600), max_size=12)
 
 @settings(max_examples=500)
 @given(ANY, ANY, CUTS)
+@pytest.mark.clause("A2")
 def test_abort_is_heard_behind_any_delimiter_in_any_pieces(before, after, places):
     assert hear(before + b"\0" + ABORT + after, places).aborted
 
@@ -92,6 +93,7 @@ def test_one_wrong_byte_is_no_abort(place):
 
 
 @pytest.mark.parametrize("other", OTHERS)
+@pytest.mark.clause("A2")
 def test_other_requests_are_no_abort(other):
     assert not hear(other * 3, [3, 9]).aborted
 
@@ -110,6 +112,7 @@ def test_nothing_is_an_abort_until_one_is_expected():
 
 @settings(max_examples=200)
 @given(st.binary(max_size=900), CUTS)
+@pytest.mark.clause("W6")
 def test_what_was_heard_is_kept_for_afterwards_as_far_as_there_is_room(data, places):
     ear = hear(data, places)
     assert ear.kept() == data[: module.KEEP]
@@ -129,6 +132,7 @@ def test_the_next_charge_starts_with_a_clean_ear():
     assert ear.kept() == ABORT[:4]
 
 
+@pytest.mark.clause("W7")
 def test_silence_and_voice_are_told_apart():
     board = FakeBoard()
     ear = module.Ear(board)

@@ -32,6 +32,7 @@ def device(board, tmp_path):
 
 
 @pytest.mark.parametrize("name", REQUESTS)
+@pytest.mark.clause("B3", "B4")
 def test_every_request_is_answered_in_its_own_name(device, name):
     frame = device.frame(name, VALUES.get(name), sequence=31)
     try:
@@ -52,6 +53,7 @@ def test_every_request_has_a_handler():
 
 
 @pytest.mark.parametrize("kind", [k for k in range(256) if k not in catalogue.MESSAGES])
+@pytest.mark.clause("B5")
 def test_a_kind_that_this_firmware_does_not_know_is_refused(device, kind):
     body = bytes([kind]) + pack("status", device.session, 5)[1:] + b"future fields"
     (answer,) = device.say(framing.encode(body, toward_device=True))
@@ -83,6 +85,7 @@ def test_even_half_a_header_is_answered(device):
         assert (refusal(answer), answer["of_kind"]) == (MALFORMED, 0x10)
 
 
+@pytest.mark.clause("B2")
 def test_extra_bytes_at_the_end_are_ignored(device):
     body = pack("arm", device.session, 9, VALUES["arm"]) + b"a later version's field"
     (answer,) = device.say(framing.encode(body, toward_device=True))
@@ -91,12 +94,14 @@ def test_extra_bytes_at_the_end_are_ignored(device):
 
 @pytest.mark.parametrize("name", [n for n in REQUESTS if n not in ("hello", "prompt", "abort")])
 @pytest.mark.parametrize("session", ["another", "none"])
+@pytest.mark.clause("S5")
 def test_a_stranger_is_refused(device, name, session):
     number = NO_SESSION if session == "none" else device.session ^ 1
     assert refusal(device.ask(name, VALUES.get(name), session=number)) == UNKNOWN_SESSION
     assert device.state() == "safe"
 
 
+@pytest.mark.clause("S5")
 def test_before_any_hello_nothing_but_hello_is_answered_with_more_than_a_refusal(board, tmp_path):
     device = Device(board, tmp_path)
     device.service.session = NO_SESSION
@@ -113,6 +118,7 @@ def test_arming_twice_with_the_same_sequence_gives_the_same_token(device):
     assert device.arm(sequence=5)["token"] != one["token"]
 
 
+@pytest.mark.clause("S2", "W4")
 def test_a_repeated_fire_closes_once(device):
     token = device.arm()["token"]
     fired = device.fire(token, sequence=9)
@@ -133,6 +139,7 @@ def test_a_refusal_is_repeated_as_well(device):
     assert device.state() == "armed"
 
 
+@pytest.mark.clause("S2", "S3")
 def test_the_last_eight_replies_are_kept_and_older_ones_are_stale(device):
     tokens = {sequence: device.arm(sequence=sequence)["token"] for sequence in range(1, 13)}
     for sequence in range(5, 13):
@@ -144,6 +151,7 @@ def test_the_last_eight_replies_are_kept_and_older_ones_are_stale(device):
 
 
 @pytest.mark.parametrize("name", CHANGING)
+@pytest.mark.clause("S1", "S3")
 def test_a_sequence_below_the_last_is_stale_and_does_nothing(device, name):
     token = device.arm(sequence=100)["token"]
     assert refusal(device.ask(name, VALUES.get(name), sequence=99)) == STALE
@@ -151,6 +159,7 @@ def test_a_sequence_below_the_last_is_stale_and_does_nothing(device, name):
     assert (device.state(), device.sequencer.token) == ("armed", token)
 
 
+@pytest.mark.clause("S4")
 def test_reading_needs_no_order(device):
     device.arm(sequence=100)
     for sequence in (100, 7, 7, 0):
@@ -160,6 +169,7 @@ def test_reading_needs_no_order(device):
 # -- hello ---------------------------------------------------------------------------------
 
 
+@pytest.mark.clause("H4")
 def test_hello_says_what_a_host_must_know(device):
     answer = device.hello()
     assert answer["device_id"] == DEVICE_ID
@@ -170,6 +180,7 @@ def test_hello_says_what_a_host_must_know(device):
     assert answer["flags"] == 0
 
 
+@pytest.mark.clause("H2", "H4")
 def test_hello_with_the_same_nonce_resumes_the_session(device):
     token = device.arm(sequence=4)["token"]
     session = device.session
@@ -178,6 +189,7 @@ def test_hello_with_the_same_nonce_resumes_the_session(device):
     assert device.arm(sequence=4)["token"] == token
 
 
+@pytest.mark.clause("H2")
 def test_hello_with_another_nonce_is_another_session(device):
     session = device.session
     device.arm(sequence=50)
@@ -207,6 +219,7 @@ def test_without_a_profile_hello_says_so_and_arming_says_why(board, tmp_path):
 # -- bytes ---------------------------------------------------------------------------------
 
 
+@pytest.mark.clause("F9")
 def test_a_short_write_costs_one_frame_and_no_more(device):
     board = device.board
     board.write_room = 11
@@ -237,6 +250,7 @@ def test_a_host_that_reads_nothing_for_long_is_answered_once_it_does(device):
 
 @settings(max_examples=100)
 @given(st.data())
+@pytest.mark.clause("F6")
 def test_garbage_between_requests_costs_at_most_the_next_one(tmp_path_factory, data):
     device = Device(FakeBoard(), tmp_path_factory.mktemp("device"))
     garbage = data.draw(st.binary(max_size=700))
@@ -250,6 +264,7 @@ def test_garbage_between_requests_costs_at_most_the_next_one(tmp_path_factory, d
     assert device.heard()[-1].sequence == 2
 
 
+@pytest.mark.clause("C3")
 def test_status_counts_good_and_bad_frames(device):
     before = device.ask("status")
     device.say(b"no frame at all\0" * 3)
@@ -258,11 +273,13 @@ def test_status_counts_good_and_bad_frames(device):
     assert after["frames_good"] - before["frames_good"] == 1
 
 
+@pytest.mark.clause("T1", "T2")
 def test_a_heartbeat_has_the_times_that_clocks_are_set_by(device):
     answer = device.ask("heartbeat")
     assert answer["received_us"] <= answer["replied_us"] == device.board.time_us
 
 
+@pytest.mark.clause("R5")
 def test_the_prompt_is_given_after_an_answer(device):
     device.board.incoming += device.frame("prompt")
     with pytest.raises(service_module.Leave):
@@ -271,6 +288,7 @@ def test_the_prompt_is_given_after_an_answer(device):
     assert answer["leaving"] == 1
 
 
+@pytest.mark.clause("R5")
 def test_the_prompt_is_refused_while_the_bleed_must_stay_off(device):
     device.sequencer.fault((2, 39000, 200, 1))
     assert device.ask("prompt")["leaving"] == 0

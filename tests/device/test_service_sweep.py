@@ -45,6 +45,7 @@ def put(device, state: str) -> None:
         ({"closed_limit_ms": 120_001}, False),
     ],
 )
+@pytest.mark.clause("W1", "B7")
 def test_arming_asks_for_no_more_than_there_is(device, changes, fine):
     answer = device.arm(**changes)
     assert answer.name == "arm_reply" if fine else refusal(answer) == OUT_OF_RANGE
@@ -57,6 +58,7 @@ def test_arming_is_refused_in_other_states(device, state):
     assert refusal(device.arm()) == WRONG_STATE
 
 
+@pytest.mark.clause("W1")
 def test_a_guard_says_what_it_found(device):
     device.board.capacitor_v = 5.0
     answer = device.arm()
@@ -75,6 +77,7 @@ def test_a_source_that_was_confirmed_once_stays_so_for_the_session(device):
     assert device.arm(confirmed=0).name == "arm_reply"
 
 
+@pytest.mark.clause("W2")
 def test_a_second_arming_that_is_refused_spends_the_first_token(device):
     token = device.arm()["token"]
     device.board.loop_closed = False
@@ -99,6 +102,7 @@ def test_fire_without_a_token_is_refused(device):
     assert device.service.fired is None
 
 
+@pytest.mark.clause("W3")
 def test_a_token_is_good_for_one_fire_even_a_wrong_one(device):
     token = device.arm()["token"]
     assert refusal(device.fire(token ^ 1)) == BAD_TOKEN
@@ -108,6 +112,7 @@ def test_a_token_is_good_for_one_fire_even_a_wrong_one(device):
     assert device.board.closings == 0
 
 
+@pytest.mark.clause("W2")
 def test_zero_is_never_a_token(device):
     device.arm()
     assert refusal(device.fire(0)) == BAD_TOKEN
@@ -117,6 +122,7 @@ def test_a_fire_needs_the_hosts_sweep_id(device):
     assert refusal(device.fire(device.arm()["token"], bytes(16))) == BAD_TOKEN
 
 
+@pytest.mark.clause("W2", "W3")
 def test_a_token_expires(device):
     token = device.arm()["token"]
     device.board.pass_us(2_000_000)
@@ -139,6 +145,7 @@ def test_the_guards_look_again_at_the_fire(device):
     assert refusal(device.fire(token)) == WRONG_STATE
 
 
+@pytest.mark.clause("W5")
 def test_the_quiet_that_is_announced_covers_the_charge(board, tmp_path):
     device = Device(board, tmp_path, closed_limit_ms=700)
     assert device.fire(device.arm(closed_limit_ms=5000)["token"])["quiet_ms"] >= 700
@@ -149,6 +156,7 @@ def test_the_quiet_that_is_announced_covers_the_charge(board, tmp_path):
 # -- the held sweep ------------------------------------------------------------------------
 
 
+@pytest.mark.clause("W8", "W10", "W11")
 def test_a_sweep_is_told_held_and_fetched_whole(device):
     fired, ended = device.sweep()
     assert (fired.name, ended.name, ended["sweep_id"]) == ("fire_reply", "charge_ended", SWEEP_ID)
@@ -170,6 +178,7 @@ def test_a_sweep_is_told_held_and_fetched_whole(device):
     assert knots[-1]["time_us"] < manifest["opened_us"]
 
 
+@pytest.mark.clause("W11")
 def test_a_gap_is_fetched_as_it_was_asked_for(device):
     device.sweep()
     asked = {"sweep_id": SWEEP_ID, "first": 7, "count": 11, "a_block": 0}
@@ -186,6 +195,7 @@ def test_knots_that_are_not_there_are_out_of_range(device, first, count):
     assert refusal(device.ask("fetch", asked)) == OUT_OF_RANGE
 
 
+@pytest.mark.clause("W11", "C2")
 def test_a_burst_is_no_longer_than_its_window(device):
     device.fire(device.arm(knots=512)["token"])
     device.turns(ms=1)
@@ -197,6 +207,7 @@ def test_a_burst_is_no_longer_than_its_window(device):
     assert end["count"] == 16 * KNOTS_A_BLOCK
 
 
+@pytest.mark.clause("F9")
 def test_a_burst_stops_where_the_host_stops_reading(device):
     device.sweep()
     device.board.write_room = 400
@@ -211,6 +222,7 @@ def test_a_burst_stops_where_the_host_stops_reading(device):
     assert device.say(device.frame("status"))[-1].name == "status_reply"
 
 
+@pytest.mark.clause("W9", "W10")
 def test_a_held_sweep_is_not_written_over(device):
     device.sweep()
     device.turns(lambda: device.state() == "safe")
@@ -237,6 +249,7 @@ def test_without_a_held_sweep_there_is_none_to_read(device):
     assert refusal(device.ask("fetch", {**asked, "sweep_id": OTHER_ID})) == NO_SWEEP
 
 
+@pytest.mark.clause("W9")
 def test_a_held_sweep_survives_a_new_session(device):
     device.sweep()
     device.hello(nonce=4321)
@@ -248,6 +261,7 @@ def test_a_held_sweep_survives_a_new_session(device):
 
 
 @pytest.mark.parametrize("state", list(STATES.values()))
+@pytest.mark.clause("A1", "A3")
 def test_abort_is_answered_in_every_state_as_often_as_it_comes(device, state):
     device.arm()
     put(device, state)
@@ -258,6 +272,7 @@ def test_abort_is_answered_in_every_state_as_often_as_it_comes(device, state):
         assert answer.sequence == 0
 
 
+@pytest.mark.clause("A3")
 def test_a_stranger_may_abort(device):
     token = device.arm()["token"]
     (answer,) = device.say(device.frame("abort", session=5, sequence=0))

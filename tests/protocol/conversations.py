@@ -19,7 +19,8 @@ from kneewire.messages import unpack
 from kneewise.emulator.opener import connector, start
 from kneewise.emulator.scenario import Scenario
 from kneewise.errors import OutcomeUnknownError
-from kneewise.instrument.tracer import Opened, Tracer
+from kneewise.instrument.opened import Opened
+from kneewise.instrument.tracer import Tracer
 from kneewise.link.port import Port
 
 FILE = Path(__file__).resolve().parents[2] / "protocol" / "vectors" / "conversations.json"

@@ -44,6 +44,7 @@ def decoded(stream: bytes, toward_device: bool, limit: int = LIMIT) -> list[tupl
 # -- codes -------------------------------------------------------------------------------
 
 
+@pytest.mark.clause("F2")
 def test_crc_is_the_catalogued_one() -> None:
     # CRC catalogue: CRC-32/ISO-HDLC of "123456789" is CBF43926; zlib has it too.
     assert seam.crc32(b"123456789") == 0xCBF43926 == zlib.crc32(b"123456789")
@@ -66,6 +67,7 @@ def test_crc_is_the_catalogued_one() -> None:
         (bytes(range(1, 256)).hex(), "ff" + bytes(range(1, 255)).hex() + "02ff"),
     ],
 )
+@pytest.mark.clause("F1")
 def test_cobs_is_the_published_one(data: str, coded: str) -> None:
     for encoder in (seam.pure_encode, seam.cobs_encode):
         assert encoder(bytes.fromhex(data)).hex() == coded
@@ -113,6 +115,7 @@ def test_what_is_encoded_comes_back(toward_device: bool, body: bytes) -> None:
 @given(body=bodies)
 @example(body=b"\x02\x03" * 60)
 @example(body=b"\x03" * LONGEST_BODY)
+@pytest.mark.clause("F4")
 def test_nothing_toward_the_device_is_a_ctrl_c(body: bytes) -> None:
     assert 3 not in encode(body, True)
 
@@ -169,6 +172,7 @@ def streams(draw: st.DrawFn, toward_device: bool) -> bytes:
 @both_ways
 @shortly
 @given(data=st.data())
+@pytest.mark.clause("F6")
 def test_a_stream_split_anywhere_gives_the_same_items(
     toward_device: bool, data: st.DataObject
 ) -> None:
@@ -193,6 +197,7 @@ def test_a_stream_split_anywhere_gives_the_same_items(
     pieces=st.lists(st.one_of(loose, st.binary(max_size=300)), max_size=8),
     limit=st.integers(0, 300),
 )
+@pytest.mark.clause("F8")
 def test_no_stream_raises_or_makes_the_decoder_grow(
     toward_device: bool, pieces: list[bytes], limit: int
 ) -> None:
@@ -242,6 +247,7 @@ def test_damage_inside_one_frame_spares_the_others(
 
 
 @both_ways
+@pytest.mark.clause("F9")
 def test_a_short_write_ended_by_a_delimiter_costs_only_itself(toward_device: bool) -> None:
     cut = encode(b"a block of knots", toward_device)
     for length in range(1, len(cut) - 1):
@@ -271,6 +277,7 @@ def test_a_crc_without_a_body_is_no_frame(body_size: int) -> None:
 @pytest.mark.parametrize(
     "run", [b"\x02", b"\x02\x02B", b"\x02\x06", b"a\x02", b"\x01", b"\x02\x03", b"\x04", b"\x05"]
 )
+@pytest.mark.clause("F5")
 def test_a_run_toward_the_device_has_one_spelling(run: bytes) -> None:
     # A host that forgets to escape must fail in every test, not first on an RP2040.
     assert told([decode_run(run, True)]) == [(framing.BAD_ESCAPE, run)]
@@ -279,6 +286,7 @@ def test_a_run_toward_the_device_has_one_spelling(run: bytes) -> None:
 # -- text outside frames -----------------------------------------------------------------
 
 
+@pytest.mark.clause("R2")
 def test_a_prompt_and_a_traceback_are_shown_as_what_they_are() -> None:
     said = b'Traceback (most recent call last):\r\n  File "main.py", line 7\r\nOSError: 28\r\n>>> '
     (item,) = Decoder(LIMIT, False).feed(said + framing.DELIMITER)

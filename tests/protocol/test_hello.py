@@ -141,6 +141,7 @@ class Prompt:
             self.cursor = cursor + 1
 
 
+@pytest.mark.clause("R1", "H5")
 def test_session_begins_with_a_comment_sign_and_one_hello() -> None:
     nonce = quiet_nonces(1)[0]
     frame = framing.encode(body(nonce), toward_device=True)
@@ -151,6 +152,7 @@ def test_session_begins_with_a_comment_sign_and_one_hello() -> None:
     assert len(written) == REPEATS
 
 
+@pytest.mark.clause("H5")
 def test_fingerprint_holds_no_byte_that_a_prompt_acts_on() -> None:
     assert all(byte >= 0x80 for byte in fingerprint().to_bytes(4, "little"))
 
@@ -162,6 +164,7 @@ def test_half_of_all_nonces_make_a_harmless_hello() -> None:
 
 
 @pytest.mark.parametrize("nonce", quiet_nonces(50))
+@pytest.mark.clause("H5")
 def test_hello_holds_only_the_control_bytes_that_it_cannot_avoid(nonce: int) -> None:
     frame = framing.encode(body(nonce), toward_device=True)
     assert {byte for byte in frame[:-1] if not harmless(byte)} <= CODE_AND_VERSION
@@ -178,6 +181,7 @@ def test_every_session_draws_a_nonce_that_makes_a_harmless_hello() -> None:
 @pytest.mark.parametrize(
     "version", [(0, minor) for minor in range(1, 9)] + [(1, minor) for minor in range(9)]
 )
+@pytest.mark.clause("H5")
 def test_hello_neither_runs_a_line_nor_leaves_the_prompt(version: tuple[int, int]) -> None:
     for nonce in quiet_nonces(20, version):
         hello = b"#\x00" + framing.encode(body(nonce, version), toward_device=True)

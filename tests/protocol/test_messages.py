@@ -63,6 +63,7 @@ def refusal(body: bytes) -> Refused:
 
 
 @pytest.mark.parametrize("name", NAMES)
+@pytest.mark.clause("B1")
 def test_message_comes_back_whole(name: str) -> None:
     @at_length
     @given(values=values_of(rows_of(name)), session=u32, sequence=u32, tail=st.binary(max_size=9))
@@ -79,6 +80,7 @@ def test_message_comes_back_whole(name: str) -> None:
 
 
 @pytest.mark.parametrize("name", NAMES)
+@pytest.mark.clause("B1")
 def test_message_holds_the_ends_of_every_range(name: str) -> None:
     rows = rows_of(name)
     for end in (0, 1):

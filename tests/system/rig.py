@@ -4,7 +4,8 @@ import pytest
 
 from kneewise.emulator import process
 from kneewise.emulator.opener import connector, start
-from kneewise.instrument.tracer import Opened, Tracer
+from kneewise.instrument.opened import Opened
+from kneewise.instrument.tracer import Tracer
 
 needs_micropython = pytest.mark.skipif(
     not process.available(),

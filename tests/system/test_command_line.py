@@ -183,6 +183,7 @@ def test_a_prompt_instead_of_firmware(tmp_path):
 
 
 @needs_micropython
+@pytest.mark.clause("R2", "R3")
 def test_a_firmware_left_at_the_prompt_is_started_from_there(tmp_path):
     program = "print('main.py did not get far')\n"
     profile = profile_for(Scenario.default())
@@ -197,6 +198,7 @@ def test_a_firmware_left_at_the_prompt_is_started_from_there(tmp_path):
 
 
 @needs_micropython
+@pytest.mark.clause("R2")
 def test_a_firmware_that_crashes_at_start(tmp_path):
     program = "import sys\nsys.path[:] = []\nraise OSError('flash is worn')\n"
     tracer = ProcessTracer(Scenario.default(), Scaling(), b"", b"KNEEWISE", program=program)

@@ -55,6 +55,7 @@ def test_cut_in_the_middle_of_the_transfer(cut_at, bench, rung, monkeypatch):
     assert tracer.status().held_sweep == ""
 
 
+@pytest.mark.clause("W11", "W12")
 def test_a_lost_block_is_asked_for_again(bench, rung, monkeypatch):
     """One damaged frame would cost the whole sweep."""
     take = Reassembly.take
@@ -92,6 +93,7 @@ def test_a_sweep_held_is_not_overwritten(bench, rung):
         tracer.sweep()
 
 
+@pytest.mark.clause("W14", "H4")
 def test_reset_after_fire_is_outcome_unknown_and_never_a_second_fire(bench, rung, monkeypatch):
     """After a reset the host cannot know whether the contact closed: it must not close it."""
     one = bench(rung)

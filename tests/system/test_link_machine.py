@@ -21,9 +21,10 @@ from kneewise.emulator.faults import FaultyPort, LinkFaults
 from kneewise.emulator.opener import connector, start
 from kneewise.emulator.scenario import Scenario
 from kneewise.errors import KneewiseError
+from kneewise.instrument.opened import Opened
 from kneewise.instrument.sweep import unpack_records
 from kneewise.instrument.trace import RawKnots, Trace
-from kneewise.instrument.tracer import Opened, Tracer
+from kneewise.instrument.tracer import Tracer
 
 KNOT_BYTES = 40
 CALL_S = 180.0  # of virtual time: a bad link's deadlines, one after the other

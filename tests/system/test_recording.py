@@ -17,8 +17,9 @@ from kneewise.errors import (
     UsageError,
 )
 from kneewise.instrument import sweep as sweep_module
+from kneewise.instrument.opened import Opened
 from kneewise.instrument.sweep import Reassembly
-from kneewise.instrument.tracer import Opened, Tracer
+from kneewise.instrument.tracer import Tracer
 from kneewise.link.recording import OPENED, Recorder, read_recording
 
 

@@ -18,8 +18,8 @@ from kneewise.emulator.inprocess import InProcessTracer
 from kneewise.emulator.process import ProcessTracer, available
 from kneewise.emulator.scenario import Scenario
 from kneewise.errors import UsageError
+from kneewise.instrument.opened import Opened
 from kneewise.instrument.profile import BoardProfile
-from kneewise.instrument.tracer import Opened
 from kneewise.link.port import Port, open_port
 
 DEVICE_ID = b"KNEEWISE"

@@ -9,11 +9,10 @@ from __future__ import annotations
 import logging
 import secrets
 from collections.abc import Callable
-from dataclasses import dataclass
-from datetime import UTC, datetime, timedelta
+from datetime import timedelta
 from pathlib import Path
 from types import TracebackType
-from typing import Any, Self, TypeVar
+from typing import Self, TypeVar
 
 from kneewire import catalogue
 from kneewire.messages import Message
@@ -25,13 +24,14 @@ from kneewise.errors import (
     TrustError,
 )
 from kneewise.instrument.assemble import assemble
+from kneewise.instrument.opened import Opened, open_target
 from kneewise.instrument.profile import read_record
 from kneewise.instrument.status import Status, fault_of, status_of
 from kneewise.instrument.sweep import Reassembly, fetch
 from kneewise.instrument.trace import Trace, label_of
 from kneewise.link.clock import Probe, estimate
 from kneewise.link.frames import FrameLog
-from kneewise.link.port import Port, open_port
+from kneewise.link.port import Port
 from kneewise.link.recording import Recorder
 from kneewise.link.refusals import CODES
 from kneewise.link.session import Session
@@ -40,6 +40,7 @@ log = logging.getLogger(__name__)
 log.addHandler(logging.NullHandler())
 
 CLOCK_PROBES = 4
+PROBE_TRIES = 40
 BLEED_S = 60.0
 FAULT_BLEED_S = 5.0
 SAFE_TO_SHOW_V = 1.0  # in a fault, readings are waited for down to here
@@ -50,34 +51,7 @@ ARMINGS = 3
 SETTLE_S = 0.25
 
 T = TypeVar("T")
-Opener = Callable[[str], "Opened"]
 Keep = Callable[[Trace], object]
-_OPENERS: dict[str, Opener] = {}
-
-
-@dataclass(frozen=True, slots=True)
-class Opened:
-    """What an opener gives: a way to get a port, and what is known of an emulated source.
-
-    `utc` is the time of day at the tracer, now; `remark` is for people to know of the target.
-    """
-
-    connect: Callable[[], Port]
-    close: Callable[[], None]
-    rung: str
-    scenario: dict[str, Any] | None = None
-    truth: dict[str, float] | None = None
-    utc: Callable[[], datetime] = lambda: datetime.now(UTC)
-    remark: str = ""
-
-
-def register_opener(prefix: str, opener: Opener) -> None:
-    """Targets "PREFIX" and "PREFIX:anything" are opened by `opener`."""
-    _OPENERS[prefix] = opener
-
-
-def _open_serial(target: str) -> Opened:
-    return Opened(connect=lambda: open_port(target), close=lambda: None, rung="tracer")
 
 
 class Tracer:
@@ -122,10 +96,9 @@ class Tracer:
         `record`: a new file for all that goes over the link, for `replay:FILE`.
         Raises UsageError, LinkError, ProtocolError.
         """
-        prefix = target.split(":", 1)[0]
-        opened = _OPENERS.get(prefix, _open_serial)(target)
+        found = open_target(target)
         recorder = None if record is None else Recorder(record, target)
-        return cls(opened, source_stands_alone=source_stands_alone, recorder=recorder)
+        return cls(found, source_stands_alone=source_stands_alone, recorder=recorder)
 
     def _connect(self) -> Port:
         port = self._opened.connect()
@@ -333,7 +306,7 @@ class Tracer:
         progress("fetching")
         manifest = self._manifest(sweep_id, fault)
         reassembly = fetch(self._session, manifest)
-        probes = [self._probe() for _ in range(CLOCK_PROBES)]
+        probes = self._probes()
         try:
             return self._trace(manifest, reassembly, probes)
         except TrustError as error:
@@ -430,11 +403,28 @@ class Tracer:
                 )
             port.sleep(0.02)
 
-    def _probe(self) -> Probe:
+    def _probes(self) -> list[Probe]:
+        """Clock probes. One that was sent twice says nothing: which of the two was answered?"""
         clock = self._session.port.clock
-        sent = clock()
-        reply = self._session.request("heartbeat")
-        return Probe(sent, reply["received_us"] / 1e6, reply["replied_us"] / 1e6, clock())
+        counters = self._session.frames.counters
+        found: list[Probe] = []
+        for _ in range(PROBE_TRIES):
+            sent, again = clock(), counters.sent_again
+            reply = self._session.request("heartbeat")
+            if counters.sent_again == again:
+                received, replied = reply["received_us"] / 1e6, reply["replied_us"] / 1e6
+                found.append(Probe(sent, received, replied, clock()))
+            if len(found) == CLOCK_PROBES:
+                return found
+        if not found:
+            raise LinkError(
+                f"setting the clock by {self._session.port.name}",
+                found=f"no answer at the first asking in {PROBE_TRIES} tries "
+                f"({self._session.frames.summary()})",
+                expected="one at the least",
+                next_step="use a shorter or better cable; the sweep is still held",
+            )
+        return found
 
     def _utc(self, device_us: int, probes: list[Probe]) -> tuple[str, float]:
         offset = estimate(probes)
