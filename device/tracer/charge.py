@@ -15,6 +15,7 @@ from tracer import hal as board
 
 SLICE_US = const(500)
 SLICE_PAIRS = const(125)
+LISTEN_PAIRS = const(2500)  # 10 ms: an abort is heard by then at the latest
 READ_CONVERSIONS = const(256)
 DARK_MS = const(100)  # without conduction for so long, the source is dark
 FIRST_MS = const(2)  # before the first supervision tick can be asked for
@@ -110,6 +111,7 @@ class Charge:
             hal.quiet_begin()
             self._before(result)
             self._prepare(outputs)
+            self.ear.listen_out()
             result.end_reason = self._capture(result, closed_limit_ms, voltage_trip, current_trip)
         except KeyboardInterrupt:
             result.end_reason = INTERRUPTED
@@ -190,6 +192,7 @@ class Charge:
         renewed = hal.capture_written()
         hal.pulse(pulse_us)
         heard = 0
+        listened = 0
         ticks = 0
         ticked = 0
         written = 0
@@ -203,8 +206,11 @@ class Charge:
             trips = hal.trips()
             if trips:
                 return trip_reason(trips)
-            if self.ear.listen():
-                heard = arrived
+            # A flood of bytes must not hold up a reader that is behind already.
+            if waited or arrived - listened >= LISTEN_PAIRS:
+                listened = arrived
+                if self.ear.listen():
+                    heard = arrived
             if self.ear.aborted:
                 return ABORTED
             if capture.overruns:

@@ -10,9 +10,10 @@ from collections.abc import Iterator
 from typing import Any, NamedTuple
 
 import pytest
-from chip import missing
+from chip import Edge, missing
 from on_chip import capacitor, chip_for, tracer_on
 
+from kneewire import catalogue
 from kneewise.emulator.chip import ChipTracer
 from kneewise.errors import KneewiseError, OutcomeUnknownError
 from kneewise.instrument.tracer import Tracer
@@ -96,9 +97,24 @@ def test_an_endless_loop_is_ended_by_the_pulse_and_then_by_the_watchdog(
 
 
 @pytest.mark.parametrize("level", LEVELS)
-@pytest.mark.parametrize("name", ["timer stopped", "timer callback fails"])
-def test_a_dead_supervision_timer_ends_the_renewals(name: str, level: int) -> None:
-    with struck(name, level) as made, tracer_on(made) as tracer:
+def test_a_supervision_that_fails_ends_the_renewals(level: int) -> None:
+    """What it prints goes out from the interrupt itself. Where the link has no room for it, that
+    lasts, and the watchdog ends it.
+    """
+    with struck("timer callback fails", level) as made, tracer_on(made) as tracer:
+        bleed_us = WATCHDOG_US
+        with contextlib.suppress(OutcomeUnknownError):
+            assert tracer.sweep().end_reason == "supervision lost"
+            bleed_us = PULSE_US + BLED_US
+        check_safe(after(made), wave_us=PULSE_US, bleed_us=bleed_us)
+        # One or the other, and no third way.
+        assert made.chip.boots() == (bleed_us == WATCHDOG_US)
+        assert tracer.device["reset_cause"] == (3 if made.chip.boots() else 1)
+
+
+@pytest.mark.parametrize("level", LEVELS)
+def test_a_dead_supervision_timer_ends_the_renewals(level: int) -> None:
+    with struck("timer stopped", level) as made, tracer_on(made) as tracer:
         assert tracer.sweep().end_reason == "supervision lost"
         check_safe(after(made), wave_us=PULSE_US, bleed_us=PULSE_US + BLED_US)
         assert tracer.status().state == "fault"
@@ -144,6 +160,27 @@ def test_a_reset_ends_in_the_service_and_its_cause_is_told(
         with tracer_on(made) as tracer, pytest.raises(OutcomeUnknownError, match=f"cause: {cause}"):
             tracer.sweep()
         check_safe(after(made), wave_us=min(bleed_us, AT_ONCE_US + 2000), bleed_us=bleed_us)
+
+
+def test_a_host_that_floods_the_link_does_not_open_the_contact_under_load() -> None:
+    """Frames sent again and again, as by a host that is in a hurry."""
+    with chip_for(SLOW) as made:
+        chip = made.chip
+        with tracer_on(made) as tracer:
+            chip.edges()
+            fire(tracer)
+            noise = [35, 0, *range(10, 40), 0] * 12
+            edges: list[Edge] = []
+            while not [edge for edge in edges if edge.pin == RELAY and edge.level == 1]:
+                edges += chip.edges()
+            while not [edge for edge in edges if edge.pin == RELEASE and edge.level == 0]:
+                chip.order("forge", bytes=noise)
+                chip.let_pass(5)
+                edges += chip.edges()
+            notice = tracer._session.wait_notice("charge_ended", 5.0)
+        assert notice is not None
+        assert catalogue.END_REASONS[notice["end_reason"]] == "complete"
+        assert chip.order("plant")["closings"] == 1
 
 
 @pytest.mark.parametrize("delay_ms", [0, 60])

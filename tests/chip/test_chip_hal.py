@@ -189,7 +189,7 @@ def test_clock_is_monotonic_over_the_carry() -> None:
             "while hal.now_us() < (1 << 32) - 3000: pass\n"
             "last = hal.now_us()\nbad = 0\nn = 0\n"
             "while last < (1 << 32) + 3000:\n"
-            "    now = hal.now_us()\n    bad += not 0 < now - last < 1000\n"
+            "    now = hal.now_us()\n    bad += not 0 < now - last < 20000\n"  # a collection
             "    last = now\n    n += 1\nprint(bad, n)\n"
         )
         bad, count = map(int, other.run(script).split())

@@ -141,3 +141,26 @@ def test_silence_and_voice_are_told_apart():
     board.incoming += b"\0"
     assert ear.listen() is True
     assert ear.listen() is False
+
+
+def test_a_flood_of_bytes_is_heard_a_piece_at_a_time():
+    """Heard whole, 512 bytes would hold up the pulse for so long that the contact opens."""
+    board = Trickle([bytes(600)])
+    ear = module.Ear(board)
+    ear.expect(ABORT)
+    calls = 0
+    while board.pieces or board.incoming:
+        before = len(ear.kept())
+        ear.listen()
+        calls += 1
+        assert len(ear.kept()) - before <= module.PIECE
+    assert calls >= 512 // module.PIECE
+
+
+def test_before_the_closing_all_that_came_is_heard():
+    board = FakeBoard()
+    board.incoming += b"x" * 400 + b"\0" + ABORT
+    ear = module.Ear(board)
+    ear.expect(ABORT)
+    ear.listen_out()
+    assert ear.aborted
