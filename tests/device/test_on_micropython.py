@@ -75,6 +75,8 @@ class Board(hal.Hal):
         self.us = 0
         self.slices = 0
         self.said = 0
+        self.heard = b""
+        self.given = 0
 
     def nothing(self, a=0, b=0, c=0):
         return 0
@@ -116,13 +118,17 @@ class Board(hal.Hal):
         self.slices += 1
 
     def link_read(self, buffer):
-        if self.said == self.slices or self.slices & 63 and self.slices <= SLICES:
-            return 0
-        self.said = self.slices
-        heard = ABORT if self.slices > SLICES else BEAT
-        for place in range(len(heard)):
-            buffer[place] = heard[place]
-        return len(heard)
+        if self.given == len(self.heard):
+            if self.said == self.slices or self.slices & 63 and self.slices <= SLICES:
+                return 0
+            self.said = self.slices
+            self.heard = ABORT if self.slices > SLICES else BEAT
+            self.given = 0
+        count = min(len(buffer), len(self.heard) - self.given)
+        for place in range(count):
+            buffer[place] = self.heard[self.given + place]
+        self.given += count
+        return count
 
 
 class Outputs:

@@ -96,7 +96,7 @@ def takes_bare_control_bytes(patch: Patch) -> None:
     patch.setattr(framing, "decode_run", decode)
 
 
-@breaks("F5", "F6", "F8", "C3")
+@breaks("F5", "F6", "F8")
 def answers_what_is_no_frame(patch: Patch) -> None:
     original = framing.Decoder.feed
 
@@ -374,11 +374,6 @@ def frees_for_any_id(patch: Patch) -> None:
         return original(self, request)
 
     handler(patch, "acknowledge", acknowledge)
-
-
-@breaks("W10")
-def miscounts_pairs(patch: Patch) -> None:
-    replies(patch, "read_manifest", pairs=lambda self, reply: reply["pairs"] + 1)
 
 
 @breaks("W11")
