@@ -70,7 +70,7 @@ def test_a_recording_as_json(recording: Path) -> None:
     rows = [json.loads(line) for line in done.stdout.splitlines()]
     assert {row["label"] for row in rows} == {"EMULATED, REPLAYED"}
     assert [row["message"] for row in rows[:2]] == ["hello", "hello_reply"]
-    assert rows[1]["fields"]["boot_nonce"] > 0
+    assert int(rows[1]["fields"]["boot_nonce"], 16) > 0
     assert rows[2]["remark"] == "bad frame: cobs"
     assert rows[3]["remark"] == "text: Traceback:\r\n  MemoryError"
     for row in rows:

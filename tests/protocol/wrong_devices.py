@@ -18,9 +18,7 @@ from kneewise.emulator.firmware import firmware_module
 Patch = pytest.MonkeyPatch
 Wrong = Callable[[Patch], object]
 
-FIFO = 256  # bytes that the RP2 port takes while nobody reads
-GIVE_UP_US = 500_000
-
+FIFO, GIVE_UP_US = 256, 500_000  # bytes that the RP2 port takes unread, and its patience
 service = firmware_module("tracer.service")
 states = firmware_module("tracer.sequencer")
 loop = firmware_module("tracer.loop")
@@ -202,11 +200,6 @@ def ignores_other_versions(patch: Patch) -> None:
     patch.setattr(Service, "handle", handle)
 
 
-@breaks("H4", "R3")
-def draws_a_boot_nonce_for_every_hello(patch: Patch) -> None:
-    replies(patch, "hello", boot_nonce=lambda self, reply: self.hal.random32())
-
-
 @breaks("S2")
 def answers_a_repeat_differently(patch: Patch) -> None:
     def other(frame: bytes) -> bytes:
@@ -239,6 +232,11 @@ def carries_a_repeat_out_again(patch: Patch) -> None:
             self.sequencer.armed_until_us = self.hal.now_us() + 1000000
 
     patch.setattr(Service, "handle", handle)
+
+
+@breaks("H4", "R3")
+def draws_a_boot_nonce_for_every_hello(patch: Patch) -> None:
+    replies(patch, "hello", boot_nonce=lambda self, reply: self.hal.random32())
 
 
 @breaks("S3")
@@ -378,10 +376,7 @@ def frees_for_any_id(patch: Patch) -> None:
 
 @breaks("W11")
 def sends_more_than_its_window(patch: Patch) -> None:
-    original = Service._hello
-    patch.setitem(
-        service.HANDLERS, "hello", lambda self, request: {**original(self, request), "window": 8}
-    )
+    replies(patch, "hello", window=8)
 
 
 @breaks("A2")

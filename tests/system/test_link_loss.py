@@ -3,7 +3,13 @@
 import pytest
 from rig import knots_alike
 
-from kneewise.errors import ArchiveError, KneewiseError, LinkError, OutcomeUnknownError
+from kneewise.errors import (
+    ArchiveError,
+    KneewiseError,
+    LinkError,
+    OutcomeUnknownError,
+    TrustError,
+)
 from kneewise.instrument.sweep import Reassembly
 
 
@@ -138,3 +144,46 @@ def test_without_power_the_port_is_lost(bench, rung):
     one.emulated.unplug()
     with pytest.raises(LinkError):
         tracer.status()
+
+
+@pytest.mark.clause("T2")
+def test_a_clock_probe_that_was_sent_twice_is_not_used(bench, monkeypatch):
+    tracer = bench("in-process").tracer()
+    session = tracer._session
+    plain = type(session).request
+
+    def doubled(self, name, *args, **more):
+        if name == "heartbeat":
+            self.frames.counters.sent_again += 1
+        return plain(self, name, *args, **more)
+
+    monkeypatch.setattr(type(session), "request", doubled)
+    with pytest.raises(LinkError) as caught:
+        tracer.sweep(knots=16)
+    assert caught.value.what.startswith("setting the clock by")
+    assert caught.value.found.startswith("no answer at the first asking in 40 tries (")
+    assert caught.value.expected == "one at the least"
+    assert caught.value.next_step == "use a shorter or better cable; the sweep is still held"
+    monkeypatch.undo()
+    assert tracer.held() is not None
+
+
+def test_another_sweep_in_the_place_of_ours_is_told(bench, monkeypatch):
+    """Another program has fetched ours, and made one of its own."""
+    one = bench("in-process")
+    tracer = one.tracer()
+    session = tracer._session
+    plain = type(session).request
+
+    def another(self, name, *args, **more):
+        reply = plain(self, name, *args, **more)
+        if name == "read_manifest":
+            reply.values["sweep_id"] = bytes(15) + b"\x09"
+        return reply
+
+    monkeypatch.setattr(type(session), "request", another)
+    with pytest.raises(TrustError) as caught:
+        tracer.sweep(knots=16)
+    assert caught.value.found == f"the device holds {'00' * 15}09"
+    assert caught.value.expected == "this sweep"
+    assert caught.value.next_step.startswith("sweep again; another program may be talking")

@@ -63,14 +63,19 @@ _CODES = {
     "reset_cause": catalogue.RESET_CAUSES,
     "end_reason": catalogue.END_REASONS,
     "code": catalogue.REFUSALS,
-    "unit": catalogue.UNITS,
+    "unit": {**catalogue.UNITS, 0: "none"},
 }
+
+
+_HEX = ("fingerprint", "profile_crc", "knots_crc", "boot_nonce", "host_nonce", "token")
 
 
 def shown(name: str, value: Any) -> Any:
     """A field's value as people read it; JSON can hold it."""
     if isinstance(value, bytes):
         return value.hex() if len(value) <= 16 else f"{len(value)} bytes"
+    if name in _HEX:
+        return f"{value:08x}"
     return _CODES[name].get(value, value) if name in _CODES else value
 
 
