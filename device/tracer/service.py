@@ -84,9 +84,10 @@ class Service:
 
     def send(self, frame):
         """Write one frame; False where the host has stopped reading and it was cut short."""
-        if self._cut:
-            # End the frame that was cut, so that only that one is lost.
-            self.hal.link_write(framing.DELIMITER)
+        # End the frame that was cut, so that only that one is lost; where not even that goes out,
+        # nothing else may.
+        if self._cut and not self.hal.link_write(framing.DELIMITER):
+            return False
         self._cut = self.hal.link_write(frame) < len(frame)
         return not self._cut
 

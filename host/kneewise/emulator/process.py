@@ -41,7 +41,7 @@ HEAP = "200k"
 KEPT_UNREAD = 256  # bytes of output that wait for a host that is not there, as on the RP2 port
 IDLE_S = 0.005
 CTRL_C = b"\x03"
-_REQUEST = struct.Struct("<Bqq")
+_REQUEST = struct.Struct("<BBqq")
 
 
 def available() -> bool:
@@ -196,9 +196,10 @@ class ProcessTracer:
                 request = reader.read(_REQUEST.size)
                 if len(request) < _REQUEST.size:
                     return
+                number, *call = _REQUEST.unpack(request)
                 with self._lock:
-                    reply = self.board.dispatch(*_REQUEST.unpack(request))
-                bus.sendall(len(reply).to_bytes(2, "little") + reply)
+                    reply = self.board.dispatch(*call)
+                bus.sendall(len(reply).to_bytes(2, "little") + bytes([number]) + reply)
             except PowerLost:
                 # The board is without power from that very moment; only the process is left.
                 self.unplug()

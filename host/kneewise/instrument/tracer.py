@@ -231,7 +231,7 @@ class Tracer:
 
         def go() -> None:
             fired = session.request("fire", {"token": token, "sweep_id": sweep_id})
-            session.wait_quiet(fired["quiet_ms"] / 1000)
+            session.wait_quiet(fired["quiet_ms"] / 1000, sweep_id)
 
         # The charge may be under way when the link goes: whatever happened, the device knows.
         self._after_fire(sweep_id, go, lambda: None)
@@ -335,12 +335,8 @@ class Tracer:
 
     def _await_bleed(self, sweep_id: bytes) -> DeviceFaultError | None:
         """Until the bleed after a charge has ended, by its notice; a fault that is latched."""
-        notice = self._session.wait_notice("bleed_ended", NOTICE_S)
-        if (
-            notice is not None
-            and notice["sweep_id"] == sweep_id
-            and catalogue.STATES.get(notice["state"]) != "fault"
-        ):
+        notice = self._session.wait_notice("bleed_ended", NOTICE_S, sweep_id)
+        if notice is not None and catalogue.STATES.get(notice["state"]) != "fault":
             return None
         _, fault = self._wait_bled()
         return fault

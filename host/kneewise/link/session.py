@@ -149,17 +149,21 @@ class Session:
         """Send the abort of this session; the reply, if any, is nobody's business here."""
         self._send(pack("abort", self.session, 0))
 
-    def wait_notice(self, name: str, deadline_s: float) -> Message | None:
-        """The next notice of that name, or None when the time is over."""
-        return self._wait(name, deadline_s, lambda: False)
+    def wait_notice(
+        self, name: str, deadline_s: float, sweep_id: bytes | None = None
+    ) -> Message | None:
+        """The next notice of that name, and of that sweep, or None when the time is over."""
+        return self._wait(name, sweep_id, deadline_s, lambda: False)
 
-    def wait_quiet(self, deadline_s: float) -> Message | None:
+    def wait_quiet(self, deadline_s: float, sweep_id: bytes | None = None) -> Message | None:
         """Wait out a charge, with a heartbeat twice a second: its notice, or None where that was
         not heard. A device that answers a heartbeat is charging no more.
         """
         self._beat_answered = False
         self._beats.clear()
-        return self._wait("charge_ended", deadline_s, lambda: self._beat_answered, self.beat)
+        return self._wait(
+            "charge_ended", sweep_id, deadline_s, lambda: self._beat_answered, self.beat
+        )
 
     def beat(self) -> None:
         """Let the device know that the host is there, without waiting for the reply."""
@@ -183,6 +187,7 @@ class Session:
     def _wait(
         self,
         name: str,
+        sweep_id: bytes | None,
         deadline_s: float,
         over: Callable[[], bool],
         beat: Callable[[], None] | None = None,
@@ -192,7 +197,7 @@ class Session:
         while True:
             while self.notices:
                 notice = self.notices.popleft()
-                if notice.name == name:
+                if notice.name == name and sweep_id in (None, notice["sweep_id"]):
                     return notice
             now = self.port.clock()
             if now >= end or over():
@@ -296,6 +301,7 @@ class Session:
         traceback = traceback_in(said)
         if traceback:
             self.tracebacks.append(traceback)
+            log.warning("the firmware stopped: %s", traceback)
         log.warning("a prompt answered in the firmware's place; starting the firmware again")
         self.frames.counters.rescues += 1
         end = self.port.clock() + RESCUE_S

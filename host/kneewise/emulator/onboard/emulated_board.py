@@ -18,21 +18,30 @@ class PipeBus:
 
     def __init__(self, number):
         self._pipe = open(number, "r+b")
+        self._number = 0
+        self._heard = b""
 
     def call(self, name, a, b):
-        self._pipe.write(struct.pack("<Bqq", REQUESTS[name], a, b))
-        length = int.from_bytes(self._exactly(2), "little")
-        return self._exactly(length)
+        # Ctrl-C may come in the middle: what was heard stays, and the reply to the call that it
+        # ended is told by its number from the reply to this one.
+        self._number = (self._number + 1) & 255
+        self._pipe.write(struct.pack("<BBqq", self._number, REQUESTS[name], a, b))
+        while True:
+            self._hear(3)
+            size = 3 + int.from_bytes(self._heard[:2], "little")
+            self._hear(size)
+            reply = self._heard
+            self._heard = reply[size:]
+            if reply[2] == self._number:
+                return reply[3:size]
 
-    def _exactly(self, count):
-        data = b""
-        while len(data) < count:
-            piece = self._pipe.read(count - len(data))
+    def _hear(self, count):
+        while len(self._heard) < count:
+            piece = self._pipe.read(count - len(self._heard))
             if not piece:
                 # The emulator has gone: so has this board's power.
                 raise SystemExit
-            data += piece
-        return data
+            self._heard += piece
 
 
 class StandardLink:

@@ -1,0 +1,93 @@
+"""What the scripted device has in place of hardware: a profile, and a made-up curve."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import Any
+
+from kneewire.messages import pack_knot
+
+PAIR_US = 4
+LIFE_MS = 2000
+CONVERSIONS = 256
+
+PROFILE: dict[str, Any] = {
+    "format": 1,
+    "name": "scripted device",
+    "device_id": b"SCRIPTED",
+    "hazard_class": 1,
+    "contact": 1,
+    "voltage_nv_per_code": 16500000,
+    "voltage_zero_x16": 16 * 24,
+    "current_na_per_code": 5200000,
+    "current_zero_x16": 16 * 40,
+    "capacitor_nv_per_code": 16500000,
+    "capacitor_zero_x16": 16 * 24,
+    "voltage_delay_ns": 0,
+    "current_delay_ns": 0,
+    "divider_ohm": 1000000,
+    "lead_mohm": 0,
+    "rated_mv": 60000,
+    "rated_ma": 20000,
+    "capacitance_nf": 2200000,
+    "bleed_mohm": 100000,
+    "permanent_bleeder_ohm": 22000,
+    "relay_operate_ms": 10,
+    "relay_release_ms": 5,
+    "bleed_operate_ms": 6,
+    "bleed_release_ms": 6,
+    "dead_time_ms": 20,
+    "safe_mv": 12000,
+    "start_permyriad": 50,
+    "near_zero_permyriad": 100,
+    "bleed_time_percent": 150,
+    "pulse_us": 5000,
+    "closed_limit_ms": 120000,
+    "token_life_ms": LIFE_MS,
+    "heartbeat_lost_ms": 2000,
+    "isolation_v": 0,
+    "isolation_tested_day": 0,
+}
+
+
+@dataclass(frozen=True, slots=True)
+class Curve:
+    """Knots of a made-up sweep: i(v) = isc (1 - exp((v - voc) / a)), with dt = C dv / i."""
+
+    isc_a: float = 0.12
+    voc_v: float = 39.0
+    a_v: float = 1.6
+    farad: float = 2.2e-3
+
+    def current_a(self, volt: float) -> float:
+        return self.isc_a * (1 - math.exp((volt - self.voc_v) / self.a_v))
+
+    def records(self, many: int, start_us: int) -> tuple[bytes, int, int]:
+        """The knot records, their pairs, and the time at which the last ends (us)."""
+        step = 0.9985 * self.voc_v / max(many - 1, 1)
+        at_us = float(start_us)
+        out = b""
+        all_pairs = 0
+        for number in range(many):
+            volt = number * step
+            passed_us = 1e6 * self.farad * step / self.current_a(volt)
+            pairs = max(round(passed_us / PAIR_US), 1)
+            ampere = self.current_a(volt)
+            knot = {
+                "time_us": round(at_us + passed_us / 2),
+                "voltage_sum": round(pairs * code(volt, "voltage_nv_per_code", 24)),
+                "current_sum": round(pairs * code(ampere, "current_na_per_code", 40)),
+                "pairs": pairs,
+                "voltage_scatter": 3 * pairs,
+                "current_scatter": 3 * pairs,
+            }
+            out += pack_knot(knot)
+            all_pairs += pairs
+            at_us += passed_us
+        return out, all_pairs, round(at_us)
+
+
+def code(value: float, scale: str, zero: float) -> float:
+    """The converter's code for a value in V or A."""
+    return value / (1e-9 * int(PROFILE[scale])) + zero
