@@ -16,6 +16,7 @@ STORED_REPLIES = 8
 WINDOW = 16  # blocks in a burst
 MIN_KNOTS = 16
 
+R_UNKNOWN_KIND = 1
 R_UNKNOWN_SESSION = 3
 R_STALE = 4
 R_WRONG_STATE = 5
@@ -109,12 +110,16 @@ class Service:
         try:
             request = unpack(body)
         except Refused as refused:
-            self._refuse(refused.kind, refused.session, refused.sequence, refused.code)
+            known = catalogue.MESSAGES.get(refused.kind)
+            # What does not travel this way is unknown here, however much of it came.
+            strange = known is not None and known[1] != catalogue.TO_DEVICE
+            code = R_UNKNOWN_KIND if strange else refused.code
+            self._refuse(refused.kind, refused.session, refused.sequence, code)
             return
         kind = catalogue.KINDS[request.name]
         _, direction, frozen, changes, _ = catalogue.MESSAGES[kind]
         if direction != catalogue.TO_DEVICE:
-            self._refuse(kind, request.session, request.sequence, 1)
+            self._refuse(kind, request.session, request.sequence, R_UNKNOWN_KIND)
             return
         if request.name == "abort":
             self._reply(request, self._abort(request))

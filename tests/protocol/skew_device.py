@@ -8,6 +8,7 @@ import zlib
 from pathlib import Path
 from typing import Any
 
+import wire_coder
 import wire_golden
 
 from kneewire import framing
@@ -76,8 +77,8 @@ class SkewDevice:
         out = struct.pack("<BII", kind, session, sequence)
         for name, form in self._kinds[kind]["fields"]:
             nothing: Any = {"b8": bytes(8), "b16": bytes(16), "bytes": b"", "text": ""}.get(form, 0)
-            out += wire_golden.field(form, given.get(name, nothing))
-        self._out += wire_golden.frame(out + self._extra, False)
+            out += wire_coder.field(form, given.get(name, nothing))
+        self._out += wire_coder.frame(out + self._extra, False)
 
 
 def frozen(version: str) -> dict[str, Any]:

@@ -7,7 +7,7 @@ from typing import Any
 
 import conversations
 import pytest
-import wire_golden
+import wire_coder
 
 STORED = json.loads(conversations.FILE.read_text(encoding="utf-8"))["conversations"]
 
@@ -22,14 +22,14 @@ def coded_anew(row: dict[str, Any]) -> bytes:
     for message in row["messages"]:
         if "text" in message:
             return b""
-        rows = dict(wire_golden.ROWS[message["message"]])
+        rows = dict(wire_coder.ROWS[message["message"]])
         values = {
             name: bytes.fromhex(value) if isinstance(value, str) and rows[name] != "text" else value
             for name, value in message["values"].items()
         }
-        body = wire_golden.body(message["message"], message["session"], message["sequence"], values)
+        body = wire_coder.body(message["message"], message["session"], message["sequence"], values)
         guard = b"#\x00" if row["to"] == "device" else b""
-        out += guard + wire_golden.frame(body, row["to"] == "device")
+        out += guard + wire_coder.frame(body, row["to"] == "device")
     return out
 
 

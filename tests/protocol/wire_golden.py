@@ -1,8 +1,8 @@
-"""The golden vectors, made by a coder of its own: struct, zlib, the `cobs` package and the tables.
+"""The golden vectors, made by the coder of wire_coder.py, which is not the product's.
 
 `protocol/vectors/` holds what this makes. Tests compare the two; after a deliberate change of
-the catalogue, `python tests/protocol/wire_golden.py` writes the files anew. From kneewire come
-the tables alone: nothing here calls its packers or its framing.
+the catalogue, `python tests/protocol/wire_golden.py` writes the files anew; with a version as
+argument it freezes them in a folder of that name.
 """
 
 from __future__ import annotations
@@ -15,6 +15,7 @@ from pathlib import Path
 from typing import Any
 
 from cobs import cobs
+from wire_coder import body, frame, rows_of
 from wire_examples import (
     EXAMPLES,
     HELLO_SEQUENCE,
@@ -27,45 +28,6 @@ from wire_examples import (
 from kneewire import PROTOCOL, catalogue, profile_record
 
 VECTORS = Path(__file__).resolve().parents[2] / "protocol" / "vectors"
-ROWS = {name: rows for name, _, _, _, rows in catalogue.MESSAGES.values()}
-STRUCT = {"u8": "<B", "u16": "<H", "u32": "<I", "u64": "<Q", "i32": "<i"}
-
-
-# -- the coder ---------------------------------------------------------------------------
-
-
-def field(kind: str, value: Any) -> bytes:
-    if kind in STRUCT:
-        return struct.pack(STRUCT[kind], value)
-    if kind == "u48":
-        return struct.pack("<Q", value)[:6]
-    if kind in {"b8", "b16"}:
-        return struct.pack(f"{kind[1:]}s", value)
-    if kind == "text":
-        return struct.pack("B", len(value.encode())) + value.encode()
-    if kind == "bytes":
-        return struct.pack("<H", len(value)) + value
-    assert kind == "knots"
-    return struct.pack("B", len(value) // 40) + value
-
-
-def rows_of(rows: Any, values: dict[str, Any]) -> bytes:
-    return b"".join(field(kind, values[name]) for name, kind in rows)
-
-
-def body(name: str, session: int, sequence: int, values: dict[str, Any]) -> bytes:
-    kind = next(kind for kind, row in catalogue.MESSAGES.items() if row[0] == name)
-    return struct.pack("<BII", kind, session, sequence) + rows_of(ROWS[name], values)
-
-
-def frame(content: bytes, toward_device: bool) -> bytes:
-    coded = cobs.encode(content + struct.pack("<I", zlib.crc32(content)))
-    if toward_device:
-        out = bytearray()
-        for byte in coded:
-            out += bytes([2, 0x40 + byte]) if 1 <= byte <= 5 else bytes([byte])
-        coded = bytes(out)
-    return coded + b"\x00"
 
 
 def fingerprint() -> int:
@@ -198,8 +160,8 @@ def framing_vectors() -> dict[str, Any]:
         bodies.append((f"frame of {length} bytes both ways", _body_for(length)))
         bodies.append((f"frame of {length} bytes toward the device", _escaped_body_for(length)))
     return {
-        "about": "A frame is COBS(body + CRC-32 little endian) + 00; toward the device 02 becomes "
-        "02 04 and then 03 becomes 02 05. All bytes as hex. In 'streams' the items are what a "
+        "about": "A frame is COBS(body + CRC-32 little endian) + 00; toward the device 01 to 05 "
+        "become 02 and then 41 to 45. All bytes as hex. In 'streams' the items are what a "
         "decoder of that direction and limit yields, in order, and 'pending' what it keeps.",
         "crc32": [
             {"data": b"123456789".hex(), "crc": 0xCBF43926, "source": "CRC catalogue, ISO-HDLC"},
