@@ -120,7 +120,12 @@ class LinkMachine(RuleBasedStateMachine):
 
     # -- what happens ----------------------------------------------------------------------
 
-    @rule(lose=PROBABLY, corrupt=PROBABLY, repeat=PROBABLY, piece=st.tuples(RARELY, RARELY, RARELY))
+    @rule(
+        lose=PROBABLY,
+        corrupt=PROBABLY,
+        repeat=PROBABLY,
+        piece=st.tuples(RARELY, RARELY, RARELY, RARELY),
+    )
     def the_link_gets_worse_or_better(self, lose, corrupt, repeat, piece) -> None:
         self.faults = LinkFaults(
             lose=lose,
@@ -129,6 +134,7 @@ class LinkMachine(RuleBasedStateMachine):
             lose_piece=piece[0],
             repeat_piece=piece[1],
             delay_piece=piece[2],
+            truncate_piece=piece[3],
         )
         if self.port is not None:
             self.port.port.faults = self.faults
@@ -200,7 +206,7 @@ class LinkMachine(RuleBasedStateMachine):
 
     @rule()
     def on_a_good_link_the_tracer_answers(self) -> None:
-        self.the_link_gets_worse_or_better(0.0, 0.0, 0.0, (0.0, 0.0, 0.0))
+        self.the_link_gets_worse_or_better(0.0, 0.0, 0.0, (0.0, 0.0, 0.0, 0.0))
         self.host_starts_anew()
         assert self.tracer is not None
         assert self.tracer.rest().state == "safe"

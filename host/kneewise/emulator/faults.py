@@ -21,6 +21,8 @@ class LinkFaults:
     corrupt: float = 0.0
     repeat: float = 0.0
     lose_piece: float = 0.0
+    truncate_piece: float = 0.0
+    """Its end is lost, from any place on."""
     repeat_piece: float = 0.0
     delay_piece: float = 0.0
     """Held back until the next piece, and then carried before or behind it."""
@@ -66,6 +68,11 @@ class FaultyPort:
             self.spoilt += len(data)
             return held
         draw -= faults.lose_piece
+        if draw < faults.truncate_piece:
+            kept = self._random.randrange(len(data))
+            self.spoilt += len(data) - kept
+            return held + data[:kept]
+        draw -= faults.truncate_piece
         if draw < faults.repeat_piece:
             data += data
         elif draw - faults.repeat_piece < faults.delay_piece:
