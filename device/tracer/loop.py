@@ -9,6 +9,7 @@ from tracer.charge import (
     STOP_LOOP,
     SUPERVISION_LOST,
     Charge,
+    Result,
 )
 from tracer.ear import Ear
 from tracer.held import Held
@@ -38,6 +39,7 @@ class Loop:
         try:
             if self.left:
                 self.sequencer.resume()
+                self.forget_fire()
             while True:
                 self.step()
         except Leave:
@@ -50,6 +52,24 @@ class Loop:
     def leave(self):
         self.sequencer.make_safe()
         self.hal.quiet_end()
+        # A second Ctrl-C may have cut short the end of a charge.
+        self.hal.capture_stop()
+        self.hal.supervise_end()
+
+    def forget_fire(self):
+        """Ctrl-C between an accepted fire and its charge: nothing closed, and the sweep says so."""
+        sweep_id, self.service.fired = self.service.fired, None
+        if sweep_id is not None:
+            result = Result()
+            result.end_reason = INTERRUPTED
+            self.capture.begin(0)
+            self.hold(sweep_id, result)
+
+    def hold(self, sweep_id, result):
+        self.held.keep(
+            sweep_id, self.service.armed_knots, result, self.capture, self.hal, self.profile
+        )
+        self.bleeding_for = sweep_id
 
     def step(self):
         """One turn of the loop."""
@@ -83,8 +103,7 @@ class Loop:
         else:
             sequencer.fault(finding)
         service.charge_ended(sweep_id, result.end_reason)
-        self.held.keep(sweep_id, service.armed_knots, result, self.capture, self.hal, self.profile)
-        self.bleeding_for = sweep_id
+        self.hold(sweep_id, result)
         if result.end_reason == INTERRUPTED:
             raise KeyboardInterrupt
 

@@ -135,7 +135,6 @@ class Service:
             if request.sequence <= self.last_sequence:
                 self._refuse(kind, request.session, request.sequence, R_STALE)
                 return
-            self.last_sequence = request.sequence
         try:
             values = HANDLERS[request.name](self, request)
         except Refusal as refusal:
@@ -145,6 +144,8 @@ class Service:
         else:
             frame = self._reply_frame(request, values)
         if changes:
+            # Together: a request that Ctrl-C cut short may be sent again.
+            self.last_sequence = request.sequence
             self.stored.append((request.sequence, frame))
             if len(self.stored) > STORED_REPLIES:
                 self.stored.pop(0)

@@ -181,6 +181,71 @@ def test_before_the_capture_ctrl_c_leaves_a_sweep_without_pairs_not_the_last_one
     assert (manifest["pairs"], manifest["knots"], manifest["ring_overruns"]) == (0, 0, 0)
 
 
+def test_ctrl_c_between_an_accepted_fire_and_its_charge_closes_nothing_and_says_so(device):
+    token = device.arm()["token"]
+    plain = device.board.link_write
+
+    def interrupt(data):
+        device.board.link_write = plain
+        raise KeyboardInterrupt
+
+    device.board.link_write = interrupt
+    values = {"token": token, "sweep_id": SWEEP_ID}
+    device.board.incoming += device.frame("fire", values)
+    with pytest.raises(KeyboardInterrupt):
+        device.loop.run()
+    device.board.incoming += device.frame("prompt")
+    device.loop.run()
+    device.heard()
+    assert device.board.closings == 0
+    manifest = device.ask("read_manifest")
+    assert (manifest["sweep_id"], manifest["knots"]) == (SWEEP_ID, 0)
+    assert manifest["end_reason"] == charge.INTERRUPTED
+
+
+def test_a_request_that_ctrl_c_cut_short_may_be_sent_again(device):
+    def interrupt(*values):
+        del device.board.read
+        raise KeyboardInterrupt
+
+    values = {"knots": 32, "closed_limit_ms": 1000, "confirmed": 1}
+    frame = device.frame("arm", values)
+    device.board.read = interrupt
+    device.board.incoming += frame
+    with pytest.raises(KeyboardInterrupt):
+        device.loop.run()
+    device.loop.left = False
+    device.loop.sequencer.resume()
+    device.turns(lambda: device.state() == "safe")
+    device.heard()
+    (answer,) = device.say(frame)
+    assert answer.name == "arm_reply"
+
+
+def test_a_second_ctrl_c_in_the_end_of_a_charge_leaves_no_capture_running(device):
+    board = device.board
+    plain = type(board).capture_stop
+    calls = []
+
+    def first(*values):
+        del board.capture_written
+        raise KeyboardInterrupt
+
+    def second():
+        calls.append(1)
+        if len(calls) == 1:
+            raise KeyboardInterrupt
+        return plain(board)
+
+    board.capture_stop = second
+    device.fire(device.arm()["token"])
+    board.after_closing(3000, lambda: setattr(board, "capture_written", first))
+    with pytest.raises(KeyboardInterrupt):
+        device.loop.run()
+    assert board.pairs is None
+    assert board.supervised_us is None
+
+
 def test_a_latched_weld_keeps_the_bleed_released_over_the_prompt(device):
     device.board.welded = True
     device.board.capacitor_v = device.board.source_v

@@ -175,6 +175,16 @@ def test_another_version() -> None:
     assert caught.value.next_step.startswith("store the firmware that came with this host")
 
 
+@pytest.mark.parametrize("changes", [{"window": 0}, {"max_frame": 63}])
+def test_limits_that_cannot_be(changes: dict[str, int]) -> None:
+    port = ScriptedPort()
+    port.hello = {**HELLO, **changes}
+    with pytest.raises(ProtocolError) as caught:
+        Session(port).hello()
+    assert caught.value.expected == "at least 1 block, and frames of at least 64 bytes"
+    assert caught.value.next_step == "store the firmware that came with this host on the device"
+
+
 # -- refusals --------------------------------------------------------------------------------
 
 

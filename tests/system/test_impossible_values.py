@@ -7,7 +7,7 @@ import math
 
 import pytest
 
-from kneewise.errors import KneewiseError
+from kneewise.errors import KneewiseError, TrustError
 from kneewise.link.session import Session
 
 
@@ -38,7 +38,15 @@ def test_a_reading_over_no_conversions_is_no_number(bench, monkeypatch):
 
 
 @pytest.mark.parametrize(
-    "changes", [{"conversions": 0}, {"knots": 0}, {"knots": 3}, {"pair_ns": 0}, {"end_reason": 200}]
+    "changes",
+    [
+        {"conversions": 0},
+        {"knots": 0},
+        {"knots": 3},
+        {"pair_ns": 0},
+        {"end_reason": 200},
+        {"conducting_us": 2**63},
+    ],
 )
 def test_a_manifest_that_cannot_be_is_an_error_of_ours_or_an_unsound_trace(
     bench, monkeypatch, changes
@@ -48,3 +56,22 @@ def test_a_manifest_that_cannot_be_is_an_error_of_ours_or_an_unsound_trace(
     with contextlib.suppress(KneewiseError):
         trace = tracer.sweep(knots=16)
         assert not trace.sound or "pair_ns" in changes
+
+
+@pytest.mark.parametrize("changes", [{"replied_us": 2**63}, {"received_us": 2**63}])
+def test_a_time_that_cannot_be_is_an_error_of_ours(bench, monkeypatch, changes):
+    tracer = bench("in-process").tracer()
+    changed(monkeypatch, "heartbeat", **changes)
+    with pytest.raises(TrustError) as caught:
+        tracer.sweep(knots=16)
+    assert caught.value.what.startswith("setting the clock by")
+    assert caught.value.expected == "times since the device's boot"
+
+
+@pytest.mark.parametrize("name", ["capacitance_nf", "voltage_nv_per_code"])
+def test_a_profile_without_a_scale_is_an_error_of_ours(bench, name):
+    tracer = bench("in-process").tracer()
+    tracer.profile[name] = 0
+    with pytest.raises((TrustError, KneewiseError)) as caught:
+        tracer.sweep(knots=16)
+    assert caught.value.next_step

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from typing import Any
 
+import numpy as np
+
 from kneewire import catalogue
 from kneewire.messages import Message
 from kneewise.errors import TrustError
@@ -14,6 +16,15 @@ from kneewise.instrument.sweep import Reassembly
 from kneewise.instrument.trace import Integrity, Reading, Trace
 
 FEWEST_KNOTS = 8
+
+
+# What a profile must hold before a sweep can be converted.
+SCALES = (
+    "voltage_nv_per_code",
+    "current_na_per_code",
+    "capacitor_nv_per_code",
+    "capacitance_nf",
+)
 
 
 def assemble(
@@ -45,10 +56,14 @@ def assemble(
             if end_reason == "no current"
             else "clear what ended the sweep, then sweep again",
         )
-    if not profile or not values["conversions"] or not raw.pairs.all():
+    scaled = all(profile.get(name) for name in SCALES)
+    ordered = raw.time_us[0] >= values["conducting_us"] and bool((np.diff(raw.time_us) > 0).all())
+    if not scaled or not values["conversions"] or not raw.pairs.all() or not ordered:
         raise TrustError(
             f"sweep {values['sweep_id'].hex()[:8]}",
-            found="no valid profile on the device" if not profile else "sums over nothing",
+            found="no valid profile on the device"
+            if not scaled
+            else ("sums over nothing" if ordered else "times that do not rise"),
             expected="knots of at least one pair each, readings, and the scales for them",
             next_step="store the profile of this board on the device, and use firmware and host "
             "of the same version; then sweep again",

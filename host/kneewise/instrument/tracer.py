@@ -426,4 +426,13 @@ class Tracer:
         offset = estimate(probes)
         now = self._opened.utc()
         ago_s = self._session.port.clock() + offset.offset_s - device_us / 1e6
-        return (now - timedelta(seconds=ago_s)).isoformat(), offset.uncertainty_s
+        try:
+            started = now - timedelta(seconds=ago_s)
+        except OverflowError:
+            raise TrustError(
+                f"setting the clock by {self._session.port.name}",
+                found=f"a sweep {ago_s:g} s ago",
+                expected="times since the device's boot",
+                next_step="use firmware and host of the same version; then sweep again",
+            ) from None
+        return started.isoformat(), offset.uncertainty_s

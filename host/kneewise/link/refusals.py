@@ -133,3 +133,13 @@ def other_version(port_name: str, reply: dict[str, Any]) -> ProtocolError:
         next_step="store the firmware that came with this host on the device, "
         "or install the host version that came with that firmware",
     )
+
+
+def impossible_hello(port_name: str, reply: dict[str, Any]) -> ProtocolError:
+    """The exception for a device whose hello names limits that no device can have."""
+    return ProtocolError(
+        f"greeting {port_name}",
+        found=f"a window of {reply['window']} blocks, frames of {reply['max_frame']} bytes",
+        expected="at least 1 block, and frames of at least 64 bytes",
+        next_step="store the firmware that came with this host on the device",
+    )

@@ -20,7 +20,7 @@ from kneewire.messages import NO_SESSION, Message, Refused, fingerprint, pack, u
 from kneewise.errors import LinkError, ProtocolError
 from kneewise.link.frames import FrameLog
 from kneewise.link.port import Port
-from kneewise.link.refusals import other_version, refused, silent, traceback_in
+from kneewise.link.refusals import impossible_hello, other_version, refused, silent, traceback_in
 
 log = logging.getLogger(__name__)
 log.addHandler(logging.NullHandler())
@@ -214,6 +214,8 @@ class Session:
         body = hello_body(self.host_nonce)
         reply = self._converse("hello", HELLO_SEQUENCE, body, deadline_s, 2 * AGAIN_S, rescues)
         self._check_version(reply)
+        if reply["window"] < 1 or reply["max_frame"] < SMALL_FRAME:
+            raise impossible_hello(self.port.name, reply.values)
         if reply["session"] != self.session:
             self.sequence = 0
         self.session = reply["session"]
