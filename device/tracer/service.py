@@ -89,6 +89,7 @@ class Service:
         # nothing else may.
         if self._cut and not self.hal.link_write(framing.DELIMITER):
             return False
+        self._cut = True  # also where Ctrl-C ends the write
         self._cut = self.hal.link_write(frame) < len(frame)
         return not self._cut
 

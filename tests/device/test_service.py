@@ -293,3 +293,21 @@ def test_the_prompt_is_refused_while_the_bleed_must_stay_off(device):
     device.sequencer.fault((2, 39000, 200, 1))
     assert device.ask("prompt")["leaving"] == 0
     assert not device.board.bleed_engaged
+
+
+@pytest.mark.clause("F9")
+def test_a_write_that_ctrl_c_cut_short_costs_one_frame_and_no_more(device):
+    plain = device.board.link_write
+
+    def interrupted(data):
+        plain(data[:7])
+        device.board.link_write = plain
+        raise KeyboardInterrupt
+
+    device.board.link_write = interrupted
+    with pytest.raises(KeyboardInterrupt):
+        device.say(device.frame("status"))
+    device.board.incoming += device.frame("heartbeat")
+    device.service.poll()
+    items = device.decoder.feed(bytes(device.board.sent))
+    assert [isinstance(item, framing.Bad) for item in items] == [True, False]
