@@ -81,7 +81,8 @@ class Watched(hal_rp2.Hal):
         self._counting = True
 
     def capture_stop(self):
-        stamp(words, W_STOPPED)
+        if self._counting:
+            stamp(words, W_STOPPED)
         self._counting = False
         return super().capture_stop()
 
