@@ -93,9 +93,7 @@ def test_another_version_is_told(version: tuple[int, int]) -> None:
 
 @pytest.mark.clause("V2", "B2")
 def test_the_same_catalogue_talks_whatever_stands_behind_its_fields() -> None:
-    if frozen("0.1")["fingerprint"] != fingerprint():
-        pytest.skip("the catalogue has gone on since 0.1")
-    made = greeted(SkewDevice(frozen("0.1"), extra=b"later"))
+    made = greeted(SkewDevice(frozen("."), extra=b"later"))  # the catalogue of today
     assert made.session == skew_device.SESSION
     assert made.request("status")["state"] == 0
 
