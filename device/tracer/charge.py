@@ -16,12 +16,14 @@ from tracer import hal as board
 SLICE_US = const(500)
 SLICE_PAIRS = const(125)
 LISTEN_PAIRS = const(2500)  # 10 ms: an abort is heard by then at the latest
-READ_CONVERSIONS = const(256)
+READ_CONVERSIONS = const(2048)  # so that noise of a zero is far below that of a knot
+ZERO_SETTLE_US = const(2000)  # of the voltage channel, to its zero and back
 DARK_MS = const(100)  # without conduction for so long, the source is dark
 FIRST_MS = const(2)  # before the first supervision tick can be asked for
 PULSE_MARGIN_US = const(100)  # more than the wave's last period and the call itself
-CONDUCTING_CODES = const(8)  # above the current zero: more than noise ever reaches
+CONDUCTING_CODES = const(8)  # of 12 bits, above the current zero: more than noise ever reaches
 END_SLICES = const(3)
+STEP_US = const(2000)  # of a step of the work done meanwhile, with few knots
 
 # End reasons, as on the wire.
 COMPLETE = const(1)
@@ -44,6 +46,8 @@ class Result:
         self.end_reason = 0
         self.voltage_sum = 0
         self.current_sum = 0
+        self.voltage_zero_sum = 0
+        self.zero_conversions = 0
         self.conversions = READ_CONVERSIONS
         self.capture_us = 0
         self.opened_us = 0
@@ -57,28 +61,38 @@ class EndRule:
 
     Current below 0.2 % of this sweep's peak (a quarter of a code at the least), and voltage
     within 0.1 % of the source's open voltage or no longer rising, for END_SLICES slices in a
-    row. Never the slope of the voltage alone: a nearly dark substring crawls.
+    row. Never the slope of the voltage alone: a nearly dark substring crawls. What the permanent
+    bleeder draws through the shunt does not count: in low light it is what current there is.
     """
 
-    def __init__(self):
+    def __init__(self, leak_ratio=0, leak_shift=0):
+        self.leak_ratio = leak_ratio
+        self.leak_shift = leak_shift
         self.begin(0, 0, 0)
 
-    def begin(self, zero_x16, open_x16, voltage_zero_x16):
-        """Forget the last sweep. The codes, in sixteenths: current zero, open voltage, its zero."""
+    def begin(self, zero_x16, open_x16, voltage_zero_x16, finer=1):
+        """Forget the last sweep. The codes, in sixteenths: current zero, open voltage, its zero.
+
+        `finer`: codes that make one of 12 bits.
+        """
         self.zero_x16 = zero_x16
-        self.near_open_x16 = open_x16 - max((open_x16 - voltage_zero_x16) // 1000, 8)
+        self.finer = finer
+        self.voltage_zero_x16 = voltage_zero_x16
+        self.near_open_x16 = open_x16 - max((open_x16 - voltage_zero_x16) // 1000, 8 * finer)
         self.peak_x16 = 0
         self.quiet_slices = 0
         self.high_x16 = 0
 
     def complete(self, voltage_x16, current_x16):
-        current = current_x16 - self.zero_x16
+        volts = max(voltage_x16 - self.voltage_zero_x16, 0) >> 4
+        leak_x16 = volts * self.leak_ratio >> max(self.leak_shift - 4, 0)
+        current = current_x16 - self.zero_x16 - leak_x16
         if current > self.peak_x16:
             self.peak_x16 = current
-        rising = voltage_x16 > self.high_x16 + 2
+        rising = voltage_x16 > self.high_x16 + 2 * self.finer
         if voltage_x16 > self.high_x16:
             self.high_x16 = voltage_x16
-        gone = current * 500 < self.peak_x16 or current < 4
+        gone = current < 4 * self.finer or current * 500 < self.peak_x16
         if gone and (voltage_x16 >= self.near_open_x16 or not rising):
             self.quiet_slices += 1
         else:
@@ -94,10 +108,17 @@ class Charge:
         self.profile = profile
         self.capture = capture
         self.ear = ear
-        self.rule = EndRule()
+        self.rule = EndRule(*profile.leak())
+        self.raw = None
+        self.raw_from_us = 0
+        self.meanwhile = None
 
-    def run(self, closed_limit_ms, outputs):
+    def run(self, closed_limit_ms, outputs, raw=None, raw_from_us=0, meanwhile=None):
         """Close, capture, open. `outputs` (the sequencer) is told what is commanded.
+
+        `raw`: buffer for pairs kept one by one from `raw_from_us` after conduction on, or None.
+        `meanwhile`: has work to do while the relay lets go, current being gone: `begin(result)`,
+        then `step()` until it is True; or None.
 
         Ctrl-C ends the charge as an abort would; what was measured is kept.
         """
@@ -107,6 +128,9 @@ class Charge:
         voltage_trip = profile.trip_code("voltage", profile["rated_mv"])
         current_trip = profile.trip_code("current", profile["rated_ma"])
         self.capture.begin(0)
+        self.raw = raw
+        self.raw_from_us = raw_from_us
+        self.meanwhile = meanwhile
         try:
             hal.quiet_begin()
             self._before(result)
@@ -119,8 +143,6 @@ class Charge:
             self._end(result, outputs)
         result.capture_us = hal.capture_began_us()
         result.opened_us = hal.now_us()
-        # Only now: no contact waits for it.
-        self.capture.finish(result.pairs_written)
         return result
 
     def _end(self, result, outputs):
@@ -128,11 +150,12 @@ class Charge:
         hal = self.hal
         try:
             hal.pulse(0)
+            hal.zero_input(False)
             result.conversions_lost = hal.capture_stop()
             if result.capturing:
                 result.pairs_written = hal.capture_written()
             hal.supervise_end()
-            self._open(outputs)
+            self._open(outputs, result)
         except BaseException:
             outputs.make_safe()
             raise
@@ -141,6 +164,13 @@ class Charge:
 
     def _before(self, result):
         hal = self.hal
+        if self.profile["zero_switch"]:
+            hal.zero_input(True)
+            hal.wait_us(ZERO_SETTLE_US)
+            result.voltage_zero_sum = hal.read(board.VOLTAGE, READ_CONVERSIONS)
+            result.zero_conversions = READ_CONVERSIONS
+            hal.zero_input(False)
+            hal.wait_us(ZERO_SETTLE_US)
         result.voltage_sum = hal.read(board.VOLTAGE, READ_CONVERSIONS)
         result.current_sum = hal.read(board.CURRENT, READ_CONVERSIONS)
 
@@ -155,28 +185,47 @@ class Charge:
         outputs.contact_closed = True
         hal.wait_us(1000 * 2 * profile["relay_operate_ms"])
 
-    def _open(self, outputs):
+    def _open(self, outputs, result):
         """The current is already broken by the pulse's end; the relay opens dry."""
         hal = self.hal
         profile = self.profile
         hal.wait_us(1000)
         hal.relay(False)
         outputs.contact_closed = False
-        hal.wait_us(1000 * (profile["relay_release_ms"] + profile["dead_time_ms"]))
+        self._let_pass(1000 * (profile["relay_release_ms"] + profile["dead_time_ms"]), result)
         hal.bleed(True)
         outputs.bleed_engaged = True
+
+    def _let_pass(self, us, result):
+        """Wait, and do what there is to do; a step that takes longer makes the wait longer."""
+        hal = self.hal
+        began = hal.ticks_us()
+        if self.meanwhile is not None:
+            self.meanwhile.begin(result)
+            while (hal.ticks_us() - began) & 0x3FFFFFFF < us - STEP_US:
+                if self.meanwhile.step():
+                    break
+        passed = (hal.ticks_us() - began) & 0x3FFFFFFF
+        if passed < us:
+            hal.wait_us(us - passed)
 
     def _capture(self, result, closed_limit_ms, voltage_trip, current_trip):
         hal = self.hal
         profile = self.profile
         capture = self.capture
-        zero_x16 = 16 * result.current_sum // READ_CONVERSIONS
-        open_x16 = 16 * result.voltage_sum // READ_CONVERSIONS
+        zero_x16 = result.current_sum // (READ_CONVERSIONS // 16)
+        open_x16 = result.voltage_sum // (READ_CONVERSIONS // 16)
+        finer = profile.finer
         rule = self.rule
-        rule.begin(zero_x16, open_x16, profile["voltage_zero_x16"])
-        capture.begin(zero_x16 // 16 + CONDUCTING_CODES)
+        rule.begin(zero_x16, open_x16, profile["voltage_zero_x16"], finer)
         pulse_us = profile["pulse_us"]
         pairs_a_ms = 1000 // hal.PAIR_US
+        capture.begin(
+            zero_x16 // 16 + CONDUCTING_CODES * finer,
+            profile["bounce_ms"] * pairs_a_ms,
+            self.raw,
+            self.raw_from_us // hal.PAIR_US,
+        )
         limit = pairs_a_ms * min(closed_limit_ms, profile["closed_limit_ms"])
         lost = pairs_a_ms * profile["heartbeat_lost_ms"]
         dark = pairs_a_ms * DARK_MS

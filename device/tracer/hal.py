@@ -15,6 +15,10 @@ VOLTAGE = 0  # source voltage by its own sense pair, through the divider
 CURRENT = 1  # shunt amplifier
 CAPACITOR = 2  # capacitor voltage, through its own divider
 
+# Kinds of converters, as in the profile.
+INTERNAL = 1  # the RP2040's own, V and I in turn
+SPI16 = 2  # two of 16 bits, sampled at one instant
+
 # Bits of `trips()`: why supervision asked for the charge to end.
 TRIP_STOP_LOOP = 1
 TRIP_OVER_VOLTAGE = 2
@@ -31,16 +35,18 @@ class Hal:
     """The interface; see the module's text. All numbers are integers."""
 
     EMULATED = False
+    # Of the converters in use; `use_converters` may change them.
     PAIR_US = 4  # from one voltage conversion to the next
     SKEW_NS = 2000  # from the voltage conversion of a pair to its current conversion
+    CODE_BITS = 12  # of V and I; the capacitor's channel always has 12
     RING_PAIRS = 4096  # capacity of `ring`, a power of two
 
     ring = None
     """Buffer of RING_PAIRS words, voltage in the low half and current in the high half of each,
     aligned to its size."""
 
-    fold_units = None
-    """A faster stand-in for `fold_units` of capture.py, where the board has one."""
+    errors = None
+    """A faster stand-in for `errors` of plane.py, where the board has one."""
 
     cobs_into = None
     """A faster stand-in for `cobs_into` of coder.py, where the board has one."""
@@ -57,6 +63,18 @@ class Hal:
 
     def random32(self):
         """A random number of 32 bits (boot nonce, session, arm token)."""
+        raise NotImplementedError
+
+    # -- converters ------------------------------------------------------------------
+
+    def use_converters(self, kind, pair_us, clock_khz, convert_ns):
+        """Measure V and I with these from now on: INTERNAL or SPI16 and its numbers, as in the
+        profile. ValueError where the board has none such, or cannot keep that pace.
+        """
+        raise NotImplementedError
+
+    def zero_input(self, on):
+        """Bring the voltage channel's input to its zero (True), or back to the source."""
         raise NotImplementedError
 
     # -- outputs ---------------------------------------------------------------------
@@ -135,6 +153,10 @@ class Hal:
 
     def now_us(self):
         """Microseconds since boot, 64 bits. Not in the quiet, as `capture_began_us`."""
+        raise NotImplementedError
+
+    def ticks_us(self):
+        """Microseconds modulo 2**30, also in the quiet."""
         raise NotImplementedError
 
     def wait_us(self, us):

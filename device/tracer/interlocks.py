@@ -9,6 +9,7 @@ UNIT_NONE = 0
 UNIT_MV = 1
 UNIT_CODES = 5
 
+# Of 12 bits each.
 ZERO_TOLERANCE_CODES = 24  # how far a current zero may stand from the profile's
 RAIL_CODES = 4090
 ISOLATION_FREE_MV = 60000
@@ -49,8 +50,9 @@ def zero_current(profile, readings):
     """H11: with the contact open the current channel must stand at its zero."""
     code = readings.current_sum // readings.conversions
     off = code - profile["current_zero_x16"] // 16
-    if abs(off) > ZERO_TOLERANCE_CODES:
-        return 11, off, ZERO_TOLERANCE_CODES, UNIT_CODES
+    tolerance = ZERO_TOLERANCE_CODES * profile.finer
+    if abs(off) > tolerance:
+        return 11, off, tolerance, UNIT_CODES
     return None
 
 
@@ -58,7 +60,7 @@ def source_rating(profile, readings):
     """H4, measured before closing. A code at the rail may hide any voltage."""
     if (
         readings.source_mv > profile["rated_mv"]
-        or readings.voltage_sum // readings.conversions >= RAIL_CODES
+        or readings.voltage_sum // readings.conversions >= RAIL_CODES * profile.finer
     ):
         return 4, readings.source_mv, profile["rated_mv"], UNIT_MV
     return None

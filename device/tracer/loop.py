@@ -27,13 +27,28 @@ class Loop:
     def __init__(self, hal, buffers, profile_file=PROFILE_FILE):
         self.hal = hal
         self.profile, _ = load(profile_file, hal.device_id())
+        self._use_converters()
         self.sequencer = Sequencer(hal, self.profile)
-        self.held = Held(buffers, hal.cobs_into)
-        self.capture = Capture(hal.ring, hal.RING_PAIRS, buffers, hal.fold_units)
+        self.held = Held(buffers, hal.ring, hal.cobs_into, hal.errors)
+        self.capture = Capture(hal.ring, hal.RING_PAIRS, buffers, hal.CODE_BITS)
         self.ear = Ear(hal)
         self.left = False  # to the prompt, at least once
         self.bleeding_for = None  # the sweep whose bleed is under way
         self.service = Service(hal, self.profile, self.sequencer, self.held)
+
+    def _use_converters(self):
+        """As the profile says; a profile whose numbers no board can keep is as good as none."""
+        profile = self.profile
+        if profile is not None:
+            try:
+                self.hal.use_converters(
+                    profile["converter"],
+                    profile["pair_us"],
+                    profile["spi_clock_khz"],
+                    profile["spi_convert_ns"],
+                )
+            except ValueError:
+                self.profile = None
 
     def run(self):
         try:
@@ -63,12 +78,13 @@ class Loop:
             result = Result()
             result.end_reason = INTERRUPTED
             self.capture.begin(0)
-            self.hold(sweep_id, result)
+            self.held.prepare(self.service.armed_knots, self.capture, self.profile)
+            self.held.begin(result)
+            self.hold(sweep_id)
 
-    def hold(self, sweep_id, result):
-        self.held.keep(
-            sweep_id, self.service.armed_knots, result, self.capture, self.hal, self.profile
-        )
+    def hold(self, sweep_id):
+        self.held.keep(sweep_id, self.hal)
+        self.service.armed_raw = None
         self.bleeding_for = sweep_id
 
     def step(self):
@@ -92,8 +108,15 @@ class Loop:
         self.ear.expect(service.abort_frame(), service.unheard)
         sequencer.event(states.EV_FIRE)
         charge = Charge(self.hal, self.profile, self.capture, self.ear)
+        self.held.prepare(service.armed_knots, self.capture, self.profile)
         try:
-            result = charge.run(service.armed_limit_ms, sequencer)
+            result = charge.run(
+                service.armed_limit_ms,
+                sequencer,
+                service.armed_raw,
+                service.armed_raw_from_us,
+                self.held,
+            )
         except BaseException:
             self.leave()
             raise
@@ -103,7 +126,7 @@ class Loop:
         else:
             sequencer.fault(finding)
         service.charge_ended(sweep_id, result.end_reason)
-        self.hold(sweep_id, result)
+        self.hold(sweep_id)
         if result.end_reason == INTERRUPTED:
             raise KeyboardInterrupt
 

@@ -24,6 +24,8 @@ class Profile:
         self.record = record
         self.crc = crc32(record)
         self.values = profile_record.unpack_profile(record)
+        # Codes of V and I that make one of 12 bits.
+        self.finer = 16 if self.values["converter"] == 2 else 1
 
     def __getitem__(self, name):
         return self.values[name]
@@ -32,6 +34,18 @@ class Profile:
         """Mean of a channel ("voltage" or "capacitor") in mV."""
         sixteenths = 16 * code_sum - self.values[channel + "_zero_x16"] * conversions
         return sixteenths * self.values[channel + "_nv_per_code"] // (16000 * conversions) // 1000
+
+    def leak(self):
+        """(ratio, shift): what the permanent bleeder draws through the shunt, in current codes, is
+        voltage codes x ratio >> shift; ratio below 2**13, so that 16-bit codes fit.
+        """
+        values = self.values
+        volts = values["voltage_nv_per_code"]
+        amperes = values["current_na_per_code"] * max(values["permanent_bleeder_ohm"], 1)
+        shift = 28
+        while shift and (volts << shift) // amperes >= 8192:
+            shift -= 1
+        return min((volts << shift) // amperes, 8191), shift
 
     def predicted_bleed_ms(self, from_mv, to_mv):
         """Time for the bleed to bring the capacitor from one voltage to the other."""
@@ -50,7 +64,7 @@ class Profile:
         """ADC code of a voltage in mV or a current in mA, at most the converter's rail."""
         scale = self.values[channel + ("_na_per_code" if channel == "current" else "_nv_per_code")]
         code = milli * 1000000 // scale + self.values[channel + "_zero_x16"] // 16
-        return min(code, 4095)
+        return min(code, 4096 * self.finer - 1)
 
     def fault(self, device_id):
         """ "" where this profile may be used on that board, else what speaks against it."""
@@ -85,6 +99,7 @@ class Profile:
             "bleed_mohm",
             "pulse_us",
             "safe_mv",
+            "pair_us",
         ):
             if values[name] == 0:
                 return name + " is zero"

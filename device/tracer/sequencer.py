@@ -104,10 +104,11 @@ class Sequencer:
             self._release_bleed()
 
     def make_safe(self):
-        """Contact open, bleed engaged."""
+        """Contact open, bleed engaged, and the voltage measured at the source."""
         self.hal.safe()
         self.contact_closed = False
         self.bleed_engaged = True
+        self.hal.zero_input(False)
 
     def readings(self, confirmed=False):
         """All three channels and the two switches, now."""
@@ -164,8 +165,7 @@ class Sequencer:
         if self.profile is None:
             return
         now = self.hal.now_us()
-        if self.state != SAFE:
-            self.hal.watchdog(WATCHDOG_MS)
+        self.feed()
         if self.state == ARMED:
             if now >= self.armed_until_us:
                 self.disarm()
@@ -178,6 +178,11 @@ class Sequencer:
             self._looked_us = now
             if self._capacitor_mv() > 2 * self._limit_mv():
                 self.event(EV_CHARGED)
+
+    def feed(self):
+        """Tell the watchdog, where it is on, that the firmware goes on."""
+        if self.state != SAFE:
+            self.hal.watchdog(WATCHDOG_MS)
 
     def pause(self):
         """Wait for the host as long as the next tick allows."""

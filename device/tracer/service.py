@@ -7,7 +7,7 @@ the last few state-changing requests are kept, so that a request sent twice acts
 from kneewire import PROTOCOL, catalogue, framing
 from kneewire.messages import KNOTS_A_BLOCK, NO_SESSION, Refused, fingerprint, pack, unpack
 from tracer import sequencer as states
-from tracer.held import NO_ID
+from tracer.held import NO_ID, RAW_A_BLOCK, RAW_BYTES
 from tracer.interlocks import BEFORE_CLOSING, first_finding
 from tracer.memory import MAX_KNOTS
 
@@ -55,6 +55,8 @@ class Service:
         self.fingerprint = fingerprint()
         self.armed_knots = 0
         self.armed_limit_ms = 0
+        self.armed_raw = None  # buffer for pairs kept one by one
+        self.armed_raw_from_us = 0
         self.confirmed = False
         self.fired = None  # sweep id of an accepted fire, until `loop.py` has run the charge
         self.unheard = b""  # bytes behind an accepted fire, for the ear
@@ -108,6 +110,8 @@ class Service:
 
     def handle(self, body):
         """Answer one body. Every request is answered."""
+        # A host that does not read makes each answer take a second.
+        self.sequencer.feed()
         try:
             request = unpack(body)
         except Refused as refused:
@@ -253,7 +257,10 @@ class Service:
             raise Refusal(R_SWEEP_HELD)
         self._in_range(request["knots"], MIN_KNOTS, MAX_KNOTS)
         self._in_range(request["closed_limit_ms"], 1, 120000)
+        self._in_range(request["raw_pairs"], 0, catalogue.MAX_RAW_PAIRS)
+        self._in_range(request["raw_from_us"], 0, 120000000)
         self.sequencer.disarm()
+        self.armed_raw = self._raw_buffer(request["raw_pairs"])
         if request["confirmed"]:
             self.confirmed = True
         readings = self.sequencer.readings(self.confirmed)
@@ -263,6 +270,7 @@ class Service:
             raise Refusal(R_INTERLOCK, finding)
         self.armed_knots = request["knots"]
         self.armed_limit_ms = request["closed_limit_ms"]
+        self.armed_raw_from_us = request["raw_from_us"]
         return {
             "token": token,
             "life_ms": self.profile["token_life_ms"],
@@ -270,6 +278,15 @@ class Service:
             "capacitor_sum": readings.capacitor_sum,
             "conversions": readings.conversions,
         }
+
+    def _raw_buffer(self, pairs):
+        self.armed_raw = None  # what an earlier arming took is free again
+        if not pairs:
+            return None
+        try:
+            return bytearray(RAW_BYTES * pairs)
+        except MemoryError:
+            raise Refusal(R_OUT_OF_RANGE) from None
 
     def _fire(self, request):
         sequencer = self.sequencer
@@ -296,23 +313,32 @@ class Service:
 
     def _read_manifest(self, request):
         self._demand_held()
-        return self.held.manifest
+        return self.held.whole_manifest()
 
     def _fetch(self, request):
         self._demand_held()
         if request["sweep_id"] != self.held.sweep_id:
             raise Refusal(R_NO_SWEEP)
+        return self._burst(request, self.held.count, KNOTS_A_BLOCK, self.held.block)
+
+    def _fetch_raw(self, request):
+        self._demand_held()
+        if request["sweep_id"] != self.held.sweep_id:
+            raise Refusal(R_NO_SWEEP)
+        return self._burst(request, self.held.raw_count, RAW_A_BLOCK, self.held.raw_block)
+
+    def _burst(self, request, there, most_a_block, block):
+        """Send the blocks asked for, as many as the window allows."""
         first = request["first"]
-        self._in_range(first, 0, self.held.count - 1)
-        self._in_range(request["count"], 1, self.held.count - first)
-        self._in_range(request["a_block"], 0, KNOTS_A_BLOCK)
-        a_block = request["a_block"] or KNOTS_A_BLOCK
+        self._in_range(first, 0, there - 1)
+        self._in_range(request["count"], 1, there - first)
+        self._in_range(request["a_block"], 0, most_a_block)
+        a_block = request["a_block"] or most_a_block
         count = min(request["count"], WINDOW * a_block)
         place = first
         while place < first + count:
             many = min(a_block, first + count - place)
-            frame = self.held.block(self.session, request.sequence, place, many)
-            if not self.send(frame):
+            if not self.send(block(self.session, request.sequence, place, many)):
                 break
             place += many
         return {"first": first, "count": count}
@@ -350,5 +376,6 @@ HANDLERS = {
     "clear_fault": Service._clear_fault,
     "read_manifest": Service._read_manifest,
     "fetch": Service._fetch,
+    "fetch_raw": Service._fetch_raw,
     "acknowledge": Service._acknowledge,
 }

@@ -11,6 +11,7 @@ from __future__ import annotations
 from importlib import metadata
 
 from kneewise.errors import KneewiseError, UsageError
+from kneewise.instrument.full_rate import FullRate
 from kneewise.instrument.opened import Opened, register_opener
 from kneewise.instrument.trace import REPLAY, Trace
 from kneewise.instrument.tracer import Tracer
@@ -18,7 +19,7 @@ from kneewise.link.recording import read_recording
 from kneewise.link.replay import ReplayPort
 
 __version__ = metadata.version("kneewise")
-__all__ = ["KneewiseError", "Trace", "Tracer", "__version__"]
+__all__ = ["FullRate", "KneewiseError", "Trace", "Tracer", "__version__"]
 
 
 def _emulator(target: str) -> Opened:

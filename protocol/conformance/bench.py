@@ -205,15 +205,23 @@ class Bench(Wire):
 
     def arm_values(self, **changes: int) -> dict[str, int]:
         """Of an arm; confirmed only where `may_arm` says so."""
-        values = {"knots": KNOTS, "closed_limit_ms": LIMIT_MS, "confirmed": int(self.may_arm)}
+        values = {
+            "knots": KNOTS,
+            "closed_limit_ms": LIMIT_MS,
+            "confirmed": int(self.may_arm),
+            "raw_from_us": 0,
+            "raw_pairs": 0,
+        }
         return {**values, **changes}
 
-    def arm(self) -> Message:
+    def arm(self, **changes: int) -> Message:
         """Armed. NotTried where that is not allowed, or a guard of the device speaks."""
         if not self.may_arm:
             raise NotTried(NEEDS_SWEEP)
         self.drop_own()
-        frame = self.ask("arm", self.arm_values())
+        frame = self.ask("arm", self.arm_values(**changes))
+        if changes.get("raw_pairs") and frame.refusal() == "out of range":
+            raise NotTried(f"the device has no room for {changes['raw_pairs']} raw pairs")
         if frame.refusal() == "interlock":
             guard = frame.reply("refusal")["guard"]
             raise NotTried(f"the device does not arm: guard H{guard} speaks")

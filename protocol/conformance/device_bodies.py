@@ -19,8 +19,9 @@ AT_ONCE = 8
 # What is asked while no sweep is held and nothing is armed: none of these closes anything.
 NOTHING: dict[str, dict[str, Any]] = {
     "fetch": {"sweep_id": OTHER_ID, "first": 0, "count": 1, "a_block": 0},
+    "fetch_raw": {"sweep_id": OTHER_ID, "first": 0, "count": 1, "a_block": 0},
     "acknowledge": {"sweep_id": OTHER_ID},
-    "arm": {"knots": 0, "closed_limit_ms": 0, "confirmed": 0},
+    "arm": {"knots": 0, "closed_limit_ms": 0, "confirmed": 0, "raw_from_us": 0, "raw_pairs": 0},
     "fire": {"token": 0, "sweep_id": OTHER_ID},
 }
 

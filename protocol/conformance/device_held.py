@@ -6,6 +6,7 @@ from itertools import pairwise
 from zlib import crc32
 
 from conformance.bench import KNOTS, Bench, new_nonce
+from conformance.bursts import BURSTS
 from conformance.checks import Check
 from conformance.device_bodies import OTHER_ID, refused_as
 from conformance.report import Broken
@@ -25,28 +26,35 @@ def held(bench: Bench) -> Sweep:
     return made
 
 
-def fetch(bench: Bench, made: Sweep, first: int, count: int, a_block: int = 0) -> bytes:
-    """The records of one burst, each block looked at."""
+def burst(bench: Bench, name: str, made: Sweep, first: int, count: int, a_block: int = 0) -> bytes:
+    """The records of one `fetch` or `fetch_raw`, each block looked at."""
+    kind = BURSTS[name]
+    size, what = kind.record_bytes, kind.what
     values = {"sweep_id": made.sweep_id, "first": first, "count": count, "a_block": a_block}
-    *blocks, last = bench.answers(bench.frame("fetch", values))
-    reply = last.reply("fetch_reply")
-    limit = a_block or KNOTS_A_BLOCK
+    *blocks, last = bench.answers(bench.frame(name, values))
+    reply = last.reply(f"{name}_reply")
+    limit = a_block or kind.most_a_block
     due = min(count, bench.device["window"] * limit)
     if (reply["first"], reply["count"]) != (first, due):
         raise Broken(f"{reply} to {values}")
     data = b""
     for frame in blocks:
-        block = frame.reply("block")
+        block = frame.reply(kind.block)
         if frame.sequence != last.sequence:
-            raise Broken("a block with another sequence than its fetch")
-        if block["first"] != first + len(data) // KNOT_BYTES:
-            raise Broken(f"a block from knot {block['first']} out of order")
-        if not 0 < len(block["data"]) <= limit * KNOT_BYTES:
-            raise Broken(f"a block of {len(block['data']) // KNOT_BYTES} knots, {limit} at most")
+            raise Broken(f"a block with another sequence than its {name}")
+        if block["first"] != first + len(data) // size:
+            raise Broken(f"a block from number {block['first']} out of order")
+        if not 0 < len(block["data"]) <= limit * size or len(block["data"]) % size:
+            raise Broken(f"a block of {len(block['data'])} bytes, {limit} {what} at most")
         data += block["data"]
-    if len(data) != due * KNOT_BYTES or len(blocks) > bench.device["window"]:
-        raise Broken(f"{len(blocks)} blocks with {len(data) // KNOT_BYTES} of {due} knots")
+    if len(data) != due * size or len(blocks) > bench.device["window"]:
+        raise Broken(f"{len(blocks)} blocks with {len(data) // size} of {due} {what}")
     return data
+
+
+def fetch(bench: Bench, made: Sweep, first: int, count: int, a_block: int = 0) -> bytes:
+    """The knot records of one burst."""
+    return burst(bench, "fetch", made, first, count, a_block)
 
 
 def everything(bench: Bench, made: Sweep) -> bytes:

@@ -9,16 +9,18 @@ from functools import partial
 from typing import Any
 from zlib import crc32
 
+from conformance.bursts import BURSTS
 from conformance.host_device import ARMED, BLEEDING, CHARGING, SAFE, Conversation, Twist
-from conformance.host_model import CONVERSIONS, LIFE_MS, PAIR_US, PROFILE, Curve, code
+from conformance.host_model import CONVERSIONS, LIFE_MS, PAIR_US, PROFILE, Curve, code, raw_pairs
 from kneewire import PROTOCOL, catalogue
-from kneewire.messages import KNOT_BYTES, KNOTS_A_BLOCK, Message, fingerprint
+from kneewire.messages import RAW_BYTES, Message, fingerprint
 from kneewire.profile_record import pack_profile
 
 COMPLETE, ABORTED = 1, 3
 WINDOW = 16
 MIN_KNOTS, MAX_KNOTS = 16, 512
 MAX_LIMIT_MS = 120000
+LATEST_US = 120000000
 BLEED_S = 0.3
 NO_ID = bytes(16)
 
@@ -37,8 +39,10 @@ class ScriptedDevice(Conversation):
         super().boot()
         self.held_id = NO_ID
         self.records = b""
+        self.raw = b""
         self.manifest: dict[str, Any] = {}
         self.knots = 0
+        self.raw_from_us = self.raw_wanted = 0
         self.charging_id = NO_ID
         self.charge_us = 0
 
@@ -75,6 +79,8 @@ class ScriptedDevice(Conversation):
     def _hold(self, sweep_id: bytes, reason: int) -> None:
         many = self.knots if reason == COMPLETE else 0
         self.records, pairs, ended_us = self.curve.records(many, self.charge_us)
+        raw_first = self.raw_from_us // PAIR_US
+        self.raw = raw_pairs(self.records, raw_first, self.raw_wanted)
         self.held_id = sweep_id
         open_code = code(self.curve.voc_v, "voltage_nv_per_code", 24)
         self.manifest = {
@@ -96,12 +102,22 @@ class ScriptedDevice(Conversation):
             "residual_sum": CONVERSIONS * 24,
             "residual_conversions": CONVERSIONS,
             "profile_crc": crc32(self.profile),
+            "voltage_zero_sum": CONVERSIONS * 24,
+            "zero_conversions": CONVERSIONS,
+            "bounces": 0,
+            "raw_first": raw_first if self.raw else 0,
+            "raw_pairs": self.raw_count(),
+            "raw_crc": crc32(self.raw),
         }
+
+    def raw_count(self) -> int:
+        return len(self.raw) // RAW_BYTES
 
     def drop(self) -> None:
         self.freed.append(self.held_id)
         self.held_id = NO_ID
         self.records = b""
+        self.raw = b""
 
 
 def on_hello(device: ScriptedDevice, message: Message) -> None:
@@ -184,6 +200,8 @@ def on_arm(device: ScriptedDevice, message: Message) -> None:
     elif not (
         MIN_KNOTS <= message["knots"] <= MAX_KNOTS
         and 1 <= message["closed_limit_ms"] <= MAX_LIMIT_MS
+        and message["raw_pairs"] <= catalogue.MAX_RAW_PAIRS
+        and message["raw_from_us"] <= LATEST_US
     ):
         device.refuse(message, "out of range")
     else:
@@ -191,6 +209,7 @@ def on_arm(device: ScriptedDevice, message: Message) -> None:
         device.state = ARMED
         device.token = token
         device.knots = message["knots"]
+        device.raw_from_us, device.raw_wanted = message["raw_from_us"], message["raw_pairs"]
         device.later(LIFE_MS / 1000, partial(_expire, device, token))
         device.reply(
             message,
@@ -234,19 +253,30 @@ def on_read_manifest(device: ScriptedDevice, message: Message) -> None:
 
 
 def on_fetch(device: ScriptedDevice, message: Message) -> None:
+    _burst(device, message, device.records)
+
+
+def on_fetch_raw(device: ScriptedDevice, message: Message) -> None:
+    _burst(device, message, device.raw)
+
+
+def _burst(device: ScriptedDevice, message: Message, records: bytes) -> None:
+    """As many blocks of them as were asked for and the window allows."""
+    burst = BURSTS[message.name]
+    size, fit = burst.record_bytes, burst.most_a_block
     first, count, a_block = message["first"], message["count"], message["a_block"]
-    total = len(device.records) // KNOT_BYTES
+    total = len(records) // size
     if message["sweep_id"] != device.held_id or device.held_id == NO_ID:
         device.refuse(message, "no held sweep")
-    elif not (first < total and 1 <= count <= total - first and a_block <= KNOTS_A_BLOCK):
+    elif not (first < total and 1 <= count <= total - first and a_block <= fit):
         device.refuse(message, "out of range")
     else:
-        a_block = a_block or KNOTS_A_BLOCK
+        a_block = a_block or fit
         count = min(count, WINDOW * a_block)
         for place in range(first, first + count, a_block):
             after = min(place + a_block, first + count)
-            data = device.records[place * KNOT_BYTES : after * KNOT_BYTES]
-            device.notice("block", message.sequence, first=place, data=data)
+            data = records[place * size : after * size]
+            device.notice(burst.block, message.sequence, first=place, data=data)
         device.reply(message, first=first, count=count)
 
 
@@ -269,5 +299,6 @@ HANDLERS = {
     "clear_fault": on_clear_fault,
     "read_manifest": on_read_manifest,
     "fetch": on_fetch,
+    "fetch_raw": on_fetch_raw,
     "acknowledge": on_acknowledge,
 }

@@ -205,6 +205,10 @@ class Conversation:
     def abort_charge(self) -> None:
         raise NotImplementedError
 
+    def raw_count(self) -> int:
+        """Raw pairs in the held sweep."""
+        raise NotImplementedError
+
     def _refuse_unread(self, body: bytes) -> None:
         kind, text = body[0], "malformed" if body[0] in catalogue.MESSAGES else "unknown kind"
         whole = len(body) >= 9

@@ -6,18 +6,25 @@ import math
 from dataclasses import dataclass
 from typing import Any
 
-from kneewire.messages import pack_knot
+from kneewire.messages import pack_knot, unpack_knots
+from kneewire.profile_record import FORMAT
 
 PAIR_US = 4
 LIFE_MS = 2000
 CONVERSIONS = 256
 
 PROFILE: dict[str, Any] = {
-    "format": 1,
+    "format": FORMAT,
     "name": "scripted device",
     "device_id": b"SCRIPTED",
     "hazard_class": 1,
     "contact": 1,
+    "converter": 1,
+    "pair_us": PAIR_US,
+    "spi_clock_khz": 0,
+    "spi_convert_ns": 0,
+    "wide_code_x16": 16,
+    "zero_switch": 1,
     "voltage_nv_per_code": 16500000,
     "voltage_zero_x16": 16 * 24,
     "current_na_per_code": 5200000,
@@ -37,6 +44,7 @@ PROFILE: dict[str, Any] = {
     "relay_release_ms": 5,
     "bleed_operate_ms": 6,
     "bleed_release_ms": 6,
+    "bounce_ms": 0,
     "dead_time_ms": 20,
     "safe_mv": 12000,
     "start_permyriad": 50,
@@ -66,26 +74,38 @@ class Curve:
     def records(self, many: int, start_us: int) -> tuple[bytes, int, int]:
         """The knot records, their pairs, and the time at which the last ends (us)."""
         step = 0.9985 * self.voc_v / max(many - 1, 1)
-        at_us = float(start_us)
+        at_us = start_us
         out = b""
         all_pairs = 0
         for number in range(many):
             volt = number * step
-            passed_us = 1e6 * self.farad * step / self.current_a(volt)
-            pairs = max(round(passed_us / PAIR_US), 1)
+            pairs = max(round(1e6 * self.farad * step / self.current_a(volt) / PAIR_US), 1)
             ampere = self.current_a(volt)
             knot = {
-                "time_us": round(at_us + passed_us / 2),
+                "time_us": at_us + (pairs - 1) * PAIR_US // 2,
                 "voltage_sum": round(pairs * code(volt, "voltage_nv_per_code", 24)),
                 "current_sum": round(pairs * code(ampere, "current_na_per_code", 40)),
                 "pairs": pairs,
-                "voltage_scatter": 3 * pairs,
-                "current_scatter": 3 * pairs,
+                "voltage_scatter": 6 * pairs,
+                "current_scatter": 6 * pairs,
             }
             out += pack_knot(knot)
             all_pairs += pairs
-            at_us += passed_us
-        return out, all_pairs, round(at_us)
+            at_us += pairs * PAIR_US
+        return out, all_pairs, at_us
+
+
+def raw_pairs(records: bytes, first: int, many: int) -> bytes:
+    """Raw pairs from pair `first` on, `many` at most: the means of the knots that they are in."""
+    out = b""
+    place = 0
+    for knot in unpack_knots(records):
+        after = place + knot["pairs"]
+        inside = min(after, first + many) - max(place, first)
+        means = (round(knot[name] / knot["pairs"]) for name in ("voltage_sum", "current_sum"))
+        out += b"".join(mean.to_bytes(2, "little") for mean in means) * max(inside, 0)
+        place = after
+    return out
 
 
 def code(value: float, scale: str, zero: float) -> float:

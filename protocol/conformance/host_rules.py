@@ -10,6 +10,7 @@ from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
 from zlib import crc32
 
+from conformance.bursts import BLOCKS, BURSTS, REPLIES
 from conformance.host_watch import (
     CHANGING,
     CLOSED,
@@ -24,14 +25,14 @@ from conformance.host_watch import (
     Said,
 )
 from kneewire import catalogue, framing
-from kneewire.messages import HEADER_BYTES, KNOT_BYTES, KNOTS_A_BLOCK, NO_SESSION, pack
+from kneewire.messages import HEADER_BYTES, NO_SESSION, pack
 
 FIRST_FRAME = 64
 BEAT_S = 0.65  # 500 ms, and what a clock or a system may add
 FLIGHT_S = 0.1  # for an answer that has been given and not been read yet
 HELLO_SEQUENCE = int.from_bytes(b"iKne", "little")
 NEVER_MINOR = (9, 10, 11, 13, 14, 16, 21, 23, 27)
-MIN_KNOTS, MAX_LIMIT_MS = 16, 120000
+MIN_KNOTS, MAX_LIMIT_MS, LATEST_US = 16, 120000, 120000000
 
 
 @dataclass
@@ -187,6 +188,13 @@ def arms_in_range(log: Log, seen: Seen) -> None:
             seen.expect(1 <= limit <= MAX_LIMIT_MS, f"arm for {limit} ms")
 
 
+def asks_for_raw_in_range(log: Log, seen: Seen) -> None:
+    for entry in heard(log, "arm"):
+        many, from_us = entry.get("raw_pairs"), entry.get("raw_from_us")
+        seen.expect(many <= catalogue.MAX_RAW_PAIRS, f"arm with {many} raw pairs")
+        seen.expect(from_us <= LATEST_US, f"arm for raw pairs from {from_us} us on")
+
+
 def fires_the_token(log: Log, seen: Seen) -> None:
     token, spent = 0, {0}
     known: set[tuple[int, int]] = set()
@@ -269,47 +277,68 @@ def within_the_window(log: Log, seen: Seen) -> None:
     for entry in log:
         if isinstance(entry, Said) and entry.name == "hello_reply":
             window = entry.message["window"]
-        elif isinstance(entry, Heard) and entry.name == "fetch":
-            a_block = entry.get("a_block") or KNOTS_A_BLOCK
+        elif isinstance(entry, Heard) and entry.name in BURSTS:
+            a_block = entry.get("a_block") or BURSTS[entry.name].most_a_block
             blocks = -(-entry.get("count") // a_block)
             seen.expect(blocks <= window, f"{blocks} blocks in one fetch, {window} at most")
 
 
-def within_the_sweep(log: Log, seen: Seen) -> None:
-    knots: dict[bytes, int] = {}
-    for entry in log:
-        if isinstance(entry, Said) and entry.name == "manifest":
-            knots[entry.message["sweep_id"]] = entry.message["knots"]
-        elif isinstance(entry, Heard) and entry.name == "fetch":
-            first, count = entry.get("first"), entry.get("count")
-            whole = knots.get(entry.of_id(), 0)
-            what = f"fetch {first}, {count} of {whole} knots"
-            seen.expect(count > 0 and first + count <= whole, what)
-            seen.expect(entry.get("a_block") <= KNOTS_A_BLOCK, f"{what}, blocks too large")
+def _within_the_sweep(name: str) -> Callable[[Log, Seen], None]:
+    burst = BURSTS[name]
+
+    def rule(log: Log, seen: Seen) -> None:
+        there: dict[bytes, int] = {}
+        for entry in log:
+            if isinstance(entry, Said) and entry.name == "manifest":
+                there[entry.message["sweep_id"]] = entry.message[burst.count]
+            elif isinstance(entry, Heard) and entry.name == name:
+                first, count = entry.get("first"), entry.get("count")
+                whole = there.get(entry.of_id(), 0)
+                what = f"{name} {first}, {count} of {whole} {burst.what}"
+                seen.expect(count > 0 and first + count <= whole, what)
+                fits = entry.get("a_block") <= burst.most_a_block
+                seen.expect(fits, f"{what}, blocks too large")
+
+    return rule
 
 
-def knots_agree(log: Log, seen: Seen) -> None:
-    """At an acknowledgement the knots last received are those of the manifest."""
-    knots: dict[int, bytes] = {}
-    crcs: dict[bytes, tuple[int, int]] = {}
-    done: set[bytes] = set()
-    for entry in log:
-        if isinstance(entry, Said) and entry.name == "block":
-            first, data = entry.message["first"], entry.message["data"]
-            for place in range(len(data) // KNOT_BYTES):
-                knots[first + place] = data[place * KNOT_BYTES : (place + 1) * KNOT_BYTES]
-        elif isinstance(entry, Said) and entry.name == "manifest":
-            values = entry.message.values
-            crcs[values["sweep_id"]] = (values["knots"], values["knots_crc"])
-        elif isinstance(entry, Heard) and entry.name == "acknowledge":
-            sweep_id = entry.of_id()
-            if sweep_id in crcs and sweep_id not in done:
-                done.add(sweep_id)
-                count, crc = crcs[sweep_id]
-                records = b"".join(knots.get(place, b"") for place in range(count))
-                agree = crc32(records) == crc
-                seen.expect(agree, "acknowledged with knots that do not agree with the CRC")
-                knots = {}
+def _agree(name: str) -> Callable[[Log, Seen], None]:
+    """At an acknowledgement the records last received are those of the manifest.
+
+    Raw pairs need not be fetched; knots do.
+    """
+    burst = BURSTS[name]
+    size = burst.record_bytes
+
+    def rule(log: Log, seen: Seen) -> None:
+        records: dict[int, bytes] = {}
+        crcs: dict[bytes, tuple[int, int]] = {}
+        done: set[bytes] = set()
+        asked: set[int] = set()
+        for entry in log:
+            if isinstance(entry, Heard) and entry.name == name:
+                asked.add(entry.sequence)
+            elif isinstance(entry, Said) and entry.name == burst.block:
+                if entry.message.sequence not in asked:
+                    continue
+                first, data = entry.message["first"], entry.message["data"]
+                for place in range(len(data) // size):
+                    records[first + place] = data[place * size : (place + 1) * size]
+            elif isinstance(entry, Said) and entry.name == "manifest":
+                values = entry.message.values
+                crcs[values["sweep_id"]] = (values[burst.count], values[burst.crc])
+            elif isinstance(entry, Heard) and entry.name == "acknowledge":
+                sweep_id = entry.of_id()
+                if sweep_id in crcs and sweep_id not in done:
+                    done.add(sweep_id)
+                    count, crc = crcs[sweep_id]
+                    whole = b"".join(records.get(place, b"") for place in range(count))
+                    if records or name == "fetch":
+                        what = f"acknowledged with {burst.what} that do not agree with the CRC"
+                        seen.expect(crc32(whole) == crc, what)
+                    records = {}
+
+    return rule
 
 
 def acknowledges_the_held(log: Log, seen: Seen) -> None:
@@ -348,13 +377,13 @@ def no_probe_in_a_burst(log: Log, seen: Seen) -> None:
     """While blocks come; after a moment without one the burst is over for the host."""
     last: float | None = None
     for entry in log:
-        if isinstance(entry, Heard) and entry.name == "fetch":
+        if isinstance(entry, Heard) and entry.name in BURSTS:
             last = entry.at_s
         elif last is None:
             continue
-        elif isinstance(entry, Said) and entry.name == "block":
+        elif isinstance(entry, Said) and entry.name in BLOCKS:
             last = entry.at_s
-        elif isinstance(entry, Said) and entry.name == "fetch_reply":
+        elif isinstance(entry, Said) and entry.name in REPLIES:
             seen.expect(True, "")
             last = None
         elif isinstance(entry, Heard) and entry.name == "heartbeat":
@@ -389,8 +418,11 @@ RULES = (
     Rule("heartbeats", ("W7",), "one at least every 500 ms while charging", heartbeats),
     Rule("frame sizes", ("C1",), "64 bytes before hello, max_frame after it", frame_sizes),
     Rule("the window", ("C2",), "no more than `window` blocks a fetch", within_the_window),
-    Rule("fetches", ("W11",), "knots of the sweep", within_the_sweep),
-    Rule("the manifest's CRC", ("W12",), "knots that agree with it", knots_agree),
+    Rule("fetches", ("W11",), "knots of the sweep", _within_the_sweep("fetch")),
+    Rule("the manifest's CRC", ("W12",), "knots that agree with it", _agree("fetch")),
+    Rule("raw pairs asked for", ("K5",), "values within their range", asks_for_raw_in_range),
+    Rule("raw fetches", ("K7",), "raw pairs of the sweep", _within_the_sweep("fetch_raw")),
+    Rule("the raw pairs' CRC", ("K8",), "raw pairs that agree with it", _agree("fetch_raw")),
     Rule("acknowledgements", ("W10",), "the id of the held sweep", acknowledges_the_held),
     Rule("one fire", ("W14",), "no fire while an outcome is unknown", one_fire),
     Rule("no probe in a burst", ("T2",), "no heartbeat between blocks", no_probe_in_a_burst),

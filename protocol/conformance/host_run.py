@@ -16,7 +16,7 @@ from conformance.host_answers import ScriptedDevice
 from conformance.host_rules import RULES, Seen
 from conformance.host_scripts import Script
 from conformance.host_watch import CLOSED, OPENED, Heard
-from conformance.report import FAILED, NOT_TRIED, PASSED, UNSEEN, Result
+from conformance.report import FAILED, NOT_TRIED, PASSED, UNSEEN, Result, Unseen
 
 AWAY_S = 2.0  # a host that comes back sooner is still in the same script
 POLL_S = 0.02
@@ -40,8 +40,11 @@ class Play:
         if not self.spoken:
             outcome, found = NOT_TRIED, "no host has spoken"
         else:
-            found = script.judge(self.device.watch.log, self.device)
-            outcome = FAILED if found else PASSED
+            try:
+                found = script.judge(self.device.watch.log, self.device)
+                outcome = FAILED if found else PASSED
+            except Unseen as why:
+                outcome, found = why.outcome, why.found
         return Result(script.name, script.clauses, outcome, script.expected, found or "as expected")
 
 

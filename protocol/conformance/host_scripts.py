@@ -10,7 +10,31 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 from conformance.host_answers import ScriptedDevice
-from conformance.host_device import SAFE, Conversation, Twist
+from conformance.host_device import Twist
+from conformance.host_twists import (
+    STOP_LOOP,
+    TWICE,
+    BlocksMissing,
+    Doubled,
+    FireRefused,
+    ForgottenBehindFire,
+    GarbageBetween,
+    LongCharge,
+    LongerBodies,
+    LostOnce,
+    NoticeOfAnother,
+    NoticesLost,
+    OthersReplies,
+    OtherVersion,
+    PromptInPlace,
+    RawBeyondTheCount,
+    RawBlocksMissing,
+    RawOfAnotherFetch,
+    ResetBehindFire,
+    Silent,
+    UnknownKinds,
+    WrongOnce,
+)
 from conformance.host_watch import (
     CHANGING,
     FROZEN,
@@ -23,198 +47,16 @@ from conformance.host_watch import (
     Log,
     Said,
 )
-from kneewire import PROTOCOL, catalogue, framing
-from kneewire.messages import HEADER_BYTES, Message, fingerprint, pack
+from conformance.report import Unseen
+from kneewire import PROTOCOL, catalogue
+from kneewire.messages import Message, fingerprint
 
-OTHERS_SEQUENCE = 100000  # of a reply that belongs to no request
-UNKNOWN_KIND = 0xEE
-LONG_GARBAGE = 1500
-STOP_LOOP = 12
-TRACEBACK = (
-    b"Traceback (most recent call last):\r\n"
-    b'  File "tracer/loop.py", line 60, in step\r\n'
-    b"ValueError: made up by a script\r\n"
-)
-TWICE = 2
-
-
-def coded(body: bytes) -> bytes:
-    return framing.encode(body, False)
-
-
-class LongCharge(Twist):
-    charge_s = 1.3
-
-
-class LostOnce(Twist):
-    """The first reply of each name is lost."""
-
-    def __init__(self) -> None:
-        self._seen = {"block", "charge_ended", "bleed_ended"}
-
-    def outgoing(self, device: Conversation, message: Message, body: bytes) -> list[bytes]:
-        if message.name in self._seen:
-            return [coded(body)]
-        self._seen.add(message.name)
-        return []
-
-
-class NoticesLost(Twist):
-    charge_s = 0.9
-
-    def outgoing(self, device: Conversation, message: Message, body: bytes) -> list[bytes]:
-        return [] if message.name in ("charge_ended", "bleed_ended") else [coded(body)]
-
-
-class Doubled(Twist):
-    def outgoing(self, device: Conversation, message: Message, body: bytes) -> list[bytes]:
-        return [coded(body), coded(body)]
-
-
-class OthersReplies(Twist):
-    """Before each reply comes one to somebody else's request, and a refusal of one."""
-
-    def outgoing(self, device: Conversation, message: Message, body: bytes) -> list[bytes]:
-        if not message.sequence:
-            return [coded(body)]
-        other = message.sequence + OTHERS_SEQUENCE
-        head = body[:5] + other.to_bytes(4, "little")
-        values = {"of_kind": body[0] & ~catalogue.REPLY, "code": 7, "guard": 0}
-        values |= {"measured": 0, "limit": 0, "unit": 0}
-        refusal = pack("refusal", message.session, other, values)
-        return [coded(head + body[HEADER_BYTES:]), coded(refusal), coded(body)]
-
-
-class UnknownKinds(Twist):
-    """With the header of what they surround."""
-
-    def outgoing(self, device: Conversation, message: Message, body: bytes) -> list[bytes]:
-        unknown = coded(bytes([UNKNOWN_KIND]) + body[1:HEADER_BYTES] + b"of a later version")
-        return [unknown, coded(body), unknown]
-
-
-class LongerBodies(Twist):
-    def outgoing(self, device: Conversation, message: Message, body: bytes) -> list[bytes]:
-        room = catalogue.MAX_FRAME - framing.CRC_BYTES - len(body)
-        return [coded(body + bytes(range(250, 256))[:room])]
-
-
-class BlocksMissing(Twist):
-    """Every second block of the first two bursts."""
-
-    def __init__(self) -> None:
-        self._blocks = self._bursts = 0
-
-    def outgoing(self, device: Conversation, message: Message, body: bytes) -> list[bytes]:
-        if message.name == "fetch_reply":
-            self._bursts += 1
-        elif message.name == "block":
-            self._blocks += 1
-            if self._bursts < TWICE and self._blocks % 2:
-                return []
-        return [coded(body)]
-
-
-class KnotsWrongOnce(Twist):
-    """One knot of the first block is not what the manifest's CRC was made of."""
-
-    done = False
-
-    def outgoing(self, device: Conversation, message: Message, body: bytes) -> list[bytes]:
-        if message.name == "block" and not self.done:
-            self.done = True
-            wrong = bytearray(body)
-            wrong[HEADER_BYTES + 3 + 8] ^= 0x40
-            return [coded(bytes(wrong))]
-        return [coded(body)]
-
-
-class NoticeOfAnother(Twist):
-    """A charge_ended of another sweep comes late, while this one charges."""
-
-    charge_s = 1.3
-
-    def outgoing(self, device: Conversation, message: Message, body: bytes) -> list[bytes]:
-        if message.name == "fire_reply":
-            values = {"sweep_id": bytes(range(16)), "end_reason": 1}
-            late = coded(pack("charge_ended", message.session, 0, values))
-            device.later(0.1, lambda: device.say(late))
-        return [coded(body)]
-
-
-class FireRefused(Twist):
-    def request(self, device: Conversation, message: Message) -> bool:
-        if message.name != "fire" or message.sequence in device.stored:
-            return False
-        device.highest = message.sequence
-        device.token = 0
-        device.state = SAFE
-        device.refuse(message, "interlock", STOP_LOOP)
-        return True
-
-
-class ResetBehindFire(Twist):
-    def request(self, device: Conversation, message: Message) -> bool:
-        if message.name == "fire" and message.session == device.session:
-            device.reset()
-            return True
-        return False
-
-
-class ForgottenBehindFire(Twist):
-    def request(self, device: Conversation, message: Message) -> bool:
-        if message.name == "fire" and message.session == device.session:
-            device.forget_session()
-        return False
-
-
-class PromptInPlace(Twist):
-    """In place of the answer to the first arm."""
-
-    shown = False
-
-    def request(self, device: Conversation, message: Message) -> bool:
-        if message.name == "arm" and not self.shown:
-            self.shown = True
-            device.show_prompt(TRACEBACK)
-            return True
-        return False
-
-
-class OtherVersion(Twist):
-    """Fields of hello_reply that are not those of this version."""
-
-    def __init__(self, **fields: int) -> None:
-        self._fields = fields
-
-    def outgoing(self, device: Conversation, message: Message, body: bytes) -> list[bytes]:
-        if message.name == "hello_reply":
-            values = {**message.values, **self._fields}
-            body = pack("hello_reply", message.session, message.sequence, values)
-        return [coded(body)]
-
-
-class GarbageBetween(Twist):
-    """Of all lengths; every sixth time without a delimiter, which costs the frame behind it."""
-
-    def __init__(self) -> None:
-        self._times = 0
-
-    def outgoing(self, device: Conversation, message: Message, body: bytes) -> list[bytes]:
-        self._times += 1
-        size = LONG_GARBAGE if self._times == TWICE else device.random.randrange(1, 80)
-        noise = bytes(device.random.randrange(256) for _ in range(size))
-        empty = 3 * framing.DELIMITER
-        spoils = self._times % 6 == 0 and message.name != "hello_reply"
-        return [empty + noise + (b"" if spoils else framing.DELIMITER) + coded(body)]
-
-
-class Silent(Twist):
-    def request(self, device: Conversation, message: Message) -> bool:
-        return True
-
-
+# A byte of a sum in the first knot, or of a code in the first raw pair, behind first and length.
+IN_A_KNOT, IN_A_RAW_PAIR = 3 + 8, 4
 # -- what must come of it: "" where it has, else what was found ------------------------------
+
+
+Judge = Callable[[Log, ScriptedDevice], str]
 
 
 def swept(log: Log, device: ScriptedDevice) -> str:
@@ -243,11 +85,29 @@ def _asked_again(log: Log, place: int, name: str, lost: Message) -> bool:
     return bool(first) and any(body == first[-1] for number, body in asked if number > place)
 
 
-def swept_again_by_place(log: Log, device: ScriptedDevice) -> str:
-    fetches = [entry for entry in log if isinstance(entry, Heard) and entry.name == "fetch"]
-    if fetches and not any(entry.get("first") for entry in fetches):
-        return "no gap asked for by its place"
-    return swept(log, device)
+def gaps_asked_for(name: str) -> Judge:
+    """A sweep, and not by asking for all from the beginning again."""
+
+    def judge(log: Log, device: ScriptedDevice) -> str:
+        fetches = [entry for entry in log if isinstance(entry, Heard) and entry.name == name]
+        if fetches and not any(entry.get("first") for entry in fetches):
+            return "no gap asked for by its place"
+        return swept(log, device)
+
+    return judge
+
+
+def raw_too(judge: Judge) -> Judge:
+    """`judge`, for a host that asks for raw pairs. Raises Unseen for another."""
+
+    def judged(log: Log, device: ScriptedDevice) -> str:
+        asked = any(isinstance(entry, Heard) and entry.name == "fetch_raw" for entry in log)
+        armed = [entry for entry in log if isinstance(entry, Heard) and entry.name == "arm"]
+        if not asked and not any(entry.get("raw_pairs") for entry in armed):
+            raise Unseen("the host has asked for no raw pairs")
+        return judge(log, device)
+
+    return judged
 
 
 def not_fired_again(log: Log, device: ScriptedDevice) -> str:
@@ -296,14 +156,17 @@ def asked_in_vain(log: Log, device: ScriptedDevice) -> str:
 
 @dataclass(frozen=True, slots=True)
 class Script:
-    """`judge` says what is wrong, "" where nothing is; `seen` is for the person at the host."""
+    """`judge` says what is wrong, "" where nothing is; `seen` is for the person at the host.
+
+    Where the host does not do what the script is about, it raises Unseen.
+    """
 
     name: str
     clauses: tuple[str, ...]
     expected: str
     seen: str
     twist: Callable[[], Twist]
-    judge: Callable[[Log, ScriptedDevice], str]
+    judge: Judge
 
 
 SWEPT = "a sweep that the host acknowledges"
@@ -329,9 +192,34 @@ SCRIPTS: tuple[Script, ...] = (
         "gaps asked for by their place, and a whole sweep",
         CURVE,
         BlocksMissing,
-        swept_again_by_place,
+        gaps_asked_for("fetch"),
     ),
-    Script("wrong knots once", ("W12",), SWEPT, CURVE, KnotsWrongOnce, swept),
+    Script(
+        "wrong knots once",
+        ("W12",),
+        SWEPT,
+        CURVE,
+        lambda: WrongOnce("block", IN_A_KNOT),
+        swept,
+    ),
+    Script(
+        "missing blocks of raw pairs",
+        ("K7",),
+        "gaps asked for by their place, and a whole sweep",
+        CURVE,
+        RawBlocksMissing,
+        raw_too(gaps_asked_for("fetch_raw")),
+    ),
+    Script(
+        "wrong raw pairs once",
+        ("K8",),
+        SWEPT,
+        CURVE,
+        lambda: WrongOnce("raw_block", IN_A_RAW_PAIR),
+        raw_too(swept),
+    ),
+    Script("raw pairs beyond the count", ("K8",), SWEPT, CURVE, RawBeyondTheCount, raw_too(swept)),
+    Script("raw pairs of another fetch", ("B6",), SWEPT, CURVE, RawOfAnotherFetch, raw_too(swept)),
     Script("a notice of another sweep", ("W8",), SWEPT, CURVE, NoticeOfAnother, swept),
     Script(
         "fire refused",

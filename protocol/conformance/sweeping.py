@@ -9,7 +9,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 from conformance.bench import Bench, guarded
-from conformance.report import Broken, Verdict
+from conformance.report import Broken, Unseen, Verdict
 from conformance.wire import ANSWER_S, Frame
 from kneewire import catalogue, framing
 from kneewire.messages import Message, pack
@@ -18,6 +18,10 @@ BEAT_S = 0.4
 BLEED_S = 60.0
 STATUS_SEQUENCE = 0x57A70001
 BEAT_SEQUENCE = 0x57A70002
+# Of the short sweep. More pairs than one burst holds, and fewer than there are.
+SHORT_PAIRS = 2000
+RAW_FROM = 10
+RAW_PAIRS = 1500
 
 
 @dataclass(frozen=True, slots=True)
@@ -62,14 +66,21 @@ class Sweep:
         return float(self.manifest["opened_us"] - self.manifest["conducting_us"]) / 1e6
 
 
-def sweep(bench: Bench, behind: bytes = b"", *, beats: bool = True, repeat: bool = False) -> Sweep:
+def sweep(
+    bench: Bench,
+    behind: bytes = b"",
+    *,
+    beats: bool = True,
+    repeat: bool = False,
+    arming: dict[str, int] | None = None,
+) -> Sweep:
     """Arm, fire with `behind` in the same write, wait for the end of the bleed.
 
-    `repeat` sends the same fire once more when all is over. The device holds the sweep
-    afterwards. NotTried where it may not or does not arm.
+    `repeat` sends the same fire once more when all is over; `arming` holds other values for the
+    arm. The device holds the sweep afterwards. NotTried where it may not or does not arm.
     """
     before = bench.status()
-    armed = bench.arm()
+    armed = bench.arm(**(arming or {}))
     values = bench.fire_values(armed["token"])
     fire = bench.frame("fire", values)
     start, fired_s = len(bench.heard), bench.port.clock()
@@ -132,10 +143,31 @@ def aborted(bench: Bench) -> Sweep:
     return _once(bench, "aborted", bench.abort_frame())
 
 
-def _once(bench: Bench, name: str, behind: bytes, *, repeat: bool = False) -> Sweep:
+def short(bench: Bench) -> Sweep:
+    """A sweep that its time ends early, of which most pairs are raw ones as well."""
+    values = {"raw_from_us": RAW_FROM * pair_us(bench), "raw_pairs": RAW_PAIRS}
+    limit_ms = SHORT_PAIRS * pair_us(bench) // 1000
+    return _once(bench, "short", arming={"closed_limit_ms": limit_ms, **values})
+
+
+def pair_us(bench: Bench) -> int:
+    """From one pair to the next, as the profile says."""
+    if not bench.profile:
+        raise Unseen("the device holds no profile")
+    return int(bench.profile["pair_us"])
+
+
+def _once(
+    bench: Bench,
+    name: str,
+    behind: bytes = b"",
+    *,
+    repeat: bool = False,
+    arming: dict[str, int] | None = None,
+) -> Sweep:
     if name not in bench.made:
         try:
-            bench.made[name] = sweep(bench, behind, repeat=repeat)
+            bench.made[name] = sweep(bench, behind, repeat=repeat, arming=arming)
         except Verdict as why:
             bench.made[name] = why
     made = bench.made[name]

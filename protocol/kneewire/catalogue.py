@@ -13,6 +13,8 @@ except ImportError:  # MicroPython has no typing and does not evaluate annotatio
 
 # Limits of the frozen part: body and CRC together, before COBS.
 MAX_FRAME = 256
+# Pairs that a device keeps one by one in a sweep, at most.
+MAX_RAW_PAIRS = 2048
 
 REPLY = 0x80  # a reply's kind is its request's kind with this bit set
 
@@ -169,6 +171,8 @@ MESSAGES: "dict[int, tuple[str, int, bool, bool, tuple[tuple[str, str], ...]]]" 
             ("knots", "u16"),
             ("closed_limit_ms", "u32"),
             ("confirmed", "u8"),
+            ("raw_from_us", "u32"),
+            ("raw_pairs", "u16"),
         ),
     ),
     0xA0: (
@@ -233,6 +237,12 @@ MESSAGES: "dict[int, tuple[str, int, bool, bool, tuple[tuple[str, str], ...]]]" 
             ("residual_sum", "u32"),
             ("residual_conversions", "u16"),
             ("profile_crc", "u32"),
+            ("voltage_zero_sum", "u32"),
+            ("zero_conversions", "u16"),
+            ("bounces", "u16"),
+            ("raw_first", "u32"),
+            ("raw_pairs", "u16"),
+            ("raw_crc", "u32"),
         ),
     ),
     0x31: (
@@ -260,6 +270,32 @@ MESSAGES: "dict[int, tuple[str, int, bool, bool, tuple[tuple[str, str], ...]]]" 
         False,
         False,
         (("first", "u16"), ("data", "knots")),
+    ),
+    0x33: (
+        "fetch_raw",
+        TO_DEVICE,
+        False,
+        False,
+        (
+            ("sweep_id", "b16"),
+            ("first", "u16"),
+            ("count", "u16"),
+            ("a_block", "u8"),
+        ),
+    ),
+    0xB3: (
+        "fetch_raw_reply",
+        TO_HOST,
+        False,
+        False,
+        (("first", "u16"), ("count", "u16")),
+    ),
+    0xE3: (
+        "raw_block",
+        TO_HOST,
+        False,
+        False,
+        (("first", "u16"), ("data", "bytes")),
     ),
     0x32: ("acknowledge", TO_DEVICE, False, True, (("sweep_id", "b16"),)),
     0xB2: ("acknowledge_reply", TO_HOST, False, False, (("freed", "u8"),)),

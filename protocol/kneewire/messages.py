@@ -13,6 +13,8 @@ except ImportError:  # MicroPython has no typing and does not evaluate annotatio
 HEADER_BYTES = 9
 KNOT_BYTES = sum([fields.FIXED[row[1]][0] for row in catalogue.KNOT])
 KNOTS_A_BLOCK = (catalogue.MAX_FRAME - HEADER_BYTES - 3 - 4) // KNOT_BYTES
+RAW_BYTES = 4  # of a raw pair: the voltage's code and the current's, u16 each
+RAW_A_BLOCK = (catalogue.MAX_FRAME - HEADER_BYTES - 4 - 4) // RAW_BYTES
 
 NO_SESSION = 0xFFFFFFFF  # in a hello, and before there is a session
 

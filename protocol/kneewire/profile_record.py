@@ -12,10 +12,11 @@ try:
 except ImportError:  # MicroPython has no typing and does not evaluate annotations
     pass
 
-FORMAT = 1
+FORMAT = 2
 
 CLASSES = {1: "A", 2: "B"}
 CONTACTS = {1: "relay+switch", 2: "relay"}
+CONVERTERS = {1: "internal", 2: "spi16"}
 
 # (name, type); what each field means stands in meanings.py.
 PROFILE = (
@@ -24,6 +25,12 @@ PROFILE = (
     ("device_id", "b8"),
     ("hazard_class", "u8"),
     ("contact", "u8"),
+    ("converter", "u8"),
+    ("pair_us", "u8"),
+    ("spi_clock_khz", "u16"),
+    ("spi_convert_ns", "u16"),
+    ("wide_code_x16", "u16"),
+    ("zero_switch", "u8"),
     ("voltage_nv_per_code", "u32"),
     ("voltage_zero_x16", "u16"),
     ("current_na_per_code", "u32"),
@@ -43,6 +50,7 @@ PROFILE = (
     ("relay_release_ms", "u16"),
     ("bleed_operate_ms", "u16"),
     ("bleed_release_ms", "u16"),
+    ("bounce_ms", "u16"),
     ("dead_time_ms", "u16"),
     ("safe_mv", "u32"),
     ("start_permyriad", "u16"),

@@ -42,6 +42,7 @@ def tables() -> str:
         ("Units", catalogue.UNITS),
         ("Profile: hazard classes", profile_record.CLASSES),
         ("Profile: contacts", profile_record.CONTACTS),
+        ("Profile: converters", profile_record.CONVERTERS),
     ):
         lines = [f"| {code} | {codes[code] or 'none'} |" for code in sorted(codes)]
         parts.append(f"{title}\n\n| code | meaning |\n|---|---|\n" + "\n".join(lines))

@@ -9,7 +9,7 @@ import argparse
 import importlib
 import json
 
-NAMES = ("wire",)
+NAMES = ("wire", "knots")
 
 
 def main() -> int:

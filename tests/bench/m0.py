@@ -1,7 +1,7 @@
 """One native function of the firmware on a Cortex-M0+, with its cycles counted.
 
     core = Core("coder_thumb", "cobs_into")
-    ran = core.call(body, len(body), out)  # bytearrays are written back
+    ran = core.call(body, len(body), out)  # bytearrays and arrays are written back
     print(ran.result, ran.cycles)
 
 Comes in: a file of device/tracer and the name of an `asm_thumb` or `viper` function in it. Goes
@@ -11,16 +11,19 @@ taken out of the .mpy file, and unicorn runs it.
 Cycles are those of the Cortex-M0+ Technical Reference Manual (ARM DDI 0484C, table 3-1), with a
 multiplier of one cycle, as the RP2040 has. They hold where memory makes nobody wait: the code
 in RAM, and no DMA on the same bank. Not counted: the interpreter's call, and what it does for a
-viper function to turn objects into numbers and back.
+viper function to turn objects into numbers and back. A division, which a viper function leaves to
+the interpreter, counts as DIVISION_CYCLES.
 
 Layout of a .mpy file: MicroPython's documentation, "MicroPython .mpy files", and for the places
-of things in memory py/obj.h, py/bc.h and py/nativeglue.h of its version 1.29.
+of things in memory py/obj.h, py/bc.h and py/nativeglue.h of its version 1.29. The divider: RP2040
+datasheet, "SIO", registers DIV_UDIVIDEND to DIV_REMAINDER.
 """
 
 from __future__ import annotations
 
 import ast
 import struct
+from array import array
 from itertools import pairwise
 from typing import NamedTuple
 
@@ -44,12 +47,21 @@ REGION_BYTES = 0x1_0000
 STRIDE_BYTES = 0x2_0000
 END = RUNTIME + 0x200  # where the function returns to
 BX_LR = 0x4770
-MOST_INSTRUCTIONS = 1_000_000
+MOST_INSTRUCTIONS = 10_000_000
 
 # Entries of the interpreter's table that a viper function without objects calls.
 FROM_OBJECT = 3
 TO_OBJECT = 4
+FLOOR_DIVIDE = 46
+MODULO = 47
 ENTRIES = 50
+DIVISION_CYCLES = 60  # assumed: the divider's 8, the rest for signs and for calls
+
+SIO = 0xD000_0000
+SIO_BYTES = 0x1000
+UDIVIDEND, UDIVISOR, QUOTIENT, REMAINDER = 0x60, 0x64, 0x70, 0x74
+
+Buffer = bytearray | array
 
 
 class Code(NamedTuple):
@@ -180,21 +192,51 @@ def instruction_cycles(half: int, *, taken: bool) -> int:
     raise ValueError(f"no cycles known for 0x{half:04x}")
 
 
-class Core:
-    """A Cortex-M0+ that holds one function."""
+def signed(word: int) -> int:
+    return word - (1 << 32) if word >> 31 else word
 
-    def __init__(self, file: str, name: str) -> None:
+
+class Divider:
+    """The RP2040's divider, unsigned. Nothing here waits: `soonest` says whether a core may."""
+
+    def __init__(self, machine: unicorn.Uc) -> None:
+        self._operands = {UDIVIDEND: 0, UDIVISOR: 1}
+        self.divisions = 0
+        machine.mmio_map(SIO, SIO_BYTES, self._read, None, self._write, None)
+
+    def _write(self, machine: unicorn.Uc, place: int, size: int, value: int, data: object) -> None:
+        if place not in self._operands or size != 4:
+            raise ValueError(f"{size} bytes written to SIO 0x{place:x}")
+        self._operands[place] = value
+        self.divisions += place == UDIVISOR
+
+    def _read(self, machine: unicorn.Uc, place: int, size: int, data: object) -> int:
+        quotient, remainder = divmod(self._operands[UDIVIDEND], self._operands[UDIVISOR])
+        return {QUOTIENT: quotient, REMAINDER: remainder}[place]
+
+
+class Core:
+    """A Cortex-M0+ that holds one function.
+
+    `counted` False: quicker, and the cycles are 0.
+    """
+
+    def __init__(self, file: str, name: str, *, counted: bool = True) -> None:
         self._code, table_place = native_function(file, name)
         self._machine = unicorn.Uc(unicorn.UC_ARCH_ARM, unicorn.UC_MODE_THUMB)
         self._machine.ctl_set_cpu_model(arm.UC_CPU_ARM_CORTEX_M0)
         self._regions = 0
-        self._trace: list[int] = []
+        self._trace: list[tuple[int, int]] = []  # runs of instructions: address, bytes
+        self._costs: dict[tuple[int, int], tuple[int, int]] = {}
+        self._divisions = 0
         for start in (CODE, STACK, RUNTIME):
             self._machine.mem_map(start, REGION_BYTES)
         self._machine.mem_write(CODE, self._code.machine)
+        self.divider = Divider(self._machine)
         self._lay_runtime(table_place)
         first, last = CODE, CODE + len(self._code.machine) - 1
-        self._machine.hook_add(unicorn.UC_HOOK_CODE, self._executed, None, first, last)
+        if counted:
+            self._machine.hook_add(unicorn.UC_HOOK_BLOCK, self._executed, None, first, last)
 
     def _lay_runtime(self, table_place: int) -> None:
         """What a viper function finds by the function object it is given.
@@ -207,6 +249,11 @@ class Core:
         words = [0] * ENTRIES
         words[FROM_OBJECT] = words[TO_OBJECT] = same | 1
         self._write(same, BX_LR)
+        for entry in (FLOOR_DIVIDE, MODULO):
+            here = RUNTIME + 0x3000 + 16 * entry
+            words[entry] = here | 1
+            self._write(here, BX_LR)
+            self._machine.hook_add(unicorn.UC_HOOK_CODE, self._divided, entry, here, here + 1)
         self._write(table, *words)
         self._write(constants, *[0] * table_place, table)
         self._write(context, 0, 0, 0, constants)  # type, globals, names, constants
@@ -216,10 +263,19 @@ class Core:
         self._machine.mem_write(address, struct.pack(f"<{len(words)}I", *words))
 
     def _executed(self, machine: unicorn.Uc, address: int, size: int, data: object) -> None:
-        self._trace.append(address)
+        self._trace.append((address, size))
 
-    def call(self, *arguments: bytearray | int) -> Ran:
-        """Run it. A bytearray goes in as its address and is what the function left in it.
+    def _divided(self, machine: unicorn.Uc, address: int, size: int, entry: int) -> None:
+        left, right = (
+            signed(machine.reg_read(register))
+            for register in (arm.UC_ARM_REG_R0, arm.UC_ARM_REG_R1)
+        )
+        value = left // right if entry == FLOOR_DIVIDE else left % right
+        machine.reg_write(arm.UC_ARM_REG_R0, value & 0xFFFF_FFFF)
+        self._divisions += 1
+
+    def call(self, *arguments: Buffer | int) -> Ran:
+        """Run it. A buffer goes in as its address and is what the function left in it.
 
         It lies at the end of its region, so that an access behind it raises `unicorn.UcError`.
         """
@@ -233,30 +289,44 @@ class Core:
         self._machine.reg_write(arm.UC_ARM_REG_SP, STACK + REGION_BYTES)
         self._machine.reg_write(arm.UC_ARM_REG_LR, END | 1)
         self._trace.clear()
+        self._divisions = 0
         self._machine.emu_start(CODE | 1, END, count=MOST_INSTRUCTIONS)
         if self._machine.reg_read(arm.UC_ARM_REG_PC) != END:
             raise RuntimeError(f"no return within {MOST_INSTRUCTIONS} instructions")
         for value, what in zip(values, arguments, strict=True):
             if not isinstance(what, int):
-                what[:] = self._machine.mem_read(value, len(what))
-        return Ran(self._machine.reg_read(arm.UC_ARM_REG_R0), self._cycles())
+                memory = memoryview(what).cast("B")
+                memory[:] = self._machine.mem_read(value, len(memory))
+        return Ran(signed(self._machine.reg_read(arm.UC_ARM_REG_R0)), self._cycles())
 
-    def _placed(self, place: int, what: bytearray | int) -> int:
+    def _placed(self, place: int, what: Buffer | int) -> int:
         if isinstance(what, int):
             return what & 0xFFFF_FFFF
-        if len(what) > REGION_BYTES:
-            raise ValueError(f"a buffer of {len(what)} bytes, {REGION_BYTES} at most")
+        data = bytes(memoryview(what).cast("B"))
+        if len(data) > REGION_BYTES:
+            raise ValueError(f"a buffer of {len(data)} bytes, {REGION_BYTES} at most")
         start = ARGUMENTS + place * STRIDE_BYTES
         if not self._regions >> place & 1:
             self._machine.mem_map(start, REGION_BYTES)
             self._regions |= 1 << place
-        address = start + REGION_BYTES - len(what)
-        self._machine.mem_write(address, bytes(what))
+        address = start + REGION_BYTES - len(data)
+        self._machine.mem_write(address, data)
         return address
 
     def _cycles(self) -> int:
-        cycles = 0
-        for at, after in pairwise([*self._trace, END]):
-            (half,) = struct.unpack_from("<H", self._code.machine, at - CODE)
-            cycles += instruction_cycles(half, taken=after != at + 2)
+        cycles = DIVISION_CYCLES * self._divisions
+        for run, (after, _) in pairwise([*self._trace, (END, 0)]):
+            if run not in self._costs:
+                self._costs[run] = self._costs_of(*run)
+            cycles += self._costs[run][after != sum(run)]
         return cycles
+
+    def _costs_of(self, start: int, size: int) -> tuple[int, int]:
+        """Cycles of instructions that follow each other: on from there, and to elsewhere."""
+        halves = struct.unpack_from(f"<{size // 2}H", self._code.machine, start - CODE)
+        # The second half of a long instruction is part of its first.
+        long = [number + 1 for number, half in enumerate(halves) if 0xF000 <= half < 0xF800]
+        steps = [half for number, half in enumerate(halves) if number not in long]
+        before = sum(instruction_cycles(half, taken=False) for half in steps[:-1])
+        on, elsewhere = (instruction_cycles(steps[-1], taken=taken) for taken in (False, True))
+        return before + on, before + elsewhere

@@ -11,7 +11,7 @@ import micropython
 from machine import Pin
 from micropython import const
 
-from tracer import hal_rp2
+from tracer import hal_rp2, ring_rp2
 
 _PULSE = const(2)
 
@@ -30,7 +30,7 @@ def native_loop():
 
 @micropython.viper
 def break_supervision(timer):
-    ptr32(hal_rp2._words)[0] = int(timer.no_such_thing)
+    ptr32(ring_rp2.words)[0] = int(timer.no_such_thing)
 
 
 def loop():
@@ -61,12 +61,12 @@ def starve_watchdog():
 
 
 def stop_timer():
-    hal_rp2._timer.deinit()
+    ring_rp2.timer.deinit()
 
 
 def break_timer():
-    hal_rp2._timer.deinit()
-    hal_rp2._timer.init(
+    ring_rp2.timer.deinit()
+    ring_rp2.timer.init(
         period=1, mode=machine.Timer.PERIODIC, callback=break_supervision, hard=True
     )
 

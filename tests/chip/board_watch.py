@@ -23,11 +23,12 @@ W_SPAN = const(6)  # most pairs between the oldest unread and the newest when a 
 W_VISITS = const(7)
 W_STAMP = const(8)
 W_LOCKED = const(9)
-WORDS = const(10)
+W_STEP = const(10)
+W_PLACING = const(11)  # us spent in placing
+WORDS = const(12)
 
 words = array("i", bytes(4 * WORDS))
 heap = {}
-places = []
 
 
 @micropython.viper
@@ -43,7 +44,13 @@ def since(place):
 
 def free():
     gc.collect()
+    heap["used"] = max(heap.get("used", 0), gc.mem_alloc())
     return gc.mem_free()
+
+
+def used():
+    gc.collect()
+    return gc.mem_alloc()
 
 
 class Watched(hal_rp2.Hal):
@@ -98,10 +105,11 @@ class Watched(hal_rp2.Hal):
 
 def wrap(hal):
     """Only now, with the firmware loaded as it would be without us."""
-    from tracer import capture, knots
+    from tracer import capture, held, knots
 
     drain = capture.Capture.drain
-    place = knots.place
+    step = knots.Placer.step
+    keep = held.Held.keep
 
     def watched_drain(self, written):
         if not hal._counting:  # `finish` drains too, with the contact open
@@ -116,14 +124,20 @@ def wrap(hal):
         span = hal.capture_written() - read & 0x3FFFFFFF
         words[W_SPAN] = max(words[W_SPAN], span)
 
-    def timed_place(*arguments):
-        began = hal.now_us()
-        count = place(*arguments)
-        places.append((count, hal.now_us() - began))
-        return count
+    def timed_step(self):
+        stamp(words, W_STEP)
+        done = step(self)
+        words[W_PLACING] += since(W_STEP)
+        return done
+
+    def timed_keep(*arguments):
+        keep(*arguments)
+        heap["ready_us"] = since(W_STOPPED)
+        heap["used_held"] = used()
 
     capture.Capture.drain = watched_drain
-    knots.place = timed_place
+    knots.Placer.step = timed_step
+    held.Held.keep = timed_keep
 
 
 def board():
@@ -142,5 +156,7 @@ def report():
         "heap_locked": words[W_LOCKED] == 1,
         "free_after_start": heap["after_start"],
         "free_armed": heap["armed"],
-        "placed": places[-1],
+        "placed_us": words[W_PLACING],
+        "ready_us": heap["ready_us"],
+        "used": max(heap["used"], heap["used_held"]),
     }

@@ -8,6 +8,7 @@
 const ADC_CONVERSION_NS = 2000; // 96 cycles of 48 MHz
 const DREQ_ADC = 36;
 const PIO_AHEAD_NS = 500; // a state machine runs this far ahead of the processor
+const SYNC_CYCLES = 2; // of the system clock: the PIO's input synchroniser
 
 export function correct(mcu, world) {
   const api = {
@@ -22,7 +23,7 @@ export function correct(mcu, world) {
   correctAdc(mcu, api);
   correctDma(mcu);
   correctGpio(mcu, api);
-  for (const pio of mcu.pio) correctPio(mcu, pio);
+  for (const pio of mcu.pio) correctPio(mcu, pio, api);
   startTimerAt(mcu, world.uptimeUs);
   fillGaps(mcu);
   return api;
@@ -124,6 +125,7 @@ function correctGpio(mcu, api) {
   const outside = new Array(30).fill(null);
   const watchers = [];
   const settle = [];
+  api.lines = [];
   for (const gpio of mcu.gpio) {
     gpio.level = false;
     gpio.padValue = 0x56; // the chip's reset value: input on, pulled down
@@ -153,6 +155,7 @@ function correctGpio(mcu, api) {
     });
   }
   api.onPin = (pin, fn) => { watchers.push([pin, fn]); }; // fn(0, 1 or null = not driven, ns)
+  api.line = (pin, fn) => { api.lines[pin] = fn; }; // fn(ns) -> level, for a PIO to read
   api.pin = (pin) => (mcu.gpio[pin].value <= 1 ? mcu.gpio[pin].value : null);
   api.drive = (pin, level) => { // from outside: 0, 1, or null for an open wire
     outside[pin] = level;
@@ -161,8 +164,9 @@ function correctGpio(mcu, api) {
 }
 
 // State machines on the emulated clock, with dividers and delays; a change of FJOIN empties the
-// FIFOs.
-function correctPio(mcu, pio) {
+// FIFOs, and a receiving FIFO that is joined holds eight words. A pin whose level outside is a
+// function of time (`api.line`) is seen through the input synchroniser; all others at once.
+function correctPio(mcu, pio, api) {
   const { clock } = mcu;
   const stepNs = (machine) =>
     ((machine.clockDivInt || 65536) + machine.clockDivFrac / 256) * (1e9 / mcu.clkSys);
@@ -195,7 +199,20 @@ function correctPio(mcu, pio) {
     inBatch = false;
     arm();
   }
+  const seen = (pin) => {
+    const line = api.lines[pin];
+    if (line) return line(api.nanos() - SYNC_CYCLES * 1e9 / mcu.clkSys);
+    return mcu.gpio[pin].inputValue;
+  };
   for (const machine of pio.machines) {
+    const Fifo = machine.rxFIFO.constructor;
+    Object.defineProperty(machine, 'inPins', { get() {
+      let pins = 0;
+      for (let pin = 0; pin < 30; pin += 1) {
+        if (seen(pin)) pins |= 1 << ((pin - machine.inBase) & 31);
+      }
+      return pins;
+    } });
     machine.next = 0;
     const plainCheck = machine.checkWait.bind(machine);
     machine.checkWait = () => {
@@ -214,7 +231,9 @@ function correctPio(mcu, pio) {
       plainWrite(offset, value);
       if (machine.shiftCtrl >>> 30 !== joins) {
         machine.txFIFO.reset();
-        machine.rxFIFO.reset();
+        machine.rxFIFO = new Fifo(machine.shiftCtrl >>> 31 ? 8 : 4);
+        pio.rxStall &= ~(1 << machine.index);
+        machine.updateDMARx();
       }
       pio.checkChangedPins();
       if (machine.enabled && !inBatch) arm();

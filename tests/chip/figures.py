@@ -45,11 +45,13 @@ def main() -> None:
             f"at most {found['behind']} of 4096 pairs unread"
         )
     print(f"free heap after start {found['free_after_start']}, armed {found['free_armed']} bytes")
-    for knots in (96, 512):
-        if knots != 96:
-            _, found = watched(sweep_of(12), knots=knots)
-        count, us = found["placed"]
-        print(f"placing {count} knots: {us / 1000:.0f} ms")
+    for knots in (32, 64, 96, 512):
+        _, found = watched(sweep_of(12), knots=knots)
+        placed_ms, ready_ms = found["placed_us"] / 1000, found["ready_us"] / 1000
+        print(
+            f"placing {knots} knots: {placed_ms:.0f} ms, first block ready {ready_ms:.1f} ms after "
+            f"the end of capture, heap in use at most {found['used']} bytes"
+        )
 
 
 if __name__ == "__main__":

@@ -39,6 +39,7 @@ def tracer_on(made: ChipTracer) -> Tracer:
 
 
 def capacitor(farad: float, **more: Any) -> Scenario:
-    """Clear noon with another capacitor and without noise."""
+    """Clear noon with another capacitor, without noise and wide codes."""
     bank = {"capacitance_f": farad}
-    return Scenario.default().varied(load=bank, board={"adc_noise_codes": 0.0}, **more)
+    ideal = {"adc_noise_codes": 0.0, "wide_code_lsb": 1.0}
+    return Scenario.default().varied(load=bank, board=ideal, **more)

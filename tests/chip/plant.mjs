@@ -1,8 +1,9 @@
 // The analogue world beside the emulated chip: a source, its contacts, a capacitor, a bleed.
 //
-// Comes in: levels of GP2 (make and break), GP3 (relay coil), GP4 (bleed release coil) and a
-// description as JSON. Goes out: a code for each conversion, levels of GP5 (stop loop) and GP6
-// (leads reversed). It is advanced only when somebody looks, in steps of at most STEP_NS. Its
+// Comes in: levels of GP2 (make and break), GP3 (relay coil), GP4 (bleed release coil), GP7 (the
+// voltage channel's input at its zero) and a description as JSON. Goes out: a code for each
+// conversion, levels of GP5 (stop loop) and GP6 (leads reversed). It is advanced only when
+// somebody looks, in steps of at most STEP_NS. Its
 // circuit is that of host/kneewise/emulator/circuit.py, with the source as a table; test_plant.py
 // holds the two together, to one code.
 //
@@ -16,8 +17,11 @@
 //     "bleed_operate_us": 5000, "bleed_release_us": 5000,   operate = its contact opens
 //     "switch_open_us": 50,                 the AC-coupled driver conducts so long after an edge
 //     "volt_per_code": [v, c], "ampere_per_code": a, "zero_code": [v, i, c],
-//     "noise_code": 0, "seed": 1 }          standard deviation of a conversion
-//   and in both: "stop_loop": 1, "reversed": 0
+//     "noise_code": 0, "seed": 1,           standard deviation of a conversion
+//     "wide_code": 1 }                      width of the wide codes of the chip's converter, in LSB
+//   and in both: "stop_loop": 1, "reversed": 0, "spi": null or as in spi_pair.mjs
+
+import { SpiPair } from './spi_pair.mjs';
 
 const STEP_NS = 4000;
 const PULSE = 2;
@@ -25,12 +29,13 @@ const RELAY = 3;
 const RELEASE = 4;
 const STOP_LOOP = 5;
 const REVERSED = 6;
+const ZERO_INPUT = 7;
 
 const PLAIN = {
   codes: [0, 0, 0], stop_loop: 1, reversed: 0, zero_code: [0, 0, 0], noise_code: 0, seed: 1,
   v_start: 0, welded: 0, bleed_open: 0, esr_ohm: 0, line_ohm: 0, bleed_ohm: Infinity,
   leak_ohm: Infinity, relay_operate_us: 0, relay_release_us: 0, bleed_operate_us: 0,
-  bleed_release_us: 0, switch_open_us: 50,
+  bleed_release_us: 0, switch_open_us: 50, wide_code: 1, spi: null,
 };
 
 // A contact that follows its coil after a delay.
@@ -56,7 +61,8 @@ class Contact {
 export class Plant {
   constructor(description) {
     this.now = 0;
-    this.pins = { [PULSE]: null, [RELAY]: null, [RELEASE]: null };
+    this.spi = new SpiPair((ns) => [this.code(0, ns), this.code(1, ns)]);
+    this.pins = { [PULSE]: null, [RELAY]: null, [RELEASE]: null, [ZERO_INPUT]: null };
     this.describe(description ?? {});
   }
 
@@ -74,8 +80,14 @@ export class Plant {
       this.loads = [false, true].map((bled) => this.load(bled));
       this.follow(this.now);
     }
-    this.api?.drive(STOP_LOOP, this.d.stop_loop);
-    this.api?.drive(REVERSED, this.d.reversed);
+    this.spi.describe(this.d.spi);
+    if (this.api) this.drive();
+  }
+
+  // What the chip's inputs see, other than its converter's.
+  drive() {
+    this.api.drive(STOP_LOOP, this.d.stop_loop);
+    this.api.drive(REVERSED, this.d.reversed);
   }
 
   // What hangs on the source with the contact closed: for each place of its curve, the voltage
@@ -93,13 +105,13 @@ export class Plant {
   attach(api) {
     this.advance(api.nanos());
     this.api = api;
-    for (const pin of [PULSE, RELAY, RELEASE]) {
+    for (const pin of [PULSE, RELAY, RELEASE, ZERO_INPUT]) {
       this.set(pin, null, api.nanos());
       api.onPin(pin, (level, ns) => this.set(pin, level, ns));
     }
-    api.onAdc((channel, ns) => this.code(channel, ns));
-    api.drive(STOP_LOOP, this.d.stop_loop);
-    api.drive(REVERSED, this.d.reversed);
+    api.onAdc((channel, ns) => this.widened(this.code(channel, ns)));
+    this.spi.attach(api);
+    this.drive();
   }
 
   set(pin, level, ns) {
@@ -197,8 +209,22 @@ export class Plant {
     const { volt_per_code: volt, ampere_per_code: ampere, zero_code: zero } = this.d;
     const scale = [volt[0], ampere, volt[1]][channel];
     const sign = this.d.reversed ? -1 : 1;
-    const exact = sign * this.analogue()[channel] / scale + (zero[channel] ?? 0);
+    const atZero = channel === 0 && this.pins[ZERO_INPUT] === 1;
+    const exact = (atZero ? 0 : sign * this.analogue()[channel] / scale) + (zero[channel] ?? 0);
     return exact + this.d.noise_code * this.gauss();
+  }
+
+  // Erratum RP2040-E11: codes 511, 1535, 2559, 3583 are wide, all others equally narrower.
+  widened(code) {
+    const at = code + 0.5;
+    const wide = this.d.wide_code;
+    if (wide === 1 || !(at >= 0 && at < 4096)) return code;
+    const narrow = (1024 - wide) / 1023;
+    const part = at % 1024;
+    const first = at - part;
+    if (part < 511 * narrow) return first + Math.floor(part / narrow);
+    if (part < 511 * narrow + wide) return first + 511;
+    return first + Math.min(1023, 512 + Math.floor((part - 511 * narrow - wide) / narrow));
   }
 
   // Sum of twelve even numbers, less six: near enough to a normal one, and the same everywhere.
@@ -216,7 +242,7 @@ export class Plant {
     this.advance(ns);
     return {
       v_capacitor: this.v, closed: this.closed(), bled: this.bleed.closed,
-      closings: this.closings, overlap_ns: this.overlapNs,
+      closings: this.closings, overlap_ns: this.overlapNs, spi: this.spi.state(),
     };
   }
 }

@@ -31,11 +31,12 @@ def test_capture_keeps_up_and_allocates_nothing(ms: int) -> None:
     assert trace.integrity.ring_overruns == 0
     assert trace.sound, trace.checks  # FCS.OVER clear is one of the checks
     assert trace.integrity.pairs * 4 >= 1000 * ms
-    assert trace.integrity.pairs * 4 == pytest.approx(found["charge_us"], abs=2000)
+    assert trace.integrity.pairs * 4 == pytest.approx(found["charge_us"], abs=3000)
     assert found["heap_locked"], "an allocation would have passed unnoticed"
     assert found["behind"] <= RING_PAIRS - LAP_MARGIN
     assert found["gap_us"] < PULSE_US
-    assert found["free_armed"] > 32_768
+    assert found["free_armed"] > 65_536
+    assert found["ready_us"] <= 60_000, "time of the chip, not of this machine"
 
 
 def emulated_pairs(scenario: Scenario, count: int, phase_us: float) -> np.ndarray:

@@ -51,7 +51,13 @@ def struck(name: str, level: int) -> Iterator[ChipTracer]:
 def fire(tracer: Tracer) -> None:
     """As a sweep does, without waiting for what comes of it."""
     session = tracer._session
-    values = {"knots": 96, "closed_limit_ms": 10_000, "confirmed": 1}
+    values = {
+        "knots": 96,
+        "closed_limit_ms": 10_000,
+        "confirmed": 1,
+        "raw_from_us": 0,
+        "raw_pairs": 0,
+    }
     token = session.request("arm", values)["token"]
     session.request("fire", {"token": token, "sweep_id": bytes(range(16))})
 

@@ -61,8 +61,8 @@ def test_capture_starts_with_a_voltage_after_anything(chip: Chip) -> None:
 def test_lost_conversion_is_reported_once(chip: Chip) -> None:
     # DMA halted behind the driver's back for 40 us: the FIFO of four overflows.
     script = START + (
-        "from machine import mem32\nfrom tracer import hal_rp2\n"
-        "ctrl = hal_rp2._words[6] + 16\n"
+        "from machine import mem32\nfrom tracer import ring_rp2\n"
+        "ctrl = ring_rp2.words[6] + 16\n"
         "hal.capture_start()\nmem32[ctrl] &= ~1\nhal.wait_us(40)\nmem32[ctrl] |= 1\n"
         "print(hal.capture_stop())\nhal.capture_start()\nhal.wait_us(100)\n"
         "print(hal.capture_stop())\n"
@@ -139,8 +139,8 @@ def test_open_wires_read_as_faults(chip: Chip) -> None:
 
 def test_a_supervision_visit_is_short(chip: Chip) -> None:
     script = START + (
-        "from tracer import hal_rp2\nhal.capture_start()\nhal.wait_us(100)\n"
-        "visit = hal_rp2._supervise\nt = hal.now_us()\n"
+        "from tracer import ring_rp2\nhal.capture_start()\nhal.wait_us(100)\n"
+        "visit = ring_rp2.visit\nt = hal.now_us()\n"
         "for _ in range(1000): visit(None)\n"
         "print(hal.now_us() - t)\nhal.capture_stop()\n"
     )

@@ -41,3 +41,20 @@ def test_a_sweep_is_right_and_its_outputs_keep_their_order() -> None:
     assert engaged - relay_off >= DEAD_US
     assert plant["closings"] == 1, "the pulse ran out in mid-charge: the contact opened under load"
     assert plant["overlap_ns"] == 0
+
+
+def test_a_sweep_by_two_spi_converters_at_pin_level() -> None:
+    """From select and clock to the figures: some 8000 edges a millisecond, each at its own time."""
+    scenario = Scenario.default().varied(board={"converter": "spi16"})
+    with chip_for(scenario) as made:
+        with tracer_on(made) as tracer:
+            trace = tracer.sweep(knots=96)
+        converters = made.chip.order("plant")["spi"]
+    truth = scenario.build_source().truth()
+    figures = trace.figures()
+    assert figures.pmp.value == pytest.approx(truth["pmp"], rel=2e-4)
+    assert figures.voc.value == pytest.approx(truth["voc"], rel=2e-4)
+    assert figures.isc.value == pytest.approx(truth["isc"], rel=2e-4)
+    assert trace.sound, trace.checks
+    assert converters["early"] == 0
+    assert (trace.raw.voltage_sum / trace.raw.pairs).max() > 4095

@@ -13,7 +13,7 @@ import pytest
 from chip import HERE
 
 from kneewise.emulator.chip import plant_description
-from kneewise.emulator.converters import Scaling
+from kneewise.emulator.converters import Converters, Scaling
 from kneewise.emulator.plant import Plant
 from kneewise.emulator.scenario import Scenario
 
@@ -124,6 +124,22 @@ def test_both_plants_agree_to_one_code(varied: dict[str, Any]) -> None:
     beside, emulated = walk.codes()
     assert len(beside) > 6000
     assert np.abs(np.clip(beside, 0, 4095) - np.clip(emulated, 0, 4095)).max() <= 1
+
+
+def test_both_have_the_same_wide_codes() -> None:
+    scenario = Scenario.default().varied(board={"adc_noise_codes": 0.0, "wide_code_lsb": 9.0})
+    exact = np.arange(-1.0, 4097.0, 0.0625) + 0.01
+    order = {
+        "plant": plant_description(scenario, SCALING),
+        "steps": [("widened", code) for code in exact],
+    }
+    run = subprocess.run(
+        ["node", str(HERE / "plant_walk.mjs")],
+        input=json.dumps(order), capture_output=True, text=True, check=True,
+    )  # fmt: skip
+    beside = np.clip(np.round(json.loads(run.stdout)), 0, 4095)
+    volts = (exact - SCALING.voltage_zero_code) * SCALING.voltage_v_per_code
+    assert np.array_equal(beside, Converters(scenario, SCALING).codes(0, volts))
 
 
 def test_both_plants_lose_all_drive_with_the_stop_loop() -> None:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Any
 
-from fake_board import Buffers, Capture, FakeBoard, profile
+from fake_board import REFERENCE, Buffers, Capture, FakeBoard, hal, profile
 
 from kneewire import framing
 from kneewire.messages import pack
@@ -14,6 +14,16 @@ module = firmware_module("tracer.charge")
 Ear = firmware_module("tracer.ear").Ear
 ABORT = framing.encode(pack("abort", 7, 0), toward_device=True)
 BEAT = framing.encode(pack("heartbeat", 7, 9), toward_device=True)
+
+
+# The reference build with converters of 16 bits.
+FINE = {
+    "converter": hal.SPI16,
+    "spi_clock_khz": 20000,
+    "spi_convert_ns": 700,
+    **{name: REFERENCE[name] // 16 for name in ("voltage_nv_per_code", "current_na_per_code")},
+    **{name: REFERENCE[name] * 16 for name in ("voltage_zero_x16", "current_zero_x16")},
+}
 
 
 class Outputs:
@@ -28,23 +38,29 @@ class Outputs:
         self.board.safe()
         self.contact_closed = False
         self.bleed_engaged = True
+        self.board.zero_input(False)
 
 
 class Rig:
-    """A charge ready to run; `through` stands between the firmware and the board."""
+    """A charge ready to run; `through` stands between the firmware and the board.
+
+    `changes`: of the reference profile.
+    """
 
     def __init__(self, board: FakeBoard, *, through: Any = None, **changes: Any) -> None:
         hal = through or board
+        made = profile(**changes)
+        board.use_converters(made["converter"], made["pair_us"], 0, 0)
         self.board = board
         self.outputs = Outputs(hal)
         self.ear = Ear(hal)
         self.ear.expect(ABORT)
-        self.capture = Capture(board.ring, board.RING_PAIRS, Buffers())
+        self.capture = Capture(board.ring, board.RING_PAIRS, Buffers(), board.CODE_BITS)
         self.result: Any = None
-        self.charge = module.Charge(hal, profile(**changes), self.capture, self.ear)
+        self.charge = module.Charge(hal, made, self.capture, self.ear)
 
-    def run(self, closed_limit_ms: int = 120_000) -> Any:
-        return self.charge.run(closed_limit_ms, self.outputs)
+    def run(self, closed_limit_ms: int = 120_000, **more: Any) -> Any:
+        return self.charge.run(closed_limit_ms, self.outputs, **more)
 
     def pulses(self) -> list[int]:
         """When the wave was renewed, its first start included."""

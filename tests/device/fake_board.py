@@ -25,6 +25,7 @@ Capture = firmware_module("tracer.capture").Capture
 DEVICE_ID = b"test\x00\x00\x00\x01"
 V_PER_CODE, V_ZERO = 0.0165, 24
 A_PER_CODE, A_ZERO = 0.0052, 40
+SCALES = ((V_PER_CODE, V_ZERO), (A_PER_CODE, A_ZERO), (V_PER_CODE, V_ZERO))
 PAIR_US = 4
 
 REFERENCE = unpack_profile(
@@ -59,6 +60,8 @@ class FakeBoard(hal.Hal):
         self.current_offset_codes = 0
         self.loop_closed = True
         self.reversed = False
+        self.voltage_at_zero = False
+        self.converters: set[int] = {hal.INTERNAL, hal.SPI16}
         self.relay_closed = False
         self.bleed_engaged = True
         self.pulse_until_us = 0
@@ -139,21 +142,23 @@ class FakeBoard(hal.Hal):
 
     def _convert(self, us: int, start: float, toward: float, tau_us: float) -> None:
         assert self.pairs is not None
-        for k in range(us // PAIR_US):
+        for k in range(us // self.PAIR_US):
             if self.pairs_stop_at is not None and self.pairs >= self.pairs_stop_at:
                 return
             volt, ampere = self.source_v, 0.0
             if self.conducting:
-                volt = toward + (start - toward) * exp(-k * PAIR_US / tau_us)
+                volt = toward + (start - toward) * exp(-k * self.PAIR_US / tau_us)
                 ampere = self.source_a * (1.0 - volt / self.source_v)
-            low = self._code(volt, V_PER_CODE, V_ZERO)
-            high = self._code(ampere, A_PER_CODE, A_ZERO)
+            low = self._code(hal.VOLTAGE, 0.0 if self.voltage_at_zero else volt)
+            high = self._code(hal.CURRENT, ampere)
             self.ring[self.pairs % self.RING_PAIRS] = low | high << 16
             self.pairs += 1
 
-    def _code(self, value: float, per_code: float, zero: int) -> int:
-        offset = self.current_offset_codes if zero == A_ZERO else 0
-        return min(max(round(value / per_code) + zero + offset, 0), 4095)
+    def _code(self, channel: int, value: float) -> int:
+        per_code, zero = SCALES[channel]
+        fine = 16 if self.CODE_BITS == 16 and channel != hal.CAPACITOR else 1
+        offset = self.current_offset_codes if channel == hal.CURRENT else 0
+        return min(max(round(fine * value / per_code) + fine * zero + offset, 0), 4096 * fine - 1)
 
     def _note(self, name: str, *values: Any) -> None:
         self.calls.append((name, values, self.time_us))
@@ -178,6 +183,18 @@ class FakeBoard(hal.Hal):
     def random32(self) -> int:
         self._random = (self._random * 1103515245 + 12345) & 0xFFFFFFFF
         return self._random
+
+    def use_converters(self, kind: int, pair_us: int, clock_khz: int, convert_ns: int) -> None:
+        self._note("use_converters", kind, pair_us, clock_khz, convert_ns)
+        if kind not in self.converters:
+            raise ValueError("no such converters")
+        self.PAIR_US = pair_us
+        self.SKEW_NS = 0 if kind == hal.SPI16 else 2000
+        self.CODE_BITS = 16 if kind == hal.SPI16 else 12
+
+    def zero_input(self, on: bool) -> None:
+        self._note("zero_input", on)
+        self.voltage_at_zero = on
 
     def safe(self) -> None:
         self._note("safe")
@@ -212,9 +229,8 @@ class FakeBoard(hal.Hal):
     def read(self, channel: int, count: int) -> int:
         self._note("read", channel)
         assert self.pairs is None, "a channel was read during a capture"
-        volt = (self.source_v, 0.0, self.capacitor_v)[channel]
-        zero = (V_ZERO, A_ZERO, V_ZERO)[channel]
-        return count * self._code(volt, V_PER_CODE, zero)
+        at_source = 0.0 if self.voltage_at_zero else self.source_v
+        return count * self._code(channel, (at_source, 0.0, self.capacitor_v)[channel])
 
     def capture_start(self) -> None:
         self._note("capture_start")
@@ -269,6 +285,9 @@ class FakeBoard(hal.Hal):
         self._note("now_us")
         assert not self.quiet, "a time was taken, and so allocated, in the quiet"
         return self.time_us
+
+    def ticks_us(self) -> int:
+        return self.time_us & 0x3FFFFFFF
 
     def wait_us(self, us: int) -> None:
         self._note("wait", us)

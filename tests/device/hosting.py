@@ -86,7 +86,13 @@ class Device:
         return answer
 
     def arm(self, **changes: Any) -> Message:
-        values = {"knots": 32, "closed_limit_ms": 1000, "confirmed": 1}
+        values = {
+            "knots": 32,
+            "closed_limit_ms": 1000,
+            "confirmed": 1,
+            "raw_from_us": 0,
+            "raw_pairs": 0,
+        }
         header = {name: changes.pop(name) for name in ("sequence",) if name in changes}
         return self.ask("arm", {**values, **changes}, **header)
 

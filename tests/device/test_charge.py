@@ -226,9 +226,9 @@ def test_a_complete_charge_holds_its_whole_curve():
     assert board.capacitor_v > 0.997 * board.source_v
     closed_us = board.when("pulse 0")[0] - rig.pulses()[0]
     assert rig.capture.pairs() == pytest.approx(closed_us / PAIR_US, abs=2)
-    assert result.voltage_sum == 256 * (24 + round(40 / 0.0165))
-    assert result.current_sum == 256 * 40
-    assert result.conversions == 256
+    assert result.voltage_sum == 2048 * (24 + round(40 / 0.0165))
+    assert result.current_sum == 2048 * 40
+    assert result.conversions == 2048
     assert result.capture_us == board.when("capture_start")[0]
     assert not result.conversions_lost
 

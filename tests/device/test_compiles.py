@@ -17,8 +17,11 @@ FILES = [
 # Files that use the board's own modules, so that only the board's stubs can check them.
 BOARD_FILES = [
     "device/main.py",
+    "device/tracer/adc_rp2.py",
     "device/tracer/hal_rp2.py",
     "device/tracer/pulse_pio.py",
+    "device/tracer/ring_rp2.py",
+    "device/tracer/spi_pair.py",
     "device/tracer/usb_serial.py",
 ]
 

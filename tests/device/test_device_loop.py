@@ -90,7 +90,13 @@ def test_a_request_right_behind_the_fire_is_answered_after_the_charge(device, na
     token = device.arm()["token"]
     values = {
         "hello": {"major": 0, "minor": 1, "fingerprint": 5, "host_nonce": 99},
-        "arm": {"knots": 16, "closed_limit_ms": 1, "confirmed": 1},
+        "arm": {
+            "knots": 16,
+            "closed_limit_ms": 1,
+            "confirmed": 1,
+            "raw_from_us": 0,
+            "raw_pairs": 0,
+        },
     }.get(name)
     fire = device.frame("fire", {"token": token, "sweep_id": SWEEP_ID})
     device.board.incoming += fire + device.frame(name, values)
@@ -208,7 +214,13 @@ def test_a_request_that_ctrl_c_cut_short_may_be_sent_again(device):
         del device.board.read
         raise KeyboardInterrupt
 
-    values = {"knots": 32, "closed_limit_ms": 1000, "confirmed": 1}
+    values = {
+        "knots": 32,
+        "closed_limit_ms": 1000,
+        "confirmed": 1,
+        "raw_from_us": 0,
+        "raw_pairs": 0,
+    }
     frame = device.frame("arm", values)
     device.board.read = interrupt
     device.board.incoming += frame

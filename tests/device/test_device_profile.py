@@ -5,6 +5,7 @@ from __future__ import annotations
 from math import log
 
 import pytest
+from charging import FINE
 from fake_board import DEVICE_ID, REFERENCE, profile, record
 from hypothesis import assume, given, settings
 from hypothesis import strategies as st
@@ -58,6 +59,14 @@ def test_trip_codes_of_the_reference_are_those_of_its_ratings(reference):
     assert reference.trip_code("current", 20000) == 40 + 3846
     assert reference.trip_code("voltage", 67000) == 24 + 4060
     assert reference.trip_code("voltage", 70000) == 4095
+
+
+def test_trip_codes_of_sixteen_bits_are_as_fine_as_their_converters():
+    made = profile(**FINE)
+    assert made.finer == 16
+    assert made.trip_code("voltage", 60000) == 24 * 16 + 60000 * 10**6 // (16500000 // 16)
+    assert made.trip_code("current", 20000) == 40 * 16 + 20000 * 10**6 // (5200000 // 16)
+    assert made.trip_code("voltage", 70000) == 65535
 
 
 @settings(max_examples=500)
@@ -144,6 +153,7 @@ def test_no_profile_can_take_the_dead_time_away():
         "bleed_mohm",
         "pulse_us",
         "safe_mv",
+        "pair_us",
     ],
 )
 def test_a_zero_that_would_make_nonsense_is_refused(name):
@@ -203,9 +213,9 @@ def test_one_flipped_bit_anywhere_is_noticed(tmp_path_factory, data):
 
 def test_a_record_of_another_format_is_damaged(tmp_path):
     path = tmp_path / "profile.bin"
-    path.write_bytes(seal(record(format=2)))
+    path.write_bytes(seal(record(format=1)))
     wrong = module.load(str(path), DEVICE_ID)[1]
-    assert wrong == "the stored profile is damaged (format 2)"
+    assert wrong == "the stored profile is damaged (format 1)"
 
 
 def test_a_refused_profile_is_no_profile(tmp_path):

@@ -1,10 +1,11 @@
 """If these fail, sweeps end before their end, or crawl on until the time limit."""
 
 import pytest
-from charging import module
-from fake_board import hal
+from charging import FINE, module
+from fake_board import hal, profile
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from narrow import SmallWord
 
 ZERO = 40 * 16
 OPEN = 2400 * 16
@@ -88,6 +89,37 @@ def test_at_the_lowest_light_a_quarter_of_a_code_counts_as_gone():
     # The peak is 9 codes: a 500th of it would be a third of a sixteenth.
     assert ended_after([OPEN] * 9, [ZERO + 144] * 2 + [ZERO + 3] * 7) == 5
     assert ended_after([OPEN] * 9, [ZERO + 144] * 2 + [ZERO + 4] * 7) is None
+
+
+def test_what_the_permanent_bleeder_draws_at_low_light_is_no_current_of_the_source():
+    """1.8 mA into 22 kohm are a third of a code at full voltage, and more than gone."""
+    made = module.EndRule(*profile(permanent_bleeder_ohm=2200).leak())
+    plain = rule()
+    for each in (made, plain):
+        each.begin(ZERO, OPEN, VOLTAGE_ZERO)
+        assert not each.complete(OPEN // 2, ZERO + 144)
+    volts = (OPEN - VOLTAGE_ZERO) / 16 * 0.0165
+    leak_x16 = round(16 * volts / 2200 / 0.0052)
+    assert leak_x16 > 40
+    ended = [[each.complete(OPEN, ZERO + leak_x16) for _ in range(5)] for each in (made, plain)]
+    assert ended == [[False, False, True, True, True], [False] * 5]
+
+
+@pytest.mark.parametrize("fine", [False, True])
+@settings(max_examples=200)
+@given(st.data())
+def test_nothing_in_the_rule_needs_an_object(fine, data):
+    """It runs with the heap locked, where numbers end at 30 bits."""
+    finer = 16 if fine else 1
+    rail = 16 * (4096 * finer - 1)
+    code = st.integers(0, rail) | st.sampled_from([0, rail])
+    resistor = data.draw(st.sampled_from([0, 1, 2200, 22_000, 2**32 - 1]))
+    ratio, shift = profile(**(FINE if fine else {}), permanent_bleeder_ohm=resistor).leak()
+    made = module.EndRule(SmallWord(ratio), SmallWord(shift))
+    zero, open_x16, voltage_zero = (SmallWord(data.draw(code)) for _ in range(3))
+    made.begin(zero, open_x16, voltage_zero, finer)
+    for voltage, current in data.draw(st.lists(st.tuples(code, code), max_size=12)):
+        made.complete(SmallWord(voltage), SmallWord(current))
 
 
 REASONS = {

@@ -1,109 +1,163 @@
 """If these fail, knots count pairs twice, lose them, or tell the wrong time."""
 
-from itertools import pairwise
-from math import isqrt
-
+import charge_curves as curves
 import folding
 import numpy as np
+import pytest
 from fake_board import Buffers
-from folding import check_knots, place
+from folding import BIN_WORDS, Placed, check_knots
 from hypothesis import example, given, settings
 from hypothesis import strategies as st
 
-from kneewise.emulator.firmware import firmware_module
+from kneewire.messages import unpack_knots
 
-module = firmware_module("tracer.knots")
-MAX_STRETCHES = firmware_module("tracer.memory").MAX_STRETCHES
+CODE_BITS = st.sampled_from([12, 16])
+KINDS = st.sampled_from(["noise", "flat", "steps", "ramp", "late", "curve"])
+FINER = {12: 1, 16: 16}
 
 
-@settings(max_examples=120)
-@given(
-    st.integers(0, 2**32 - 1),
-    st.integers(1, 6000),
-    st.integers(16, 512),
-    st.sampled_from(["noise", "flat", "steps", "ramp"]),
-)
-@example(0, 1, 16, "noise")
-@example(0, 15, 16, "ramp")
-@example(0, 1024, 512, "noise")
-@example(0, 1023, 512, "noise")
-def test_every_pair_is_in_exactly_one_knot(seed, count, knots, kind):
+def codes(kind: str, count: int, seed: int, code_bits: int) -> np.ndarray:
+    """Pairs of codes of every kind there may be, real or not."""
     draw = np.random.default_rng(seed)
-    pairs = {
-        "noise": draw.integers(0, 4096, (count, 2)),
-        "flat": np.full((count, 2), draw.integers(0, 4096)),
-        "steps": np.repeat(draw.integers(0, 4096, (count // 7 + 1, 2)), 7, axis=0)[:count],
-        "ramp": np.stack([np.arange(count) * 4095 // count, 4095 - np.arange(count) % 50], axis=1),
-    }[kind]
-    check_knots(pairs, place(folding.filled(pairs), knots), knots)
+    most = (1 << code_bits) - 1
+    at = np.arange(count)
+    if kind == "noise":
+        return draw.integers(0, most + 1, (count, 2))
+    if kind == "flat":
+        return np.full((count, 2), draw.integers(0, most + 1))
+    if kind == "steps":
+        return np.repeat(draw.integers(0, most + 1, (count // 7 + 1, 2)), 7, axis=0)[:count]
+    if kind == "ramp":
+        return np.stack([at * most // count, most - at % 50], axis=1)
+    if kind == "late":  # all of the curve in its last hundredth
+        return np.stack([np.where(at > count - count // 99, most, 0), np.full(count, most)], axis=1)
+    share = at / count
+    v = most * share**0.7
+    i = most * (1 - share**9)
+    noise = draw.normal(0, FINER[code_bits], (count, 2))
+    return np.clip(np.rint(np.stack([v, i], axis=1) + noise), 0, most).astype(np.int64)
 
 
-def test_folded_and_placed_as_one_holds_as_well():
-    draw = np.random.default_rng(4)
-    pairs = draw.integers(60, 4096, (5000, 2))
-    filled = folding.capture()
-    folding.feed(filled, pairs, [125] * 50)
+@settings(max_examples=80)
+@given(st.integers(0, 2**32 - 1), st.integers(1, 9000), st.integers(16, 512), KINDS, CODE_BITS)
+@example(0, 1, 16, "noise", 12)
+@example(0, 15, 16, "ramp", 12)
+@example(0, 31, 16, "ramp", 16)
+@example(0, 32, 16, "ramp", 12)
+@example(0, BIN_WORDS, 512, "noise", 12)
+@example(0, BIN_WORDS + 1, 512, "noise", 16)
+@example(0, 512, 512, "curve", 12)
+@example(0, 513, 512, "curve", 12)
+@pytest.mark.clause("K1", "K2")
+def test_every_pair_is_in_exactly_one_knot(seed, count, knots, kind, code_bits):
+    pairs = codes(kind, count, seed, code_bits)
+    check_knots(pairs, Placed(folding.filled(pairs, code_bits), knots), knots, code_bits)
+
+
+@settings(max_examples=25)
+@given(st.integers(0, 2**32 - 1), st.integers(1, 200_000), st.integers(16, 512), KINDS, CODE_BITS)
+@example(1, 200_000, 96, "curve", 12)
+@example(1, 200_000, 96, "noise", 16)
+@example(1, 131_000, 512, "noise", 12)
+@pytest.mark.clause("K1", "K2")
+def test_folded_and_placed_as_one_holds_as_well(seed, count, knots, kind, code_bits):
+    """Several doublings and the change to two words between the converter and the record."""
+    pairs = codes(kind, count, seed, code_bits)
+    pairs[:, 1] = np.maximum(pairs[:, 1], folding.THRESHOLD + 1)
+    filled = folding.capture(2048, code_bits=code_bits)
+    draw = np.random.default_rng(seed)
+    folding.feed(filled, pairs, iter(lambda: int(draw.integers(0, 1900)), None))
     folding.finished(filled, pairs)
-    check_knots(pairs[1:], place(filled, 96), 96)
+    if count == 1:
+        assert Placed(filled, knots).count == 0
+    else:
+        check_knots(pairs[1:], Placed(filled, knots), knots, code_bits)
 
 
 def test_an_empty_capture_has_no_knots():
-    assert place(folding.capture(), 96) == []
+    assert Placed(folding.capture(), 96).count == 0
+
+
+def test_less_than_a_bin_is_one_knot():
+    """A capture that a bounce began anew has bins of one pair; only a full bin is ever whole."""
+    filled = folding.holding(np.array([[7, 9]]), 64, 3)
+    (knot,) = Placed(filled, 96).knots
+    assert (knot["pairs"], knot["voltage_sum"], knot["current_sum"]) == (3, 7, 9)
 
 
 def test_the_same_capture_gives_the_same_knots_whatever_was_placed_before():
-    draw = np.random.default_rng(5)
-    one, other = (folding.filled(draw.integers(0, 4096, (n, 2))) for n in (900, 5000))
-    fresh = place(one, 64)
+    curve = curves.module_curve()
+    one = folding.filled(curves.charge(curve, until=0.4))
+    other = folding.filled(codes("noise", 70_000, 3, 12))
+    fresh = Placed(one, 64).records
     buffers = Buffers()
-    place(other, 512, buffers=buffers)
-    assert place(one, 64, buffers=buffers) == fresh
-    assert place(one, 64, buffers=buffers) == fresh
+    work = folding.capture(8192).ring
+    Placed(other, 512, buffers=buffers, work=work)
+    assert Placed(one, 64, buffers=buffers, work=work).records == fresh
+    assert Placed(one, 64, buffers=buffers, work=work).records == fresh
 
 
-def test_zeros_above_every_code_do_no_harm():
-    pairs = np.random.default_rng(6).integers(0, 200, (3000, 2))
-    check_knots(pairs, place(folding.filled(pairs), 96, zeros=(65535, 65535)), 96)
+@pytest.mark.parametrize("code_bits", [12, 16])
+def test_zeros_above_every_code_do_no_harm(code_bits):
+    pairs = codes("noise", 5000, 6, code_bits) // 20
+    placed = Placed(folding.filled(pairs, code_bits), 96, zeros=(65535, 65535))
+    check_knots(pairs, placed, 96, code_bits)
 
 
-@settings(max_examples=300)
-@given(st.data())
-def test_cuts_rise_and_leave_every_knot_a_bin(data):
-    sizes = data.draw(st.lists(st.integers(1, 40), min_size=1, max_size=60))
-    shares = data.draw(st.lists(st.integers(1, 10**5), min_size=len(sizes), max_size=len(sizes)))
-    knots = data.draw(st.integers(16, 512))
-    starts = [0]
-    for size in sizes:
-        starts.append(starts[-1] + size)
-    firsts = [0] * 513
-    count = module.cuts(starts, shares, len(sizes), knots, firsts)
-    assert count == min(knots, sum(sizes))
-    assert firsts[0] == 0
-    assert firsts[count] == sum(sizes)
-    assert all(b > a for a, b in pairwise(firsts[: count + 1]))
+def test_a_record_in_any_block_is_the_same():
+    """The host fetches gaps by any first knot and any count."""
+    pairs = codes("curve", 70_001, 5, 12)
+    filled = folding.filled(pairs)
+    buffers = Buffers()
+    placed = Placed(filled, 96, buffers=buffers)
+    records = folding.records
+    told = buffers.placing
+    records.describe(told, filled, 96, folding.CONDUCTING_US, 4)
+    for first, count, place in [(0, 1, 0), (5, 6, 13), (95, 1, 9), (90, 6, 1), (47, 3, 255 - 120)]:
+        told[records.R_FIRST], told[records.R_COUNT], told[records.R_OUT] = first, count, place
+        records.write(filled.bins, buffers.cuts, buffers.body, told)
+        found = unpack_knots(bytes(buffers.body[place : place + 40 * count]))
+        assert found == placed.knots[first : first + count]
 
 
-@settings(max_examples=200)
-@given(st.integers(1, 1024), st.integers(0, 2**32 - 1), st.sampled_from([0, 40, 4096]))
-def test_stretches_cover_all_bins_in_the_room_there_is(used, seed, wild):
-    draw = np.random.default_rng(seed)
-    xs = np.arange(used) * 4096 // used + draw.integers(-wild, wild + 1, used)
-    starts = [0] * (MAX_STRETCHES + 1)
-    count = module.stretches(xs.tolist(), [0] * used, used, starts)
-    assert 1 <= count <= MAX_STRETCHES
-    assert starts[0] == 0
-    assert starts[count] == used
-    assert all(b > a for a, b in pairwise(starts[: count + 1]))
+@pytest.mark.parametrize(("began_us", "pair_us"), [(0, 4), (2**32 - 7, 2), (2**63, 10), (5, 255)])
+@pytest.mark.clause("K1")
+def test_a_knots_time_is_that_of_the_middle_of_its_pairs(began_us, pair_us):
+    pairs = codes("flat", 20_001, 5, 12)
+    filled = folding.filled(pairs)
+    buffers = Buffers()
+    placed = Placed(filled, 16, buffers=buffers)
+    folding.records.describe(buffers.placing, filled, 16, began_us, pair_us)
+    told, records = buffers.placing, folding.records
+    start = 0
+    for number in range(16):
+        told[records.R_FIRST], told[records.R_COUNT], told[records.R_OUT] = number, 1, 0
+        records.write(filled.bins, buffers.cuts, buffers.body, told)
+        (knot,) = unpack_knots(bytes(buffers.body[:40]))
+        middle = pair_us * (2 * start + knot["pairs"] - 1) // 2
+        assert knot["time_us"] == began_us + middle
+        start += placed.knots[number]["pairs"]
 
 
-@settings(max_examples=500)
-@given(st.integers(0, 2**70) | st.integers(0, 2**35).map(lambda r: max(r * r - 1, 0)))
-@example(0)
-@example(1)
-@example(2)
-@example(3)
-@example(2**64)
-@example(2**64 - 1)
-def test_root_is_the_integer_root(number):
-    assert module.root(number) == isqrt(number)
-    assert module.bit_length(number) == number.bit_length()
+@pytest.mark.clause("K2")
+def test_a_ramp_has_no_scatter_and_noise_has_what_its_deviation_says():
+    """The variance of a second difference of independent bins is six times a bin's."""
+    at = np.arange(BIN_WORDS)
+    ramp = np.stack([at % 4096, 4095 - at // 2], axis=1)
+    for knot in Placed(folding.filled(ramp), 32).knots:
+        assert knot["voltage_scatter"] == 0
+        assert knot["current_scatter"] <= knot["pairs"]
+    deviation = 11.0
+    noise = np.random.default_rng(1).normal(0, deviation, (BIN_WORDS, 2))
+    found = Placed(folding.filled(np.rint(2000 + noise).astype(int)), 32).knots
+    total = sum(knot["voltage_scatter"] for knot in found)
+    assert total / 6 / (BIN_WORDS - 2) == pytest.approx(deviation**2, rel=0.1)
+
+
+@pytest.mark.clause("K2")
+def test_a_jump_adds_no_more_than_its_bound():
+    pairs = np.zeros((20_000, 2), int)
+    pairs[9_000:] = 4095
+    filled = folding.filled(np.repeat(pairs, 4, axis=0))
+    total = sum(knot["voltage_scatter"] for knot in Placed(filled, 32).knots)
+    assert total == 2 * folding.LARGEST_BEND**2

@@ -16,9 +16,10 @@ UNKNOWN_KIND, MALFORMED, UNKNOWN_SESSION, STALE, WRONG_STATE = 1, 2, 3, 4, 5
 BAD_TOKEN, INTERLOCK, NO_SWEEP, HELD, OUT_OF_RANGE = 7, 8, 9, 10, 11
 
 VALUES = {
-    "arm": {"knots": 32, "closed_limit_ms": 1000, "confirmed": 1},
+    "arm": {"knots": 32, "closed_limit_ms": 1000, "confirmed": 1, "raw_from_us": 0, "raw_pairs": 0},
     "fire": {"token": 1, "sweep_id": SWEEP_ID},
     "fetch": {"sweep_id": SWEEP_ID, "first": 0, "count": 1, "a_block": 0},
+    "fetch_raw": {"sweep_id": SWEEP_ID, "first": 0, "count": 1, "a_block": 0},
     "acknowledge": {"sweep_id": SWEEP_ID},
     "hello": {"major": 0, "minor": 1, "fingerprint": 5, "host_nonce": 0x1234},
 }

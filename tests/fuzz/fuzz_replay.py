@@ -27,7 +27,10 @@ NONCE = 0x41424344
 SWEEP_ID = bytes(range(16))
 ASKED = (
     ("status", {}),
-    ("arm", {"knots": 16, "closed_limit_ms": 100, "confirmed": 1}),
+    (
+        "arm",
+        {"knots": 16, "closed_limit_ms": 100, "confirmed": 1, "raw_from_us": 0, "raw_pairs": 0},
+    ),
     ("fire", {"token": 1, "sweep_id": SWEEP_ID}),
     ("read_manifest", {}),
     ("acknowledge", {"sweep_id": SWEEP_ID}),
@@ -74,7 +77,10 @@ def conversed(session: Session) -> None:
         with suppress(KneewiseError):
             session.request(name, values, deadline_s=1.0)
     session.wait_quiet(1.0)
-    session.burst({"sweep_id": SWEEP_ID, "first": 0, "count": 16, "a_block": 0}, lambda block: None)
+    wanted = {"sweep_id": SWEEP_ID, "first": 0, "count": 16, "a_block": 0}
+    for name in ("fetch", "fetch_raw"):
+        with suppress(KneewiseError):
+            session.burst(name, wanted, lambda block: None)
 
 
 if __name__ == "__main__":

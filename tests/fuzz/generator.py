@@ -25,7 +25,9 @@ WEIGHTS = {"fire": 10, "arm": 8, "abort": 3, "prompt": 1}  # 4 for the others
 LIMITS: dict[str, tuple[int, ...]] = {
     "knots": (15, 16, 512, 513),
     "closed_limit_ms": (0, 1, 120_000, 120_001),
-    "a_block": (6, 7),
+    "raw_pairs": (0, 1, 2048, 2049),
+    "raw_from_us": (0, 120_000_000, 120_000_001),
+    "a_block": (6, 7, 59, 60),
 }
 
 
@@ -112,10 +114,15 @@ class Generator:
             return rng.choice((16, 17, 32, 96) if rng.random() < 0.95 else (511, 512))
         if field == "closed_limit_ms":
             return rng.choice((1, 4, 50, 1000, 120_000))
+        if field == "raw_pairs":
+            return rng.choice((0, 0, 1, 60, 700, 2048))
+        if field == "raw_from_us":
+            return rng.choice((0, 0, 3, 400, 5000))
+        there = self.held.raw_count if name == "fetch_raw" else self.held.count
         if field == "first":
-            return rng.randrange(max(self.held.count, 1))
+            return rng.randrange(max(there, 1))
         if field == "count":
-            return rng.choice((1, 7, max(self.held.count, 1)))
+            return rng.choice((1, 7, max(there, 1)))
         if field == "host_nonce":
             return self.nonce
         if field == "fingerprint":

@@ -28,7 +28,10 @@ CHANGES = {kind for kind, row in catalogue.MESSAGES.items() if row[3]}
 FROZEN = {kind for kind, row in catalogue.MESSAGES.items() if row[2]}
 ABORT, FIRE = KINDS["abort"], KINDS["fire"]
 ARM_REPLY, FIRE_REPLY, HELLO_REPLY = KINDS["arm_reply"], KINDS["fire_reply"], KINDS["hello_reply"]
-BLOCK, REFUSAL = KINDS["block"], KINDS["refusal"]
+REFUSAL = KINDS["refusal"]
+# What comes before the answer to a fetch, and bytes of a record in it; and where its data begin.
+BLOCKS = {KINDS["fetch"]: (KINDS["block"], 40, 12), KINDS["fetch_raw"]: (KINDS["raw_block"], 4, 13)}
+BLOCK_KINDS = {kind for kind, _, _ in BLOCKS.values()}
 UNKNOWN_KIND, MALFORMED, UNKNOWN_SESSION = 1, 2, 3
 
 
@@ -139,7 +142,8 @@ class Oracle:
             assert not data, "an answer to bytes that are no request"
             assert not self.carried, "a handler was called for bytes that are no request"
             return
-        answers = [answer for answer in self._frames(data) if answer[0] != BLOCK]
+        frames = self._frames(data)
+        answers = [frame for frame in frames if frame[0] not in BLOCK_KINDS]
         if not self.reads_all:
             self._said_in_part(body, answers)
             return
@@ -169,6 +173,7 @@ class Oracle:
         else:
             assert kind == asked | 0x80, "the answer is of another kind"
             self._answered(kind, session, answer)
+        _check_blocks(body, frames[: frames.index(answer)], answer)
         if code:
             self.permit = False
 
@@ -231,6 +236,26 @@ class Oracle:
         if self._body is not None and len(self._body) >= HEADER.size:
             self.highest = self._highest_before
             self._unsure.add(HEADER.unpack_from(self._body)[2])
+
+
+def _check_blocks(body: bytes, blocks: list[bytes], answer: bytes) -> None:
+    """Blocks belong to the fetch before them, follow each other and hold what its reply says."""
+    asked = body[0]
+    if asked not in BLOCKS or answer[0] == REFUSAL:
+        assert not blocks, "blocks that nobody asked for"
+        return
+    kind, size, head = BLOCKS[asked]
+    place, count = struct.unpack_from("<HH", answer, HEADER.size)
+    end = place + count
+    for block in blocks:
+        assert block[0] == kind, "blocks of another kind"
+        assert block[1 : HEADER.size] == body[1 : HEADER.size], "a block of another fetch"
+        assert struct.unpack_from("<H", block, HEADER.size)[0] == place, "a block out of place"
+        many, rest = divmod(len(block) - head, size)
+        assert not rest, "a block of no whole records"
+        assert many > 0, "a block of nothing"
+        place += many
+    assert place == end, "other blocks than the reply says"
 
 
 def _offset(kind: int, field: str) -> int:

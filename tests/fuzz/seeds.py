@@ -26,7 +26,11 @@ TRACEBACK = (
     b"\r\nTraceback (most recent call last):\r\n"
     b'  File "main.py", line 1, in <module>\r\nKeyboardInterrupt: \r\nMicroPython v1.2\r\n>>> '
 )
-SWEEP = ("hello", "arm", "fire", b"t\x09", "read_manifest", "fetch", "acknowledge", "status")
+RAW_BLOCK = EXAMPLES["raw_block"] | {"first": 0}
+SWEEP = (
+    *("hello", "arm", "fire", b"t\x09", "read_manifest", "fetch", "fetch_raw"),
+    *("acknowledge", "status"),
+)
 SCRIPTS: dict[str, tuple[Any, ...]] = {
     "sweep": SWEEP,
     "abort": ("hello", "arm", "abort", "fire", "hello"),
@@ -45,10 +49,10 @@ SCRIPTS: dict[str, tuple[Any, ...]] = {
 
 
 def body(name: str, session: int = SESSION, sequence: int = NEXT) -> bytes:
-    values = BLOCK if name == "block" else EXAMPLES[name]
+    values = {"block": BLOCK, "raw_block": RAW_BLOCK}.get(name, EXAMPLES[name])
     if name in {"hello", "hello_reply"}:
         session, sequence = NO_SESSION if name == "hello" else session, HELLO_SEQUENCE
-    if name == "fetch":
+    if name in {"fetch", "fetch_raw"}:
         values = {**values, "first": 0, "count": 16}
     return pack(name, session, sequence, values)
 
@@ -92,6 +96,8 @@ def replay_seeds() -> dict[str, bytes]:
         note("device", framing.GUARD + framing.encode(asked, True))
         if name == "fetch":
             note("host", framing.encode(pack("block", SESSION, number, BLOCK), False))
+        if name == "fetch_raw":
+            note("host", framing.encode(pack("raw_block", SESSION, number, RAW_BLOCK), False))
         said = pack(answer, SESSION, request.sequence, EXAMPLES[answer])
         note("host", framing.encode(said, False))
         if name == "fire":

@@ -13,7 +13,7 @@ from kneewise.emulator.converters import CAPACITOR, CURRENT, VOLTAGE, Scaling
 from kneewise.emulator.scenario import Scenario
 
 NOON = Scenario.default()
-NOISELESS = NOON.varied(board={"adc_noise_codes": 0.0})
+NOISELESS = NOON.varied(board={"adc_noise_codes": 0.0, "wide_code_lsb": 1.0})
 
 
 class Clock:
@@ -75,6 +75,7 @@ def test_codes_are_the_curve_to_half_a_code() -> None:
 
 def test_noise_gain_and_offset_are_as_the_scenario_says() -> None:
     off = {"voltage_gain_error": 0.01, "voltage_offset_codes": 5.0, "current_offset_codes": -3.0}
+    off["wide_code_lsb"] = 1.0
     open_code = 24.0 + 39.7537 / 0.0165
     codes = [Board(NOON.varied(board=off), clock=Clock()).read(VOLTAGE, 4096) / 4096]
     assert codes[0] == pytest.approx(24.0 + 5.0 + 1.01 * (open_code - 24.0), abs=0.1)
@@ -375,6 +376,7 @@ def test_request_numbers_stay_as_they_are() -> None:
     """The other side may be older: numbers are appended, never moved."""
     assert list(OPS)[:6] == ["now_us", "wait", "tick_wall", "quiet", "relay", "bleed_release"]
     assert OPS["supervise_end"] == 18
+    assert (OPS["use_converters"], OPS["zero_input"]) == (19, 20)
 
 
 def test_a_sweep_costs_little_processor_time() -> None:

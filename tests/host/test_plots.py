@@ -17,7 +17,9 @@ from matplotlib.text import Annotation, Text
 from PIL import Image
 from traces import Source, make_trace
 
-from kneewise.instrument.trace import Check, Trace
+from kneewise.instrument.full_rate import FullRatePairs
+from kneewise.instrument.profile import Scales
+from kneewise.instrument.trace import Check, RawPairs, Trace
 from kneewise.report import plots
 from kneewise.report.plots import curve_picture, describe
 
@@ -119,6 +121,38 @@ def test_emulated_stands_large_on_the_face_and_a_real_trace_does_not_carry_it(
     # Dark ink behind the word: the band is there in the pixels, not only in the objects.
     pixels = matplotlib.image.imread(tmp_path / "curve.png")[..., :3].mean(axis=2)
     assert (pixels < 0.25).mean(axis=1).max() > 0.6
+
+
+def test_pairs_kept_one_by_one_are_faint_dots_under_the_curve(
+    tmp_path: Path, drawn: list[Figure]
+) -> None:
+    trace = make_trace()
+    codes = (np.linspace(*ends, 400).astype(np.uint16) for ends in ((2000, 2400), (1700, 1500)))
+    kept = FullRatePairs(
+        raw=RawPairs(1625, *codes),
+        asked=400,
+        pair_ns=4000,
+        skew_ns=2000,
+        scales=Scales(0.0165, 24, 0.0052, 40, 1, 1, 0.0, 0.0, 1e6, 0.0, 1, 12.0, 4095, 1.0),
+    )
+    pictured = replace(trace, full_rate=kept)
+    curve_picture(pictured, tmp_path / "pairs.svg", dpi=60)
+    axes = drawn[0].axes[0]
+    dots, curve = axes.lines[0], axes.lines[1]
+    assert dots.get_xdata().tolist() == kept.voltage.tolist()
+    assert dots.get_ydata().tolist() == kept.current.tolist()
+    assert dots.get_zorder() < curve.get_zorder()
+    assert luminance(str(dots.get_color())) > 3.0 * luminance(str(curve.get_color()))
+    said = "400 pairs one by one, 6.50 to 8.10 ms"
+    assert f"; faint dots: {said}" in "\n".join(texts(drawn[0]))
+    assert f"Faint dots: {said}." in describe(pictured)
+    for words in drawn[0].texts:
+        assert words.get_window_extent().x1 < drawn[0].bbox.x1, words.get_text()
+    # As pixels: two thousand dots as shapes make a file that no browser likes.
+    assert (tmp_path / "pairs.svg").stat().st_size < 200_000
+    none = replace(trace, full_rate=replace(kept, raw=RawPairs(0, *[np.zeros(0, np.uint16)] * 2)))
+    curve_picture(none, tmp_path / "none.png", dpi=60)
+    assert "one by one" not in describe(none)
 
 
 def test_failed_checks_stand_on_the_face(tmp_path: Path, drawn: list[Figure]) -> None:

@@ -15,14 +15,21 @@ import pytest
 from hypothesis import HealthCheck, example, given, settings
 from hypothesis import strategies as st
 
-from kneewise import KneewiseError, Trace, Tracer
+from kneewise import FullRate, KneewiseError, Trace, Tracer
 from kneewise.errors import UsageError
 from kneewise.link.frames import TO_DEVICE, TO_HOST
-from kneewise.link.recording import OPENED, Chunk, Recording, frames_of, read_recording
+from kneewise.link.recording import (
+    OPENED,
+    Chunk,
+    Recording,
+    frames_of,
+    protocol,
+    read_recording,
+)
 
 HEADER = {
     "kneewise_recording": 1,
-    "protocol": "0.1",
+    "protocol": protocol(),
     "target": "COM5",
     "begun_utc": "2031-05-06T10:20:30+00:00",
 }
@@ -36,7 +43,7 @@ def good() -> bytes:
         path = Path(folder) / "good.jsonl"
         with Tracer.open("emulator:in-process", record=path) as tracer:
             tracer.sweep(knots=16)
-            tracer.sweep(knots=24)
+            tracer.sweep(knots=24, full_rate=FullRate(start_s=0.001, duration_s=0.0008))
             tracer.rest()
         return path.read_bytes()
 

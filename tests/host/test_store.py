@@ -26,7 +26,9 @@ from traces import make_trace
 from kneewise.archive import store
 from kneewise.archive.store import load, save
 from kneewise.errors import ArchiveError
-from kneewise.instrument.trace import Check, Integrity, RawKnots, Reading, Trace
+from kneewise.instrument.full_rate import FullRatePairs
+from kneewise.instrument.profile import Scales
+from kneewise.instrument.trace import Check, Integrity, RawKnots, RawPairs, Reading, Trace
 
 
 def same(a: Any, b: Any) -> bool:
@@ -59,15 +61,31 @@ trees = st.dictionaries(
 )
 
 
+def any_pairs() -> st.SearchStrategy[FullRatePairs]:
+    codes = st.integers(0, 40).flatmap(
+        lambda count: st.tuples(*[hnp.arrays(np.uint16, count, elements=st.integers(0, 65535))] * 2)
+    )
+    return st.builds(
+        FullRatePairs,
+        raw=st.builds(lambda first, both: RawPairs(first, *both), st.integers(0, 2**32 - 1), codes),
+        asked=st.none() | st.integers(0, 2048),
+        pair_ns=st.integers(),
+        skew_ns=st.integers(),
+        scales=st.builds(Scales, *[numbers] * 12, st.integers(), numbers),
+    )
+
+
 @st.composite
-def any_trace(draw: st.DrawFn) -> Trace:
+def any_trace(draw: st.DrawFn, scouted: bool = True) -> Trace:
     """Traces with any numbers and words at all, sensible or not."""
     count = draw(st.integers(0, 30))
 
     def column(kind: type[np.generic], values: st.SearchStrategy[Any]) -> Any:
         return draw(hnp.arrays(kind, count, elements=values))
 
-    any_float = st.floats(allow_subnormal=True)
+    # A scout's go as text, which has one nan only.
+    any_float = st.floats(allow_subnormal=True, allow_nan=scouted)
+    reading = st.builds(Reading, st.integers(), st.integers())
     return Trace(
         trace_id=draw(st.text(min_size=1, max_size=40)),
         rung=draw(words),
@@ -86,13 +104,16 @@ def any_trace(draw: st.DrawFn) -> Trace:
         },
         voc_static=draw(numbers),
         residual_capacitor_v=draw(numbers),
-        integrity=draw(st.builds(Integrity, *[whole] * 5, st.booleans())),
+        integrity=draw(st.builds(Integrity, *[whole] * 5, st.booleans(), whole)),
         checks=tuple(
             Check(*row)
             for row in draw(st.lists(st.tuples(words, st.booleans(), words, words), max_size=3))
         ),
         scenario=draw(st.none() | trees),
         truth=draw(st.none() | st.dictionaries(words, numbers, max_size=6)),
+        zero_voltage=draw(st.none() | reading),
+        full_rate=draw(st.none() | any_pairs()) if count and scouted else None,
+        scout=draw(st.none() | any_trace(scouted=False)) if scouted else None,
     )
 
 
@@ -160,6 +181,71 @@ def test_the_file_explains_itself_to_any_parquet_reader(tmp_path: Path) -> None:
     assert head["checks"] == [
         {"name": "ring overruns", "holds": True, "found": "0", "expected": "0"}
     ]
+
+
+def with_pairs(trace: Trace, first: int, count: int) -> Trace:
+    """`trace` with pairs kept one by one, from number `first` on; invented codes."""
+    draw = np.random.default_rng(2)
+    codes = draw.integers(0, 4096, (2, count)).astype(np.uint16)
+    scales = Scales(*[1.0] * 12, 4095, 9.0)
+    kept = FullRatePairs(
+        raw=RawPairs(first, *codes), asked=count + 5, pair_ns=4000, skew_ns=2000, scales=scales
+    )
+    return replace(trace, full_rate=kept)
+
+
+def test_pairs_stand_in_the_row_of_their_knot_for_any_parquet_reader(tmp_path: Path) -> None:
+    trace = with_pairs(make_trace(), 1000, 500)
+    assert trace.full_rate is not None
+    table = pq.read_table(save(trace, tmp_path))
+    assert table.column_names[-2:] == ["pair_voltage_codes", "pair_current_codes"]
+    assert table.schema.field("pair_voltage_codes").metadata[b"unit"] == b"code"
+    rows = table.column("pair_voltage_codes").to_pylist()
+    pair = 0
+    for row, pairs in zip(rows, trace.raw.pairs.astype(int), strict=True):
+        held = range(max(pair, 1000), min(pair + pairs, 1500))
+        assert row == [int(trace.full_rate.raw.voltage[number - 1000]) for number in held]
+        pair += pairs
+    head = json.loads(table.schema.metadata[b"kneewise"])
+    assert {name: head["full_rate"][name] for name in ("first", "asked", "pair_ns")} == {
+        "first": 1000,
+        "asked": 505,
+        "pair_ns": 4000,
+    }
+
+
+def test_a_scout_is_stored_with_the_sweep_that_it_steered(tmp_path: Path) -> None:
+    scout = make_trace(knots=32, seed=5)
+    trace = replace(make_trace(), scout=scout)
+    path = save(trace, tmp_path)
+    assert list(tmp_path.iterdir()) == [path]
+    head = json.loads(pq.read_schema(path).metadata[b"kneewise"])
+    assert head["scout"]["figures"]["pmp"]["value"] == scout.figures().pmp.value
+    assert head["scout"]["knots"]["voltage_v"] == scout.voltage.tolist()
+    back = load(path)
+    assert same(back, trace)
+    assert back.scout is not None
+    assert back.scout.figures() == scout.figures()
+
+
+def test_pairs_without_a_knot_are_not_dropped_in_silence(tmp_path: Path) -> None:
+    trace = with_pairs(make_trace(), 0, 5)
+    none = RawKnots(*[np.zeros(0, np.uint64)] * 6)
+    with pytest.raises(ArchiveError, match="5 pairs kept one by one, and no knot"):
+        save(replace(trace, raw=none), tmp_path)
+
+
+def test_a_file_of_the_first_version_still_loads(tmp_path: Path) -> None:
+    """Traces of years would be lost with an update."""
+    trace = make_trace()
+    path = save(trace, tmp_path)
+    head = json.loads(pq.read_schema(path).metadata[b"kneewise"])
+    del head["integrity"]["bounces"]
+    assert not {"full_rate", "scout"} & set(head)
+    assert set(head["readings"]) == {"static_voltage", "zero_current"}
+    rewrite(path, schema=1, integrity=head["integrity"])
+    assert same(load(path), trace)
+    assert save(trace, tmp_path) == path
 
 
 def test_a_trace_without_figures_is_stored_with_the_reason(tmp_path: Path) -> None:

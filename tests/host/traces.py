@@ -2,7 +2,8 @@
 
 Knots come about as in the tracer: a source charges a capacitor, so pairs come at an even pace
 in time and dv/dt = i / C; the knots part the path where it bends, and each is the mean of its
-pairs. The sources are invented, single-diode ones by `pvlib.singlediode`.
+pairs, from which the host's own unbending makes a point. The sources are invented,
+single-diode ones by `pvlib.singlediode`.
 """
 
 from __future__ import annotations
@@ -15,6 +16,7 @@ import numpy as np
 import numpy.typing as npt
 import pvlib  # type: ignore[import-untyped]
 
+from kneewise.curve.unbend import Cells, unbend
 from kneewise.instrument.trace import Check, Integrity, RawKnots, Reading, Trace
 
 Floats = npt.NDArray[np.float64]
@@ -126,16 +128,20 @@ def sweep(
     used = weight > 0
     weight = weight[used]
 
+    cells = Cells.of(weight)
+
     def mean(values: Floats) -> Floats:
         sums: Floats = np.bincount(home, values, minlength=knots)[used] / weight
         return sums
 
+    voltages, voltage_sigma = unbend(cells, mean(v), voltage_noise / np.sqrt(weight))
+    currents, current_sigma = unbend(cells, mean(i), current_noise / np.sqrt(weight))
     return Knots(
-        voltage=mean(v),
-        current=mean(i),
+        voltage=voltages,
+        current=currents,
         weight=weight,
-        voltage_sigma=voltage_noise / np.sqrt(weight),
-        current_sigma=current_noise / np.sqrt(weight),
+        voltage_sigma=voltage_sigma,
+        current_sigma=current_sigma,
         # The reference module charges 2.2 mF.
         time=mean(at) * 2.2e-3,
     )
@@ -173,7 +179,7 @@ def trace_of(made: Knots, truth: dict[str, float] | None, **changes: Any) -> Tra
     """A trace round these knots; codes are as a 12-bit converter over Voc and Isc gives them."""
     pairs = made.weight.astype(np.uint64)
     top_v, top_i = float(made.voltage.max()), float(made.current.max())
-    scatter = (2 * pairs).astype(np.uint64)
+    scatter = (6 * pairs).astype(np.uint64)
     trace = Trace(
         trace_id="5d3c9b1e77aa40f2a1b2c3d4e5f60718",
         rung="in-process",

@@ -19,6 +19,7 @@ from kneewire.messages import unpack
 from kneewise.emulator.opener import connector, start
 from kneewise.emulator.scenario import Scenario
 from kneewise.errors import OutcomeUnknownError
+from kneewise.instrument.full_rate import FullRate
 from kneewise.instrument.opened import Opened
 from kneewise.instrument.tracer import Tracer
 from kneewise.link.port import Port
@@ -26,6 +27,7 @@ from kneewise.link.port import Port
 FILE = Path(__file__).resolve().parents[2] / "protocol" / "vectors" / "conversations.json"
 NONCE = int.from_bytes(b"abcx", "little")
 SWEEP_ID = bytes(range(1, 17))
+STRETCH = FullRate(start_s=0.0002, duration_s=0.0006)  # three blocks of raw pairs
 SCENARIO = Scenario.default().varied(load={"capacitance_f": 470e-6})
 ABOUT = (
     "Whole conversations as they went over the link, a row for each piece that was written at "
@@ -97,9 +99,13 @@ class Stage:
         with mock.patch("kneewise.link.session.quiet_nonce", return_value=NONCE):
             self.tracer = Tracer(Opened(connect=heard, close=lambda: None, rung="in-process"))
 
-    def sweep(self, progress: Callable[[str], None] = lambda stage: None) -> None:
+    def sweep(
+        self,
+        progress: Callable[[str], None] = lambda stage: None,
+        full_rate: FullRate | None = None,
+    ) -> None:
         with mock.patch("secrets.token_bytes", return_value=SWEEP_ID):
-            self.tracer.sweep(knots=16, progress=progress)
+            self.tracer.sweep(knots=16, progress=progress, full_rate=full_rate)
 
     def close(self) -> list[Row]:
         self.tracer.close()
@@ -110,6 +116,13 @@ class Stage:
 def plain_sweep() -> list[Row]:
     stage = Stage()
     stage.sweep()
+    return stage.close()
+
+
+def raw_pairs() -> list[Row]:
+    """Pairs kept one by one, and all blocks of them lost once."""
+    stage = Stage(lose={"host": {8}})
+    stage.sweep(full_rate=STRETCH)
     return stage.close()
 
 
@@ -151,6 +164,7 @@ def rescue() -> list[Row]:
 
 CONVERSATIONS = {
     "a sweep": plain_sweep,
+    "raw pairs, their blocks lost once": raw_pairs,
     "a reply and a block lost": resend,
     "the cable pulled while bleeding": reconnect,
     "a reset behind the fire": reset,

@@ -16,10 +16,12 @@ from pathlib import Path
 from typing import Any
 
 import pytest
+import wrong_pairs  # noqa: F401  # joins the wrong devices
 from wrong_devices import WRONG_DEVICES, SlowPort
 from wrong_hosts import WRONG_HOSTS
 
 from conformance import clauses, device_frames, device_run, host_rules, host_run, host_scripts
+from conformance.host_model import raw_pairs
 from conformance.report import (
     FAILED,
     NOT_TRIED,
@@ -31,7 +33,7 @@ from conformance.report import (
     table,
 )
 from conformance.wire import Port
-from kneewire import catalogue, framing
+from kneewire import PROTOCOL, catalogue, framing
 from kneewise.emulator import inprocess, process
 from kneewise.emulator.firmware import firmware_module
 from kneewise.emulator.opener import connector, start
@@ -43,6 +45,7 @@ from kneewise.errors import (
     ProtocolError,
     RefusedError,
 )
+from kneewise.instrument.full_rate import FullRate
 from kneewise.instrument.tracer import Opened, Tracer
 
 PACKAGE = Path(device_run.__file__).parent
@@ -114,7 +117,7 @@ def checked(tracer: Any, **options: bool) -> list[Result]:
 @pytest.mark.clause("F1", "F2", "F3", "F4", "F5", "F6", "F7", "F8", "B1", "B2", "B3", "B4", "B5")
 @pytest.mark.clause("B7", "H1", "H2", "H3", "H4", "S1", "S2", "S3", "S4", "S5", "W1", "W2", "W3")
 @pytest.mark.clause("W4", "W5", "W6", "W7", "W8", "W9", "W10", "W11", "W13", "A1", "A2", "A3")
-@pytest.mark.clause("R3", "R4", "R5", "C3", "T1", "T2")
+@pytest.mark.clause("R3", "R4", "R5", "C3", "T1", "T2", "K1", "K2", "K3", "K4", "K5", "K6", "K7")
 def test_the_firmware_passes_every_clause(emulated: Any) -> None:
     results = checked(emulated(**LONG))
     assert failed(results) == set(), told(clauses.DEVICE, results)
@@ -214,18 +217,23 @@ SEEN = {
     "reset behind the fire": (OutcomeUnknownError, "reset after it was told to fire.*watchdog"),
     "session forgotten behind the fire": (OutcomeUnknownError, "holds no such sweep"),
     "another catalogue": (ProtocolError, "the device has .*the host has .*firmware"),
-    "another major version": (ProtocolError, r"the device has protocol 1\.1"),
+    "another major version": (ProtocolError, rf"the device has protocol 1\.{PROTOCOL[1]}"),
     "silence": (LinkError, "no answer in 3 s"),
 }
 
 
+# More raw pairs than one burst holds.
+STRETCH = FullRate(start_s=0.001, duration_s=0.006)
+STRETCH_PAIRS = (250, 1500)
+
+
 def swept(play: host_run.Play, knots: int = 96) -> Any:
-    """One sweep of Kneewise with the scripted device of a play."""
+    """One sweep of Kneewise, raw pairs with it, with the scripted device of a play."""
     opened = Opened(
         connect=lambda: host_run.Loopback(play.device), close=lambda: None, rung="tracer"
     )
     with Tracer(opened) as tracer:
-        return tracer.sweep(knots=knots)
+        return tracer.sweep(knots=knots, full_rate=STRETCH)
 
 
 def played(knots: int = 96) -> list[Result]:
@@ -249,6 +257,11 @@ def test_what_a_user_sees(script: host_scripts.Script, caplog: pytest.LogCapture
         trace = swept(play)
         assert trace.sound
         assert trace.label == "EMULATED"
+        first, count = STRETCH_PAIRS
+        assert (trace.full_rate.raw.first, len(trace.full_rate)) == (first, count)
+        kept = raw_pairs(play.device.curve.records(96, 0)[0], first, count)
+        assert trace.full_rate.raw.voltage.tolist() == [*memoryview(kept).cast("H")][::2]
+        assert trace.full_rate.raw.current.tolist() == [*memoryview(kept).cast("H")][1::2]
     if "prompt" in script.name:
         assert "made up by a script" in caplog.text
     results = host_run.results([play])
@@ -257,7 +270,7 @@ def test_what_a_user_sees(script: host_scripts.Script, caplog: pytest.LogCapture
 
 @pytest.mark.clause("F1", "F2", "F3", "F4", "F6", "F7", "F8", "B1", "B2", "B6", "H1", "H2", "H5")
 @pytest.mark.clause("S1", "S6", "W1", "W3", "W5", "W7", "W8", "W10", "W11", "W12", "W14", "A2")
-@pytest.mark.clause("R1", "R2", "R3", "C1", "C2", "T2", "V2", "V3")
+@pytest.mark.clause("R1", "R2", "R3", "C1", "C2", "T2", "V2", "V3", "K5", "K7", "K8")
 def test_the_host_passes_every_clause() -> None:
     results = played()
     assert failed(results) == set(), told(clauses.HOST, results)

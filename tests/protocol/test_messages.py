@@ -31,7 +31,7 @@ VALUES: dict[str, st.SearchStrategy[Any]] = {
         for kind, (size, signed) in fields.FIXED.items()
     },
     "text": st.text(max_size=255).filter(lambda text: len(text.encode()) <= 255),
-    "bytes": st.binary(max_size=200),
+    "bytes": st.binary(max_size=236),
     "knots": st.integers(0, 6).flatmap(
         lambda count: st.binary(min_size=count * KNOT_BYTES, max_size=count * KNOT_BYTES)
     ),
@@ -186,6 +186,12 @@ def test_one_knot_more_would_not_fit_a_frame() -> None:
     assert len(pack("block", 1, 2, {"first": 0, "data": data})) + 4 > catalogue.MAX_FRAME
 
 
+def test_as_many_raw_pairs_as_there_may_be_in_a_block_fit_a_frame_and_one_more_does_not() -> None:
+    for many, fits in ((messages.RAW_A_BLOCK, True), (messages.RAW_A_BLOCK + 1, False)):
+        body = pack("raw_block", 1, 2, {"first": 0, "data": bytes(many * messages.RAW_BYTES)})
+        assert (len(body) + 4 <= catalogue.MAX_FRAME) == fits
+
+
 def test_half_a_knot_is_an_error() -> None:
     with pytest.raises(ValueError, match="short"):
         messages.unpack_knots(bytes(KNOT_BYTES + 1))
@@ -211,7 +217,7 @@ def test_profile_comes_back_whole(values: dict[str, Any], tail: bytes) -> None:
 
 
 def test_cut_profile_is_an_error() -> None:
-    values = least(profile_record.PROFILE) | {"format": 1, "name": "Südhang"}
+    values = least(profile_record.PROFILE) | {"format": profile_record.FORMAT, "name": "Südhang"}
     record = profile_record.pack_profile(values)
     for length in range(len(record)):
         with pytest.raises(ValueError, match=r"short|utf-8"):
@@ -226,7 +232,7 @@ def test_profile_value_out_of_range_never_reaches_the_record(field: str, kind: s
 
 
 def test_every_bit_of_a_stored_profile_is_guarded() -> None:
-    values = least(profile_record.PROFILE) | {"format": 1, "name": "A"}
+    values = least(profile_record.PROFILE) | {"format": profile_record.FORMAT, "name": "A"}
     sealed = profile_record.seal(profile_record.pack_profile(values))
     for bit in range(8 * len(sealed)):
         damaged = bytearray(sealed)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import struct
 from typing import Any
 
 import pytest
@@ -22,8 +23,18 @@ from kneewise.link.session import Session
 VERSIONS = sorted(path.name for path in wire_golden.VECTORS.iterdir() if path.is_dir())
 
 
-def test_there_is_a_frozen_version() -> None:
-    assert "0.1" in VERSIONS
+def test_every_released_version_is_frozen() -> None:
+    assert VERSIONS == ["0.1", "0.2"]
+
+
+@pytest.mark.clause("V5")
+def test_what_is_frozen_does_not_change_under_its_number() -> None:
+    """A wire of another kind would go by the number of one that is out."""
+    version = "{}.{}".format(*PROTOCOL)
+    if version in VERSIONS:
+        for file in wire_golden.FILES:
+            held = (wire_golden.VECTORS / version / file).read_text(encoding="ascii")
+            assert held == wire_golden.written(file), f"{version}/{file}: number the wire anew"
 
 
 # -- what stays for ever ---------------------------------------------------------------------
@@ -70,13 +81,24 @@ def refusal_of(device: SkewDevice) -> ProtocolError:
 
 
 @pytest.mark.clause("V2", "V4")
+def test_a_device_of_the_version_before_is_told() -> None:
+    old = frozen("0.1")
+    error = refusal_of(SkewDevice(old))
+    assert error.found == (
+        f"the device has protocol 0.1, catalogue {old['fingerprint']:08x} (firmware 0.0.0)"
+    )
+    assert error.expected == f"the host has protocol 0.2, catalogue {fingerprint():08x}"
+    assert error.next_step.startswith("store the firmware that came with this host on the device")
+
+
+@pytest.mark.clause("V2", "V4")
 def test_another_catalogue_of_the_same_version_is_told() -> None:
-    other = with_a_field_more(frozen("0.1"))
+    other = with_a_field_more(frozen("0.2"))
     error = refusal_of(SkewDevice(other))
     assert error.found == (
-        f"the device has protocol 0.1, catalogue {other['fingerprint']:08x} (firmware 0.0.0)"
+        f"the device has protocol 0.2, catalogue {other['fingerprint']:08x} (firmware 0.0.0)"
     )
-    assert error.expected == f"the host has protocol 0.1, catalogue {fingerprint():08x}"
+    assert error.expected == f"the host has protocol 0.2, catalogue {fingerprint():08x}"
     assert error.next_step == (
         "store the firmware that came with this host on the device, "
         "or install the host version that came with that firmware"
@@ -84,7 +106,7 @@ def test_another_catalogue_of_the_same_version_is_told() -> None:
 
 
 @pytest.mark.clause("V3", "V4")
-@pytest.mark.parametrize("version", [(1, 0), (0, 2), (3, 7)])
+@pytest.mark.parametrize("version", [(1, 0), (0, 3), (3, 7)])
 def test_another_version_is_told(version: tuple[int, int]) -> None:
     other = {**with_a_field_more(frozen("0.1")), "protocol": list(version)}
     error = refusal_of(SkewDevice(other))
@@ -142,8 +164,19 @@ def hello(major: int, minor: int, of: int) -> bytes:
     return pack("hello", NO_SESSION, session.HELLO_SEQUENCE, values)
 
 
+@pytest.mark.clause("V1", "V2", "H1", "H3")
+def test_a_host_of_the_version_before_learns_what_the_device_has(old_host) -> None:
+    """It refuses by itself; until then the device does nothing for it that it could misread."""
+    reply = old_host.say(hello(0, 1, frozen("0.1")["fingerprint"]))
+    assert (reply["major"], reply["minor"], reply["fingerprint"]) == (*PROTOCOL, fingerprint())
+    short = struct.pack("<HIB", 96, 1000, 1)  # what arm was in 0.1
+    head = bytes([catalogue.KINDS["arm"]]) + struct.pack("<II", reply["session"], 1)
+    refusal = old_host.say(head + short)
+    assert catalogue.REFUSALS[refusal["code"]] == "malformed"
+
+
 @pytest.mark.clause("V1", "H1", "H3")
-@pytest.mark.parametrize("version", [(0, 1), (0, 2), (1, 0), (255, 255)])
+@pytest.mark.parametrize("version", [(0, 1), (0, 3), (1, 0), (255, 255)])
 def test_the_device_answers_the_hello_of_any_version_with_its_own(old_host, version) -> None:
     reply = old_host.say(hello(*version, 0x80808080))
     assert reply.name == "hello_reply"

@@ -319,6 +319,7 @@ def messages_vectors() -> dict[str, Any]:
     fire = body("fire", SESSION, 515, EXAMPLES["fire"])
     block = body("block", SESSION, 515, EXAMPLES["block"])
     profile = body("profile", SESSION, 515, EXAMPLES["profile"])
+    raw_block = body("raw_block", SESSION, 515, EXAMPLES["raw_block"])
     refused = [
         ("nothing", b"", 2, 0, 0, 0),
         ("header cut short", fire[:8], 2, 0x21, 0, 0),
@@ -328,6 +329,7 @@ def messages_vectors() -> dict[str, Any]:
         ("fewer knots than announced", block[:-1], 2, 0xE1, SESSION, 515),
         ("fewer bytes than announced", profile[:-1], 2, 0x91, SESSION, 515),
         ("length cut in two", profile[:10], 2, 0x91, SESSION, 515),
+        ("fewer raw pairs than announced", raw_block[:-1], 2, 0xE3, SESSION, 515),
     ]
     return {
         "about": "One body of every message, and its frame in the direction that it travels. All "
@@ -364,8 +366,9 @@ def profile_vectors() -> dict[str, Any]:
         "bad_records": [
             {"name": "nothing", "record": ""},
             {"name": "cut short", "record": record[:-1].hex()},
-            {"name": "name longer than the record", "record": "01ff41"},
-            {"name": "another format", "record": "02" + record[1:].hex()},
+            {"name": "name longer than the record", "record": record[:1].hex() + "ff41"},
+            {"name": "the format before", "record": "01" + record[1:].hex()},
+            {"name": "a later format", "record": "03" + record[1:].hex()},
             {"name": "name is not UTF-8", "record": (record[:2] + b"\xff" + record[3:]).hex()},
         ],
         "bad_files": [

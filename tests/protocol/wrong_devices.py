@@ -374,7 +374,7 @@ def frees_for_any_id(patch: Patch) -> None:
     handler(patch, "acknowledge", acknowledge)
 
 
-@breaks("W11")
+@breaks("W11", "K7")
 def sends_more_than_its_window(patch: Patch) -> None:
     replies(patch, "hello", window=8)
 

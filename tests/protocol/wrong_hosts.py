@@ -7,6 +7,7 @@ function that makes the change through pytest's monkeypatch.
 from __future__ import annotations
 
 from collections.abc import Callable
+from contextlib import suppress
 from typing import Any
 
 import pytest
@@ -114,14 +115,79 @@ def keeps_silent_while_charging(patch: Patch) -> None:
 def asks_for_more_than_the_window(patch: Patch) -> None:
     def fetch(session: Session, reassembly: Any, first: int, count: int, a_block: int) -> None:
         wanted = {"sweep_id": reassembly.manifest["sweep_id"], "first": first, "count": count}
-        session.burst({**wanted, "a_block": min(a_block, KNOTS_A_BLOCK - 1)}, reassembly.take)
+        values = {**wanted, "a_block": min(a_block, KNOTS_A_BLOCK - 1)}
+        session.burst(reassembly.wanted.request, values, reassembly.take)
 
     patch.setattr(sweep_module, "_fetch_run", fetch)
 
 
+def believes(patch: Patch, wanted: sweep_module.Wanted) -> None:
+    original = sweep_module.Reassembly.crc_ok
+    patch.setattr(
+        sweep_module.Reassembly, "crc_ok", lambda self: self.wanted is wanted or original(self)
+    )
+
+
 @breaks("W12")
 def believes_any_knots(patch: Patch) -> None:
-    patch.setattr(sweep_module.Reassembly, "crc_ok", lambda self: True)
+    believes(patch, sweep_module.KNOTS)
+
+
+@breaks("K8")
+def believes_any_raw_pairs(patch: Patch) -> None:
+    believes(patch, sweep_module.RAW_PAIRS)
+
+
+@breaks("K8")
+def takes_raw_pairs_beyond_the_count(patch: Patch) -> None:
+    original = sweep_module.Reassembly.take
+
+    def take(self: Any, block: Any) -> None:
+        if block.name == "raw_block" and block["first"] == self.count:
+            self._records += block["data"]
+        original(self, block)
+
+    patch.setattr(sweep_module.Reassembly, "take", take)
+
+
+@breaks("B6")
+def takes_the_raw_pairs_of_any_fetch(patch: Patch) -> None:
+    original = Session._pump
+
+    def pump(self: Any, timeout_s: float) -> Any:
+        found = original(self, timeout_s)
+        for message in found:
+            if message.name == "raw_block":
+                message.sequence = self.sequence
+        return found
+
+    patch.setattr(Session, "_pump", pump)
+
+
+@breaks("K7")
+def asks_for_raw_pairs_that_there_are_not(patch: Patch) -> None:
+    original = Session.burst
+
+    def burst(self: Any, name: str, values: Any, *given: Any) -> bool:
+        if name == "fetch_raw":
+            with suppress(RefusedError):
+                original(self, name, {**values, "first": 65000, "count": 1}, *given)
+        return original(self, name, values, *given)
+
+    patch.setattr(Session, "burst", burst)
+
+
+@breaks("K5")
+def asks_for_raw_pairs_out_of_range(patch: Patch) -> None:
+    original = Session.request
+
+    def request(self: Any, name: str, values: Any = None, **given: Any) -> Any:
+        if name == "arm":
+            with suppress(RefusedError):
+                original(self, name, {**values, "raw_pairs": 2049})
+        return original(self, name, values, **given)
+
+    patch.setattr(Session, "request", request)
 
 
 @breaks("B6")
@@ -149,12 +215,12 @@ def sees_no_prompt(patch: Patch) -> None:
 def probes_in_a_burst(patch: Patch) -> None:
     original = Session.burst
 
-    def burst(self: Any, values: Any, on_block: Any, *given: Any) -> bool:
+    def burst(self: Any, name: str, values: Any, on_block: Any, *given: Any) -> bool:
         def probe(block: Any) -> None:
             on_block(block)
             self._send(pack("heartbeat", self.session, 0x7777))
 
-        return original(self, values, probe, *given)
+        return original(self, name, values, probe, *given)
 
     patch.setattr(Session, "burst", burst)
 

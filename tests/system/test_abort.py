@@ -13,7 +13,13 @@ def closings(board):
 
 def arm(tracer):
     tracer.rest()
-    values = {"knots": 96, "closed_limit_ms": 5000, "confirmed": 1}
+    values = {
+        "knots": 96,
+        "closed_limit_ms": 5000,
+        "confirmed": 1,
+        "raw_from_us": 0,
+        "raw_pairs": 0,
+    }
     return tracer._session.request("arm", values)["token"]
 
 

@@ -87,6 +87,68 @@ def test_a_sweep_for_scripts(tmp_path):
     assert trace.voltage.tolist() == data["voltage"]
 
 
+def test_pairs_kept_one_by_one(tmp_path):
+    done = run("sweep", "--on", "emulator", "--full-rate", "6.5:8", "--json", folder=tmp_path)
+    assert done.returncode == 0, done.stderr
+    data = json.loads(done.stdout)
+    kept = data["full_rate"]
+    assert (kept["pairs"], kept["asked"], kept["first"]) == (2000, 2000, 1625)
+    assert (kept["from_s"], kept["to_s"]) == pytest.approx((0.0065, 0.0145))
+    assert data["scout"] is None
+    assert data["zeros"] == pytest.approx({"voltage_code": 24.0, "current_code": 40.0}, abs=0.5)
+    assert data["integrity"]["bounces"] == 0
+    assert len(load(tmp_path / data["file"]).full_rate) == 2000
+
+
+def test_pairs_about_the_knee(tmp_path, rung):
+    words = ("sweep", "--on", f"emulator:{rung}", "--full-rate", "knee:4")
+    done = run(*words, folder=tmp_path)
+    assert done.returncode == 0, done.stderr
+    assert "1000 pairs one by one, " in done.stdout
+    assert "  steered by scout sweep " in done.stdout
+    assert "32 knots in " in done.stdout
+    assert "holds   agrees with the scout sweep: Isc " in done.stdout
+    assert "  zeros: voltage 24." in done.stdout
+    assert "scout: charging" in done.stderr
+    # One file: the scout is in it.
+    (stored,) = (tmp_path / "traces").glob("*.parquet")
+    assert load(stored).scout is not None
+
+
+def test_a_scout_for_scripts(tmp_path):
+    done = run("sweep", "--on", "emulator", "--scout", "--json", folder=tmp_path)
+    data = json.loads(done.stdout)
+    scout = data["scout"]
+    assert scout["knots"] == 32
+    assert scout["figures"]["pmp"] == pytest.approx(data["figures"]["pmp"], rel=0.01)
+    assert data["full_rate"]["from_s"] < scout["maximum_s"] < data["full_rate"]["to_s"]
+
+
+@pytest.mark.parametrize(
+    ("stretch", "parts"),
+    [
+        ("6.5", ("reading --full-rate", "START:DURATION in ms", "--full-rate knee")),
+        ("knee:long", ("reading --full-rate", "knee:DURATION")),
+        ("0:30", ("30 ms, 7500 pairs", "0.004 to 8.192 ms", "ask for a shorter stretch")),
+        ("20000:1", ("from 20000 ms on", "longest closed time, 10000 ms")),
+    ],
+)
+def test_a_stretch_that_cannot_be(stretch, parts, tmp_path):
+    done = run("sweep", "--on", "emulator", "--full-rate", stretch, folder=tmp_path)
+    assert_message(done, 2, *parts)
+    assert not (tmp_path / "traces").exists()
+
+
+def test_a_bad_scout_is_stored_and_the_sweep_not_made(tmp_path):
+    words = ("sweep", "--on", "emulator", "--scout", "--limit", "0.01")
+    done = run(*words, folder=tmp_path)
+    assert_message(
+        done, 5, "scout sweep ", "ended by itself: time limit", "What was swept is stored"
+    )
+    (stored,) = (tmp_path / "traces").glob("*.parquet")
+    assert not load(stored).sound
+
+
 def test_a_scenario_of_ones_own(tmp_path):
     text = example_text().replace("photocurrent_a = 9.2", "photocurrent_a = 4.6")
     (tmp_path / "mine.toml").write_text(text, encoding="utf-8")

@@ -80,7 +80,7 @@ def test_knots_stand_denser_at_the_knee(bench, rung):
     voc = trace.voc_static
     flat = np.count_nonzero(trace.voltage < 0.4 * voc) / 0.4
     knee = np.count_nonzero((trace.voltage > 0.75 * voc) & (trace.voltage < 0.95 * voc)) / 0.2
-    assert knee > 4 * flat
+    assert knee > 3 * flat
 
 
 def test_a_dim_source_sweeps_long_and_is_heard_of(bench, rung):

@@ -7,6 +7,7 @@ import math
 
 import pytest
 
+from kneewise import FullRate
 from kneewise.errors import KneewiseError, TrustError
 from kneewise.link.session import Session
 
@@ -56,6 +57,32 @@ def test_a_manifest_that_cannot_be_is_an_error_of_ours_or_an_unsound_trace(
     with contextlib.suppress(KneewiseError):
         trace = tracer.sweep(knots=16)
         assert not trace.sound or "pair_ns" in changes
+
+
+@pytest.mark.parametrize(
+    "changes",
+    [
+        {"raw_first": 2**32 - 1},
+        {"raw_first": 251},  # one pair further on than they were
+        {"zero_conversions": 1},
+        {"voltage_zero_sum": 0},
+        {"voltage_zero_sum": 2**32 - 1},
+    ],
+)
+def test_pairs_and_zeros_that_cannot_be_make_a_trace_unsound(bench, monkeypatch, changes):
+    tracer = bench("in-process").tracer()
+    changed(monkeypatch, "read_manifest", **changes)
+    trace = tracer.sweep(full_rate=FullRate(start_s=0.001, duration_s=0.004))
+    assert not trace.sound
+    assert len(trace.full_rate.voltage) == 1000
+
+
+@pytest.mark.parametrize("changes", [{"skew_ns": 2**32 - 1}, {"bounces": 65535}])
+def test_what_else_a_manifest_may_hold_is_no_traceback(bench, monkeypatch, changes):
+    tracer = bench("in-process").tracer()
+    changed(monkeypatch, "read_manifest", **changes)
+    trace = tracer.sweep(full_rate=FullRate(start_s=0.001, duration_s=0.004))
+    assert len(trace.full_rate.voltage) == len(trace.full_rate.current) == 1000
 
 
 @pytest.mark.parametrize("changes", [{"replied_us": 2**63}, {"received_us": 2**63}])

@@ -3,6 +3,7 @@
 import pytest
 from rig import knots_alike
 
+from kneewise import FullRate
 from kneewise.errors import (
     ArchiveError,
     KneewiseError,
@@ -30,14 +31,16 @@ def cut_and_join(emulated):
         emulated.join_link()
 
 
-@pytest.mark.parametrize("cut_at", [1, 3, 9])
+# Blocks: 16 of knots, then 26 of pairs kept one by one.
+@pytest.mark.clause("W9", "K7", "K8")
+@pytest.mark.parametrize("cut_at", [1, 3, 9, 17, 40])
 def test_cut_in_the_middle_of_the_transfer(cut_at, bench, rung, monkeypatch):
     """A loose plug would cost the sweep, or worse, change it."""
     one = bench(rung)
     tracer = one.tracer()
     refuse = Refuse()
     with pytest.raises(ArchiveError):
-        tracer.sweep(keep=refuse)
+        tracer.sweep(full_rate=FullRate(start_s=0.002, duration_s=0.006), keep=refuse)
     undisturbed = refuse.trace
 
     blocks = []
@@ -52,11 +55,15 @@ def test_cut_in_the_middle_of_the_transfer(cut_at, bench, rung, monkeypatch):
     monkeypatch.setattr(Reassembly, "take", cutting)
     kept = []
     held = tracer.held(keep=kept.append)
-    assert len(blocks) > 16
+    assert len(blocks) > 42
     assert held is kept[0]
     assert held.trace_id == undisturbed.trace_id
     assert knots_alike(held, undisturbed)
     assert (held.raw.time_us == undisturbed.raw.time_us).all()
+    pairs = held.full_rate.raw
+    assert len(pairs) == 1500
+    assert (pairs.voltage == undisturbed.full_rate.raw.voltage).all()
+    assert (pairs.current == undisturbed.full_rate.raw.current).all()
     assert held.integrity.manifest_crc_ok
     assert tracer.status().held_sweep == ""
 

@@ -2,11 +2,13 @@
 
 import json
 import time
+from dataclasses import replace
 from datetime import datetime
 
 import pytest
 from rig import knots_alike
 
+from kneewise import FullRate
 from kneewise.emulator.opener import connector
 from kneewise.errors import (
     ArchiveError,
@@ -45,7 +47,16 @@ def lines_of(file):
 
 def same(one, other):
     """True where two traces hold the same measurement, to the last code and microsecond."""
-    return knots_alike(one, other) and (one.raw.time_us == other.raw.time_us).all()
+    alike = knots_alike(one, other) and (one.raw.time_us == other.raw.time_us).all()
+    return alike and pairs_of(one) == pairs_of(other)
+
+
+def pairs_of(trace):
+    """What was kept one by one, or None."""
+    if trace.full_rate is None:
+        return None
+    raw = trace.full_rate.raw
+    return raw.first, raw.voltage.tolist(), raw.current.tolist()
 
 
 def four_parts(error, what, found, expected, next_step):
@@ -79,6 +90,32 @@ def test_a_recorded_sweep_replays_to_the_same_trace(bench, rung, file, monkeypat
     assert trace.label == "EMULATED"
     # The charge and the bleed have passed on the replay's own clock.
     assert passed_s > 0.05
+
+
+STRETCH = FullRate(start_s=0.002, duration_s=0.006)
+
+
+def test_pairs_kept_one_by_one_replay_as_they_were(bench, rung, file):
+    with recording_tracer(bench(rung), file) as tracer:
+        trace = tracer.sweep(full_rate=STRETCH)
+        plain = tracer.sweep()
+    with Tracer.open(f"replay:{file}") as tracer:
+        again = tracer.sweep(full_rate=STRETCH)
+        # The second sweep of the recording had none, whatever is asked for now.
+        other = tracer.sweep(full_rate=FullRate(start_s=0.001))
+    assert len(trace.full_rate) == 1500
+    assert same(trace, again)
+    assert again.checks == trace.checks
+    assert same(plain, replace(other, full_rate=None))
+    assert len(other.full_rate) == 0
+
+
+@pytest.mark.parametrize("a_block", [1, 7])
+def test_a_host_that_asks_for_other_blocks_gets_the_same_pairs(a_block, bench, file, monkeypatch):
+    with recording_tracer(bench("in-process"), file) as tracer:
+        trace = tracer.sweep(full_rate=STRETCH)
+    monkeypatch.setattr(sweep_module, "RAW_A_BLOCK", a_block)
+    assert same(trace, replayed(file, full_rate=STRETCH))
 
 
 def test_a_replay_tells_when_it_was_measured_not_when_it_was_replayed(bench, file):
@@ -172,7 +209,8 @@ def test_a_long_charge_replays_with_its_heartbeats(bench, file):
 # -- links that were bad -----------------------------------------------------------------------
 
 
-@pytest.mark.parametrize("cut_at", [1, 9])
+# Blocks: 16 of knots, then 26 of pairs.
+@pytest.mark.parametrize("cut_at", [1, 9, 17, 40])
 def test_a_recording_goes_on_after_a_lost_link(cut_at, bench, rung, file, monkeypatch):
     """The very sessions that go wrong are those that somebody wants to look into."""
     one = bench(rung)
@@ -189,10 +227,11 @@ def test_a_recording_goes_on_after_a_lost_link(cut_at, bench, rung, file, monkey
 
     with monkeypatch.context() as patched, recording_tracer(one, file) as tracer:
         patched.setattr(Reassembly, "take", cutting)
-        trace = tracer.sweep()
+        trace = tracer.sweep(full_rate=STRETCH)
     assert [line for line in lines_of(file) if line.get("event")] != []
     assert [chunk.way for chunk in read_recording(file).chunks].count(OPENED) >= 1
-    again = replayed(file)
+    assert len(trace.full_rate) == 1500
+    again = replayed(file, full_rate=STRETCH)
     assert same(trace, again)
     assert again.figures() == trace.figures()
 

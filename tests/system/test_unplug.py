@@ -13,7 +13,13 @@ SETTLE_US = 30_000  # more than any contact's release time
 
 
 def arm(tracer):
-    values = {"knots": 96, "closed_limit_ms": 1000, "confirmed": 1}
+    values = {
+        "knots": 96,
+        "closed_limit_ms": 1000,
+        "confirmed": 1,
+        "raw_from_us": 0,
+        "raw_pairs": 0,
+    }
     return tracer._session.request("arm", values)["token"]
 
 

@@ -2,8 +2,10 @@
 
 Comes in: a `Trace`. Goes out: a file with one row a knot, as measured and in SI units, the
 unit of each column in its field's metadata, and all the rest as JSON under the schema key
-`kneewise`; and the equal `Trace` again. A file appears whole or not at all, and a stored
-trace is never overwritten. Choosing folders and listing them does not belong here.
+`kneewise`, a scout sweep with its knots included; and the equal `Trace` again. Pairs kept one
+by one are lists of codes in the row of the knot that they belong to. A file appears whole or
+not at all, and a stored trace is never overwritten. Choosing folders and listing them does not
+belong here.
 """
 
 from __future__ import annotations
@@ -14,7 +16,8 @@ import os
 import re
 import uuid
 import zlib
-from dataclasses import asdict
+from collections.abc import Callable
+from dataclasses import asdict, replace
 from datetime import UTC, datetime
 from math import isfinite
 from pathlib import Path
@@ -25,10 +28,13 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 
 from kneewise.errors import ArchiveError
-from kneewise.instrument.trace import Check, Integrity, RawKnots, Reading, Trace
+from kneewise.instrument.full_rate import FullRatePairs
+from kneewise.instrument.profile import Scales
+from kneewise.instrument.trace import Check, Integrity, RawKnots, RawPairs, Reading, Trace
 
-SCHEMA = 1
-"""Version of the file's content. A higher one may hold what this program cannot read."""
+SCHEMA = 2
+"""Version of the file's content. A higher one may hold what this program cannot read; files of
+version 1 have no pairs kept one by one, no zero of the voltage and no scout."""
 
 _KEY = b"kneewise"
 _CRC_KEY = b"kneewise_crc32"
@@ -49,6 +55,10 @@ _CALIBRATED_COLUMNS = {
     "current_sigma_a": ("current_sigma", "A", "standard deviation of the mean, from scatter"),
     "weight": ("weight", "1", "pairs averaged"),
 }
+_PAIR_COLUMNS = {
+    "pair_voltage_codes": ("voltage", "code", "voltage codes of the pairs kept one by one"),
+    "pair_current_codes": ("current", "code", "current codes of the pairs kept one by one"),
+}
 _PLAIN_FIELDS = (
     "trace_id",
     "rung",
@@ -63,6 +73,8 @@ _PLAIN_FIELDS = (
     "scenario",
     "truth",
 )
+_FULL_RATE_FIELDS = ("asked", "pair_ns", "skew_ns")
+_CODES = pa.list_(pa.field("code", pa.uint16(), nullable=False))
 _NOT_FINITE = ("inf", "-inf", "nan")
 
 
@@ -138,6 +150,12 @@ def _table(trace: Trace, what: str) -> pa.Table:
     for name, (attribute, unit, text) in _CALIBRATED_COLUMNS.items():
         fields.append(_field(name, pa.float64(), unit, text))
         columns.append(pa.array(np.asarray(getattr(trace, attribute), dtype=np.float64)))
+    if trace.full_rate is not None:
+        offsets = _offsets(trace, trace.full_rate.raw, what)
+        for name, (attribute, unit, text) in _PAIR_COLUMNS.items():
+            codes = pa.array(getattr(trace.full_rate.raw, attribute), pa.uint16())
+            fields.append(_field(name, _CODES, unit, text))
+            columns.append(pa.ListArray.from_arrays(offsets, codes, type=_CODES))
     lengths = {field.name: len(column) for field, column in zip(fields, columns, strict=True)}
     if len(set(lengths.values())) != 1:
         raise ArchiveError(
@@ -152,18 +170,43 @@ def _table(trace: Trace, what: str) -> pa.Table:
     return pa.Table.from_arrays(columns, schema=schema)
 
 
+def _offsets(trace: Trace, pairs: RawPairs, what: str) -> Any:
+    """Where the pairs of each knot begin; what lies beyond the knots goes to the last one."""
+    if not len(trace.raw) and len(pairs):
+        raise ArchiveError(
+            what,
+            found=f"{len(pairs)} pairs kept one by one, and no knot",
+            expected="knots that they belong to",
+            next_step="report this: a trace must not be able to get into this state",
+        )
+    after = np.cumsum(trace.raw.pairs.astype(np.float64)) - pairs.first
+    offsets = np.concatenate(([0.0], np.clip(after, 0.0, len(pairs)))).astype(np.int32)
+    offsets[-1] = len(pairs)
+    return pa.array(offsets)
+
+
 def _field(name: str, kind: Any, unit: str, text: str) -> Any:
     return pa.field(name, kind, nullable=False, metadata={"unit": unit, "description": text})
 
 
 def _describe(trace: Trace) -> dict[str, Any]:
-    """All that is not a column."""
+    """All that is not a column, and a scout whole."""
     head: dict[str, Any] = {"schema": SCHEMA, "label": trace.label}
     head |= {name: getattr(trace, name) for name in _PLAIN_FIELDS}
     head["readings"] = {
         "static_voltage": asdict(trace.static_voltage),
         "zero_current": asdict(trace.zero_current),
     }
+    if trace.zero_voltage is not None:
+        head["readings"]["zero_voltage"] = asdict(trace.zero_voltage)
+    if trace.full_rate is not None:
+        head["full_rate"] = {
+            "first": trace.full_rate.raw.first,
+            **{name: getattr(trace.full_rate, name) for name in _FULL_RATE_FIELDS},
+            "scales": asdict(trace.full_rate.scales),
+        }
+    if trace.scout is not None:
+        head["scout"] = {**_describe(trace.scout), "knots": _columns(trace.scout)}
     head["integrity"] = asdict(trace.integrity)
     head["checks"] = [asdict(check) for check in trace.checks]
     # For whoever reads the file without this program; `load` works them out again.
@@ -176,6 +219,13 @@ def _describe(trace: Trace) -> dict[str, Any]:
         head["figures"] = {name: asdict(quantity) for name, quantity in figures.named()}
         head["isc_extrapolated_from_v"] = figures.isc_extrapolated_from_v
     return head
+
+
+def _columns(trace: Trace) -> dict[str, list[int | float]]:
+    """The knots' columns by name."""
+    columns = {name: getattr(trace.raw, name) for name in _RAW_COLUMNS}
+    columns |= {name: getattr(trace, each) for name, (each, *_) in _CALIBRATED_COLUMNS.items()}
+    return {name: column.tolist() for name, column in columns.items()}
 
 
 def _head(table: pa.Table, what: str) -> dict[str, Any]:
@@ -213,11 +263,37 @@ def _trace(table: pa.Table, head: dict[str, Any]) -> Trace:
         # A copy that owns its memory, so that the file's bytes can go.
         return np.array(values.to_numpy(), dtype=kind)
 
-    readings = head["readings"]
+    def codes(name: str) -> Any:
+        values = table.column(name).combine_chunks()
+        if values.null_count or values.type.value_type != pa.uint16():
+            raise ValueError(f"column {name} is {values.type}")
+        return np.array(values.flatten().to_numpy(), dtype=np.uint16)
+
+    trace = _trace_of(head, column)
+    more: dict[str, Any] = {}
+    if "full_rate" in head:
+        about = head["full_rate"]
+        more["full_rate"] = FullRatePairs(
+            raw=RawPairs(about["first"], *(codes(name) for name in _PAIR_COLUMNS)),
+            scales=Scales(**about["scales"]),
+            **{name: about[name] for name in _FULL_RATE_FIELDS},
+        )
+    if "scout" in head:
+        knots = head["scout"]["knots"]
+        more["scout"] = _trace_of(
+            head["scout"], lambda name, kind: np.array(knots[name], dtype=kind)
+        )
+    return replace(trace, **more)
+
+
+def _trace_of(head: dict[str, Any], column: Callable[[str, type[np.generic]], Any]) -> Trace:
+    """The trace of a description and its columns, without pairs kept one by one and scout."""
+    readings = {name: Reading(**reading) for name, reading in head["readings"].items()}
     return Trace(
         raw=RawKnots(**{name: column(name, np.uint64) for name in _RAW_COLUMNS}),
-        static_voltage=Reading(**readings["static_voltage"]),
-        zero_current=Reading(**readings["zero_current"]),
+        static_voltage=readings["static_voltage"],
+        zero_current=readings["zero_current"],
+        zero_voltage=readings.get("zero_voltage"),
         integrity=Integrity(**head["integrity"]),
         checks=tuple(Check(**check) for check in head["checks"]),
         **{

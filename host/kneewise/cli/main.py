@@ -24,7 +24,7 @@ app = typer.Typer(
     rich_markup_mode=None,
     context_settings={"help_option_names": ["-h", "--help"]},
 )
-app.command("sweep", epilog="Example: kneewise sweep --on emulator --knots 128")(sweep.sweep)
+app.command("sweep", epilog="Example: kneewise sweep --on emulator --full-rate knee")(sweep.sweep)
 app.command("rest", epilog="Example: kneewise rest --on emulator")(rest.rest)
 app.command("wire", epilog="Example: kneewise wire session.jsonl")(wire.wire)
 app.command("emulate", epilog="Example: kneewise emulate --example > my_module.toml")(

@@ -8,6 +8,7 @@ from pathlib import Path
 from typing import Any
 
 from kneewise.curve.figures import Figures, NoFigures, Quantity
+from kneewise.instrument.scout import maximum_s
 from kneewise.instrument.trace import Trace
 
 RUNGS = {
@@ -52,7 +53,14 @@ def as_json(trace: Trace, file: Path, picture: Path) -> dict[str, Any]:
             "blocks_resent": integrity.blocks_resent,
             "ring_overruns": integrity.ring_overruns,
             "manifest_crc_ok": integrity.manifest_crc_ok,
+            "bounces": integrity.bounces,
         },
+        "zeros": {
+            "voltage_code": trace.zero_voltage.code if trace.zero_voltage else None,
+            "current_code": trace.zero_current.code,
+        },
+        "full_rate": _full_rate(trace),
+        "scout": _scout(trace),
         "checks": [
             {
                 "name": check.name,
@@ -65,6 +73,34 @@ def as_json(trace: Trace, file: Path, picture: Path) -> dict[str, Any]:
         "residual_capacitor_v": trace.residual_capacitor_v,
         "file": str(file),
         "picture": str(picture),
+    }
+
+
+def _full_rate(trace: Trace) -> dict[str, Any] | None:
+    pairs = trace.full_rate
+    if pairs is None:
+        return None
+    begin_s, end_s = pairs.stretch_s
+    return {
+        "pairs": len(pairs),
+        "asked": pairs.asked,
+        "first": pairs.raw.first,
+        "from_s": begin_s,
+        "to_s": end_s,
+    }
+
+
+def _scout(trace: Trace) -> dict[str, Any] | None:
+    scout = trace.scout
+    if scout is None:
+        return None
+    return {
+        "trace_id": scout.trace_id,
+        "started_utc": scout.started_utc,
+        "knots": len(scout.raw),
+        "lasted_s": float(scout.time[-1]),
+        "maximum_s": maximum_s(scout),
+        "figures": {name: getattr(scout.figures(), name).value for name in NAMES},
     }
 
 
@@ -86,6 +122,7 @@ def as_text(trace: Trace, file: Path, picture: Path) -> str:
         "",
         f"  {integrity.knots} knots from {integrity.pairs} pairs of V and I"
         f" in {1e3 * trace.time[-1]:.1f} ms{repeated}",
+        *_sweep_lines(trace),
         f"  capacitor left at {trace.residual_capacitor_v:.2f} V"
         " (measure it yourself before touching the terminals)",
         "",
@@ -97,6 +134,34 @@ def as_text(trace: Trace, file: Path, picture: Path) -> str:
             lines.append(f"            expected {check.expected}")
     lines += ["", f"  stored   {file}", f"  picture  {picture}"]
     return "\n".join(lines)
+
+
+def _sweep_lines(trace: Trace) -> list[str]:
+    """The scout, the pairs kept one by one, the zeros and the contact, a line each."""
+    lines = []
+    pairs, scout, bounces = trace.full_rate, trace.scout, trace.integrity.bounces
+    if pairs is not None:
+        begin_s, end_s = pairs.stretch_s
+        kept = f"{len(pairs)} pairs one by one, {1e3 * begin_s:.2f} to {1e3 * end_s:.2f} ms"
+        if not len(pairs):
+            kept = "no pairs one by one"
+        short = pairs.asked is not None and len(pairs) < pairs.asked
+        lines.append(
+            f"  {kept}" + (f"; {pairs.asked} were asked for, the sweep ended first" * short)
+        )
+    if scout is not None:
+        lines.append(
+            f"  steered by scout sweep {scout.trace_id[:8]}: {len(scout.raw)} knots in "
+            f"{1e3 * scout.time[-1]:.1f} ms, maximum power at {1e3 * maximum_s(scout):.2f} ms"
+        )
+    zero = trace.zero_voltage
+    lines.append(
+        f"  zeros: voltage {f'{zero.code:.2f}' if zero else 'of the profile, not read'}, "
+        f"current {trace.zero_current.code:.2f} codes"
+    )
+    if bounces:
+        lines.append(f"  contact opened again {bounces} times before it closed for good")
+    return lines
 
 
 def _figures(trace: Trace) -> tuple[Figures | None, str | None]:

@@ -10,7 +10,8 @@ import typer
 
 from kneewise.cli.summary import as_json, as_text
 from kneewise.cli.targets import On, Record, opened
-from kneewise.errors import TrustError
+from kneewise.errors import KneewiseError, TrustError, UsageError
+from kneewise.instrument.full_rate import FullRate
 from kneewise.instrument.trace import Trace
 
 CAUTION = (
@@ -25,6 +26,24 @@ def sweep(
     limit_s: Annotated[
         float, typer.Option("--limit", min=0.01, max=120, help="Longest closed time, s.")
     ] = 10.0,
+    full_rate: Annotated[
+        str,
+        typer.Option(
+            "--full-rate",
+            metavar="START:DURATION",
+            help="Keep each pair of a stretch of the sweep, ms after conduction began, for "
+            'example 6.5:8; "knee" or knee:DURATION for one about the maximum power, as a scout '
+            "sweep finds it.",
+        ),
+    ] = "",
+    scout: Annotated[
+        bool,
+        typer.Option(
+            "--scout",
+            help="Sweep coarsely first; it steers the sweep (pairs kept about the maximum power, "
+            "closed time) and the two are compared.",
+        ),
+    ] = False,
     store: Annotated[Path, typer.Option(help="Folder for the trace.")] = Path("traces"),
     picture: Annotated[
         Path | None,
@@ -44,6 +63,7 @@ def sweep(
     ] = False,
 ) -> None:
     """Sweep once: arm, fire, capture, bleed, fetch, check, store, draw."""
+    stretch = stretch_of(full_rate) if full_rate else None
     files: list[Path] = []
 
     def say(text: str) -> None:
@@ -60,7 +80,19 @@ def sweep(
         earlier = tracer.held(keep=keep)
         if earlier is not None:
             say(f"An earlier sweep was still held on the tracer: stored as {files.pop()}")
-        trace = tracer.sweep(knots=knots, limit_s=limit_s, keep=keep, progress=say)
+        try:
+            trace = tracer.sweep(
+                knots=knots,
+                limit_s=limit_s,
+                full_rate=stretch,
+                scout=scout,
+                keep=keep,
+                progress=say,
+            )
+        except KneewiseError:
+            if files:
+                say(f"What was swept is stored as {files.pop()}")
+            raise
     file = files[0]
     drawn = _draw(trace, picture or file.with_suffix(".png"))
     if as_data:
@@ -76,6 +108,23 @@ def sweep(
             next_step="the trace is stored, marked as not to be trusted; mend the cause and "
             "sweep again",
         )
+
+
+def stretch_of(text: str) -> FullRate:
+    """What `--full-rate` means. UsageError."""
+    start, colon, duration = text.partition(":")
+    try:
+        return FullRate(
+            start_s=None if start == "knee" else 1e-3 * float(start),
+            duration_s=1e-3 * float(duration) if colon or start != "knee" else None,
+        )
+    except ValueError:
+        raise UsageError(
+            "reading --full-rate",
+            found=repr(text),
+            expected="START:DURATION in ms, knee, or knee:DURATION",
+            next_step="write for example --full-rate 6.5:8 or --full-rate knee",
+        ) from None
 
 
 def _draw(trace: Trace, path: Path) -> Path:

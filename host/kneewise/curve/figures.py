@@ -1,9 +1,9 @@
 """Isc, Voc, maximum power and fill factor of one curve, with uncertainties.
 
-Comes in: the knots of a capacitor sweep, each the mean of a number of pairs of voltage and
-current. They stand densely at the knee and sparsely elsewhere, the first one never at 0 V and
-the last one short of open circuit. Goes out: `Figures`. No model of the module is assumed, no
-file and no device belongs here.
+Comes in: the knots of a capacitor sweep as points on the curve (`unbend.py` makes them of means
+over many pairs), or every pair as a point. They stand densely at the knee and sparsely
+elsewhere, the first one never at 0 V and the last one short of open circuit. Goes out:
+`Figures`. No model of the module is assumed, no file and no device belongs here.
 
 Every estimator is a weighted least-squares fit of a polynomial over a window of knots, so for
 a given window it is linear in the data, and the uncertainties follow by linear propagation.
@@ -23,10 +23,11 @@ import numpy.typing as npt
 Floats = npt.NDArray[np.float64]
 
 FEWEST_KNOTS = 8
-_LINE_WINDOWS = (0.35, 0.25, 0.18)
-"""Windows of the Isc line, upper edge over Voc. In the narrowest one the diode's share of the
+_LINE_WINDOWS = (0.35, 0.25, 0.18, 0.12, 0.08)
+"""Windows of the Isc line, upper edge over Voc. In the one of 0.18 the diode's share of the
 current moves Isc by less than 0.02 % for single-diode curves with Voc / (n Ns Vt) >= 14, and by
-less than 0.04 % where the sweep begins at 14 % of Voc."""
+less than 0.04 % where the sweep begins at 14 % of Voc. Narrower ones are for curves with a
+step near 0 V, where a shaded substring lets its bypass diode conduct."""
 _KNEE_DROP = 0.05
 """The window of the maximum: where power is within this fraction of the largest. With a
 quartic in I(V) this keeps Pmp within 0.02 % of single-diode curves with fill factor 0.5 to
@@ -104,16 +105,15 @@ def extract(
 ) -> Figures:
     """The figures of one curve from its knots, arrays of shape (n,), n >= 8, in any order.
 
-    `voltage` (V) and `current` (A) are the knots' means, `weight` the pairs averaged into each
-    (1 for a plain point), the sigmas the standard deviations of the means (V, A). `voc_static`
-    (V) is the source's voltage with nothing connected; its standard deviation is taken to be
-    that of a typical knot where it is not given. Without it Voc is extrapolated.
+    `voltage` (V) and `current` (A) are points of the curve, `weight` what each counts for (the
+    pairs that it comes from, 1 for a plain point), the sigmas their standard deviations (V, A).
+    `voc_static` (V) is the source's voltage with nothing connected; its standard deviation is
+    taken to be that of a typical knot where it is not given. Without it Voc is extrapolated.
 
     - Isc: a straight line through the knots of the lowest voltages, carried on to 0 V. Of a
       few windows the widest in which the scatter hides any curvature is used.
-    - Maximum: a local polynomial of degree four in I(V) round the largest power. The mean of a
-      knot that spans a curved piece lies below the curve; its polynomial terms are therefore
-      averaged over the span, which follows from `weight`. Of several maxima the highest counts.
+    - Maximum: a local polynomial of degree four in I(V) round the largest power. Of several
+      maxima the highest counts.
     - Voc without `voc_static`: a parabola V(I) through the knots of the smallest currents.
 
     The standard uncertainties come from the knots' scatter alone, by linear propagation
@@ -197,20 +197,6 @@ class _Knots:
         order = np.argsort(arrays[0], kind="stable")
         return cls(*(array[order] for array in arrays))
 
-    def span(self, values: Floats) -> Floats:
-        """How far `values` run within each knot, shape (n,).
-
-        Pairs come at an even pace, so the border between two knots lies between their means
-        in the ratio of their counts. A plain point (weight 1) spans nothing.
-        """
-        share = self.weight[:-1] / (self.weight[:-1] + self.weight[1:])
-        border = values[:-1] + np.diff(values) * share
-        start = np.concatenate(([2.0 * values[0] - border[0]], border))
-        end = np.concatenate((border, [2.0 * values[-1] - border[-1]]))
-        gaps = np.sqrt(np.maximum(0.0, 1.0 - self.weight**-2))
-        spans: Floats = np.abs(end - start) * gaps
-        return spans
-
     def knee_window(self) -> slice:
         """The knots round the largest power, `_KNEE_DROP` down on both sides."""
         power = self._smooth_power()
@@ -219,8 +205,9 @@ class _Knots:
         while True:
             low = _walk(power, top, -1, (1.0 - drop) * power[top])
             high = _walk(power, top, +1, (1.0 - drop) * power[top])
-            # A quartic has five terms: seven knots leave it something to average.
-            if high - low >= 6 or drop > 0.2:
+            # A quartic has five terms. Six knots leave it little to average, but among few
+            # knots at a sharp knee the seventh may stand far down the curve.
+            if high - low >= 5 or drop > 0.2:
                 break
             drop *= 1.15
         threshold = 1.0 - 0.4 * _KNEE_DROP
@@ -246,9 +233,12 @@ class _Knots:
 
 
 def _walk(values: Floats, start: int, step: int, least: float) -> int:
-    """The last index from `start` on, in direction `step`, before values fall below `least`."""
+    """The last index from `start` on, in direction `step`, that reaches above `least`.
+
+    A knot does so with half of the way to its neighbour before it.
+    """
     index = start
-    while 0 <= index + step < len(values) and values[index + step] >= least:
+    while 0 <= index + step < len(values) and values[index] + values[index + step] >= 2.0 * least:
         index += step
     return index
 
@@ -313,9 +303,9 @@ class _Fit:
         scale = float(np.ptp(x[window])) / 2.0
         if scale <= 0.0:
             raise NoFigures("knots stand on top of each other: no curve can be drawn")
-        columns = _averaged_powers((x[window] - centre) / scale, knots.span(x)[window] / scale)
+        columns = np.vander((x[window] - centre) / scale, degree + 1, increasing=True)
         root = np.sqrt(knots.weight[window] / knots.weight[window].max())
-        pull = np.linalg.pinv(columns[:, : degree + 1] * root[:, None]) * root
+        pull = np.linalg.pinv(columns * root[:, None]) * root
         return cls(knots, window, swapped, centre, scale, pull @ y[window], pull)
 
     def u(self, x: float | Floats) -> float | Floats:
@@ -346,15 +336,6 @@ class _Fit:
         return _Estimate(value, by_current, by_voltage, 0.0, self.knots)
 
 
-def _averaged_powers(u: Floats, span: Floats) -> Floats:
-    """Means of 1, u, u^2, u^3, u^4 over an even spread of width `span`, shape (k, 5)."""
-    second = span**2 / 12.0
-    fourth = span**4 / 80.0
-    cubic = u**3 + 3.0 * u * second
-    quartic = u**4 + 6.0 * u**2 * second + fourth
-    return np.stack([np.ones_like(u), u, u**2 + second, cubic, quartic], axis=1)
-
-
 def _short_circuit(knots: _Knots, voc: float, knee_v: float) -> tuple[_Estimate, float]:
     """Isc by a straight line, and the lowest voltage it rests on."""
     voltage = knots.voltage
@@ -371,6 +352,8 @@ def _short_circuit(knots: _Knots, voc: float, knee_v: float) -> tuple[_Estimate,
     if counts[0] < 3 and voltage[2] < 0.4 * voc:
         counts.insert(0, 3)
     windows = [slice(0, max(2, min(count, straight))) for count in counts]
+    if windows[-1].stop > 3 and voltage[2] > voltage[0]:
+        windows.append(slice(0, 3))
     chosen = next((window for window in windows if not _bends(knots, window)), windows[-1])
     line = _Fit.of(knots, chosen, 1)
     return line.estimate(line.at(0.0), line.powers(0.0)), float(voltage[0])
@@ -390,7 +373,7 @@ def _maximum(knots: _Knots, window: slice) -> tuple[_Estimate, _Estimate, _Estim
     count = window.stop - window.start
     if count < 4:
         raise NoFigures(f"only {count} knots stand near the maximum power; 4 are needed")
-    fit = _Fit.of(knots, window, 4 if count >= 7 else 3 if count >= 5 else 2)
+    fit = _Fit.of(knots, window, 4 if count >= 6 else 3 if count >= 5 else 2)
     v = _top(fit)
     i, slope, bend = fit.at(v), fit.at(v, 1), fit.at(v, 2)
     here, tilt = fit.powers(v), fit.powers(v, 1)

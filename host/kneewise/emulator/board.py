@@ -25,7 +25,7 @@ from collections.abc import Callable
 
 import numpy as np
 
-from kneewise.emulator.converters import CONVERSION_US, Converters, Scaling
+from kneewise.emulator.converters import Converters, Scaling
 from kneewise.emulator.plant import Plant
 from kneewise.emulator.scenario import Scenario
 
@@ -49,8 +49,9 @@ class Board:
     """One board, powered from the moment it is made, on one scenario.
 
     `clock` gives seconds. `record` holds (virtual microseconds, what, level) of every change
-    of a commanded output (`relay`, `bleed_release`, `pulse`: 1 while the wave runs) and of an
-    actual contact (`relay_contact`, `switch_contact`, `bleed_contact`), newest last.
+    of a commanded output (`relay`, `bleed_release`, `zero_input`, `pulse`: 1 while the wave
+    runs) and of an actual contact (`relay_contact`, `switch_contact`, `bleed_contact`), newest
+    last.
     """
 
     def __init__(
@@ -76,7 +77,9 @@ class Board:
         self._boot_us = 0
         self._quiet = False
         self._quiet_count = 0
-        self._levels: dict[str, Level] = {"relay": None, "bleed_release": None, "pulse": None}
+        self._levels: dict[str, Level] = dict.fromkeys(
+            ("relay", "bleed_release", "zero_input", "pulse")
+        )
         self._stop_loop_open = False
         self._anchor()
         self.open_stop_loop(scenario.board.stop_loop_open)
@@ -187,6 +190,13 @@ class Board:
             self._note("bleed_release", level)
             self._plant.bleed_release(level == 1)
 
+    def zero_input(self, level: Level) -> None:
+        """Switch that brings the voltage channel's input to its zero."""
+        self.tick_wall()
+        if self._powered:
+            self._note("zero_input", level)
+            self._converters.voltage_at_zero = level == 1
+
     def pulse(self, us: Level) -> None:
         """Run the make-and-break wave for at most `us` from now; 0 stops it, None lets go.
 
@@ -235,21 +245,30 @@ class Board:
         return int(voltage[0] < REVERSED_V)
 
     def read(self, channel: int, count: int) -> int:
-        """Sum of `count` conversions of one channel, 2 us each; not during a capture."""
+        """Sum of `count` conversions of one channel, 2 us each; not during a capture.
+
+        V and I of SPI converters come as pairs, of which one code is taken.
+        """
         if self._converters.capturing:
             raise RuntimeError("a channel was read while a capture has the converter")
         self.tick_wall()
         plant = self._plant
-        instants = plant.now_us + CONVERSION_US * np.arange(count, dtype=np.float64)
+        conversion_us = self._converters.conversion_us(channel)
+        instants = plant.now_us + conversion_us * np.arange(count, dtype=np.float64)
         with plant.holding():
-            self._jump(CONVERSION_US * count)
+            self._jump(conversion_us * count)
             analogue = plant.sample(instants)[channel]
         return int(self._converters.codes(channel, analogue).sum(dtype=np.int64))
 
     # -- capture and supervision ----------------------------------------------------------
 
+    def use_converters(self, kind: int, pair_us: int) -> int:
+        """Measure V and I with these from now on; 0 where the board has none such."""
+        self.tick_wall()
+        return int(self._converters.use(kind, pair_us))
+
     def capture_start(self) -> None:
-        """Pairs at 250 000/s from now on, the first voltage conversion at once."""
+        """Pairs from now on, at 250 000/s where nothing else was asked for; the first at once."""
         self.tick_wall()
         self._converters.start(self._plant.now_us)
 
@@ -352,6 +371,8 @@ _CALLS: tuple[tuple[str, _Call], ...] = (
     ("supervision_ticks", lambda board, a, b: board.supervision_ticks()),
     ("trips", lambda board, a, b: board.trips()),
     ("supervise_end", lambda board, a, b: board.supervise_end()),
+    ("use_converters", lambda board, a, b: board.use_converters(a, b)),
+    ("zero_input", lambda board, a, b: board.zero_input(_level(a))),
 )
 OPS: dict[str, int] = {name: number for number, (name, _) in enumerate(_CALLS, start=1)}
 """Number of each request, for the emulated board file on the other side of a byte pair."""

@@ -26,6 +26,8 @@ from kneewise.link.port import Port, open_port
 
 CHIP_DEVICE_ID = bytes(8)  # the emulated flash chip has no id of its own
 CURVE_POINTS = 2001
+# What the two SPI converters at the chip's pins keep to: slower than a fast part.
+SPI_PARTS = {"valid_ns": 25, "convert_ns": 700}
 START_MS = 1500  # MicroPython, then the compiled firmware
 
 
@@ -82,6 +84,8 @@ def plant_description(scenario: Scenario, scaling: Scaling) -> dict[str, Any]:
             scaling.capacitor_zero_code,
         ],
         "noise_code": board.adc_noise_codes,
+        "wide_code": board.wide_code_lsb,
+        "spi": None if board.converter == "internal" else SPI_PARTS,
         "seed": scenario.seed,
         "stop_loop": 0 if board.stop_loop_open else 1,
         "reversed": 1 if board.leads_reversed else 0,

@@ -1,8 +1,8 @@
 """The emulated board's analogue converters: codes, captures and the 1 kHz supervision.
 
-Comes in: the plant's volts and amperes, and how far virtual time goes. Goes out: ADC codes
-as the RP2040's converter would give them. Pins, power and the wall clock do not belong here;
-`board.py` has them.
+Comes in: the plant's volts and amperes, and how far virtual time goes. Goes out: codes as the
+RP2040's own converter would give them, or a pair of SPI converters of 16 bits. Pins, power and
+the wall clock do not belong here; `board.py` has them.
 """
 
 from __future__ import annotations
@@ -21,8 +21,10 @@ Codes = npt.NDArray[np.uint16]
 VOLTAGE, CURRENT, CAPACITOR = 0, 1, 2
 TRIP_STOP_LOOP, TRIP_OVER_VOLTAGE, TRIP_OVER_CURRENT = 1, 2, 4
 
-CODE_MAX = 4095
-CONVERSION_US = 2
+INTERNAL, SPI16 = 1, 2
+KINDS = {"internal": INTERNAL, "spi16": SPI16}
+
+CONVERSION_US = 2  # of the RP2040's own converter
 PAIR_US = 2 * CONVERSION_US
 TICK_US = 1000
 UNTAKEN_PAIRS = 16_383  # four times the firmware's ring; the oldest go first
@@ -45,24 +47,48 @@ class _Channel:
     zero_code: float
     codes_per_unit: float
     """Gain error included."""
+    code_max: int = 4095
+    wide_code_lsb: float = 1.0
 
     def codes(self, analogue: Floats, noise: Floats) -> Codes:
-        exact = self.zero_code + analogue * self.codes_per_unit + noise
-        return np.clip(np.floor(exact + 0.5), 0, CODE_MAX).astype(np.uint16)
+        exact = self.zero_code + analogue * self.codes_per_unit + noise + 0.5
+        inside = np.clip(exact, 0.0, np.nextafter(self.code_max + 1.0, 0.0))
+        if self.wide_code_lsb == 1.0:
+            return np.floor(inside).astype(np.uint16)
+        return _widened(inside, self.wide_code_lsb).astype(np.uint16)
+
+
+def _widened(exact: Floats, wide: float) -> Floats:
+    """Codes of a converter with the RP2040's wide codes: 511, 1535, 2559, 3583 are `wide` LSB
+    wide, all others equally narrower, and the range as a whole stays (erratum RP2040-E11).
+
+    `exact`: in LSB from the range's lower end, 0 <= exact < 4096.
+    """
+    narrow = (1024.0 - wide) / 1023.0
+    part = exact % 1024.0
+    past = np.floor((part - 511.0 * narrow - wide) / narrow)
+    above = 512.0 + np.minimum(past, 511.0)
+    inside = np.where(past >= 0.0, above, np.minimum(np.floor(part / narrow), 511.0))
+    return np.asarray(exact - part + inside)
 
 
 def _channels(scaling: Scaling, scenario: Scenario) -> tuple[_Channel, _Channel, _Channel]:
     s, b = scaling, scenario.board
+    kind = {"wide_code_lsb": b.wide_code_lsb} if b.converter == "internal" else {"code_max": 65535}
     return (
         _Channel(
             s.voltage_zero_code + b.voltage_offset_codes,
             (1.0 + b.voltage_gain_error) / s.voltage_v_per_code,
+            **kind,
         ),
         _Channel(
             s.current_zero_code + b.current_offset_codes,
             (1.0 + b.current_gain_error) / s.current_a_per_code,
+            **kind,
         ),
-        _Channel(s.capacitor_zero_code, 1.0 / s.capacitor_v_per_code),
+        _Channel(
+            s.capacitor_zero_code, 1.0 / s.capacitor_v_per_code, wide_code_lsb=b.wide_code_lsb
+        ),
     )
 
 
@@ -81,6 +107,7 @@ class Converters:
 
     def __init__(self, scenario: Scenario, scaling: Scaling) -> None:
         self._channels = _channels(scaling, scenario)
+        self._kind = KINDS[scenario.board.converter]
         self._noise_codes = scenario.board.adc_noise_codes
         self._seed = scenario.seed
         self._idle_random = np.random.default_rng([self._seed, 0])
@@ -94,6 +121,16 @@ class Converters:
         self._untaken = bytearray()
         self._newest = (0, 0)
         self._watch = _Supervision(0, 0, 0, running=False)
+        self._pair_us = PAIR_US
+        self.voltage_at_zero = False
+        """The voltage channel's input is at its zero, not at the source."""
+
+    def use(self, kind: int, pair_us: int) -> bool:
+        """Take V and I from these from now on; False where the board has no such converters."""
+        if kind != self._kind or (kind == INTERNAL and pair_us != PAIR_US):
+            return False
+        self._pair_us = pair_us
+        return True
 
     # -- noise ----------------------------------------------------------------------------
 
@@ -109,8 +146,15 @@ class Converters:
         """One draw for each conversion, in their order: how they are cut makes no difference."""
         return self._random.standard_normal(count) * self._noise_codes
 
+    def conversion_us(self, channel: int) -> int:
+        """From one conversion to the next where one channel alone is read."""
+        internal = channel == CAPACITOR or self._kind == INTERNAL
+        return CONVERSION_US if internal else self._pair_us
+
     def codes(self, channel: int, analogue: Floats) -> Codes:
         """Convert one channel at instants already sampled."""
+        if channel == VOLTAGE and self.voltage_at_zero:
+            analogue = np.zeros_like(analogue)
         return self._channels[channel].codes(analogue, self._noise(len(analogue)))
 
     # -- capture --------------------------------------------------------------------------
@@ -125,7 +169,10 @@ class Converters:
         return self._pairs
 
     def start(self, now_us: int) -> None:
-        """Pairs from now on, the first voltage conversion at once."""
+        """Pairs from now on, the first voltage conversion at once.
+
+        A pair counts as made when the next begins.
+        """
         self._start_us = now_us
         self._pairs = 0
         self._untaken.clear()
@@ -154,12 +201,15 @@ class Converters:
         """Those complete by `upto_us`: shape (n, 2), voltage first."""
         count = 0
         if self._start_us is not None:
-            count = (upto_us - self._start_us) // PAIR_US - self._pairs
+            count = (upto_us - self._start_us) // self._pair_us - self._pairs
         made = np.empty((count, 2), dtype="<u2")
         if self._start_us is None or not count:
             return made
-        start_us = self._start_us + PAIR_US * self._pairs
-        voltage, current = plant.sample_pairs(start_us, count, PAIR_US, CONVERSION_US)
+        start_us = self._start_us + self._pair_us * self._pairs
+        skew_us = CONVERSION_US if self._kind == INTERNAL else 0
+        voltage, current = plant.sample_pairs(start_us, count, self._pair_us, skew_us)
+        if self.voltage_at_zero:
+            voltage = np.zeros_like(voltage)
         noise = self._noise(2 * count)
         made[:, 0] = self._channels[VOLTAGE].codes(voltage, noise[0::2])
         made[:, 1] = self._channels[CURRENT].codes(current, noise[1::2])
@@ -194,7 +244,7 @@ class Converters:
             watch.ticks += 1
             voltage, current = self._newest
             if self._start_us is not None:
-                newest = (due_us - self._start_us) // PAIR_US - 1 - first
+                newest = (due_us - self._start_us) // self._pair_us - 1 - first
                 if newest >= 0:
                     voltage, current = (int(code) for code in made[newest])
             if stop_loop_open:

@@ -14,10 +14,10 @@ import shutil
 import subprocess
 import sys
 import tempfile
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from concurrent.futures import ThreadPoolExecutor
 from contextlib import contextmanager
-from functools import cache
+from functools import cache, wraps
 from pathlib import Path
 from types import ModuleType
 from typing import Any
@@ -29,7 +29,10 @@ from kneewise.emulator.board import OPS
 # What the wire's fields and hazards mean: for people, not for the firmware's memory.
 _PROSE = ("hazards.py", "meanings.py", "spec.py")
 # Written in the RP2040's own instructions, or for its modules.
-_ARM_ONLY = ("fold_thumb.py", "coder_thumb.py", "hal_rp2.py", "pulse_pio.py", "usb_serial.py")
+_ARM_ONLY = (
+    *("plane_thumb.py", "coder_thumb.py", "usb_serial.py", "pulse_pio.py"),
+    *("hal_rp2.py", "ring_rp2.py", "adc_rp2.py", "spi_pair.py"),
+)
 _ONBOARD = Path(__file__).parent / "onboard"
 _ONBOARD_FILES = ("hal_emulated.py", "emulated_board.py", "machine.py")
 
@@ -92,15 +95,19 @@ def firmware_module(name: str) -> ModuleType:
         return importlib.import_module(name)
 
 
+class _Words(int):
+    """The type of a native function's pointer to words."""
+
+
 @contextmanager
 def _as_micropython() -> Iterator[None]:
     paths = [str(device_folder()), str(_ONBOARD)]
-    pointers = ("ptr8", "ptr16", "ptr32")
+    pointers = {"ptr8": int, "ptr16": int, "ptr32": _Words}
     before = sys.modules.get("micropython")
     sys.modules["micropython"] = _stand_in()
     sys.path[:0] = paths
-    for pointer in pointers:
-        setattr(builtins, pointer, int)
+    for pointer, kind in pointers.items():
+        setattr(builtins, pointer, kind)
     try:
         yield
     finally:
@@ -119,6 +126,24 @@ def _stand_in() -> ModuleType:
         return thing
 
     module = ModuleType("micropython")
-    for name in ("const", "native", "viper"):
-        setattr(module, name, same)
+    module.const = module.native = same  # type: ignore[attr-defined]
+    module.viper = _of_words  # type: ignore[attr-defined]
     return module
+
+
+def _of_words(function: Callable[..., Any]) -> Callable[..., Any]:
+    """As native code has it: bytes given for a ptr32 are words of 32 bits."""
+    kinds = function.__annotations__.values()
+    words = [place for place, kind in enumerate(kinds) if kind is _Words]
+    if not words:
+        return function
+
+    @wraps(function)
+    def call(*given: Any) -> Any:
+        arguments = list(given)
+        for place in words:
+            if isinstance(arguments[place], bytearray):
+                arguments[place] = memoryview(arguments[place]).cast("I")
+        return function(*arguments)
+
+    return call

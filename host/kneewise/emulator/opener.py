@@ -70,22 +70,29 @@ def connector(tracer: Emulated) -> Callable[[], Port]:
     return lambda: open_port(tracer.port_name)
 
 
-@lru_cache(maxsize=1)
-def _reference() -> BoardProfile:
-    return BoardProfile.load(device_folder() / "profiles" / "reference.toml")
+PROFILES = {"internal": "reference.toml", "spi16": "spi16.toml"}
+
+
+@lru_cache(maxsize=len(PROFILES))
+def _ready_profile(converter: str) -> BoardProfile:
+    return BoardProfile.load(device_folder() / "profiles" / PROFILES[converter])
 
 
 def profile_for(scenario: Scenario) -> BoardProfile:
-    """The reference profile, with the capacitor and bleed that the scenario has."""
-    reference = _reference()
-    capacitor = reference.capacitor.model_copy(
+    """The ready profile for the scenario's converters, with its wide codes, capacitor and bleed."""
+    ready = _ready_profile(scenario.board.converter)
+    capacitor = ready.capacitor.model_copy(
         update={
             "capacitance_f": scenario.bank.capacitance_f,
             "bleed_ohm": scenario.bank.bleed_ohm,
             "permanent_bleeder_ohm": scenario.bank.permanent_bleeder_ohm,
         }
     )
-    return reference.model_copy(update={"capacitor": capacitor})
+    converter = ready.converter
+    if converter.kind == "internal":
+        wide = {"wide_code_lsb": scenario.board.wide_code_lsb}
+        converter = converter.model_copy(update=wide)
+    return ready.model_copy(update={"capacitor": capacitor, "converter": converter})
 
 
 def scaling_of(profile: BoardProfile) -> Scaling:

@@ -25,7 +25,7 @@ from kneewise.emulator.source import Floats, Source, solve_diode
 
 Notice = Callable[[int, str, int], None]
 
-HISTORY_US = 100  # how far back `sample` may look; a pair in progress is 4 us old
+HISTORY_US = 100  # how far back `sample` may look; a pair in progress is at most so old
 
 
 @dataclass(slots=True)

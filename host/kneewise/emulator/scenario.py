@@ -12,7 +12,7 @@ import tomllib
 from collections.abc import Mapping
 from importlib import resources
 from pathlib import Path
-from typing import Any, Self
+from typing import Any, Literal, Self, get_args, get_origin
 
 from pydantic import BaseModel, ConfigDict, Field, ValidationError, model_validator
 from pydantic.fields import FieldInfo
@@ -85,6 +85,8 @@ class LoadSection(_Section):
 class BoardSection(_Section):
     """How the board's own readings are off, and which faults it has."""
 
+    converter: Literal["internal", "spi16"] = "internal"
+    wide_code_lsb: float = Field(default=9.0, ge=1.0, le=32.0)
     adc_noise_codes: float = Field(default=1.2, ge=0.0, le=200.0)
     voltage_gain_error: float = Field(default=0.0, ge=-0.5, le=0.5)
     current_gain_error: float = Field(default=0.0, ge=-0.5, le=0.5)
@@ -219,6 +221,8 @@ def _fields(place: tuple[int | str, ...]) -> dict[str, FieldInfo]:
 def _allowed(name: str, info: FieldInfo) -> str:
     if name in _SECTIONS:
         return f"a section [{name}]"
+    if get_origin(info.annotation) is Literal:
+        return " or ".join(f'"{choice}"' for choice in get_args(info.annotation))
     kind = next(text for kind, text in _KINDS.items() if info.annotation in (kind, kind | None))
     limits = [
         text.format(getattr(rule, limit))

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -11,11 +12,15 @@ from kneewire.messages import Message
 from kneewise.errors import TrustError
 from kneewise.instrument.checks import check_trace
 from kneewise.instrument.convert import convert
+from kneewise.instrument.full_rate import FullRatePairs
 from kneewise.instrument.profile import Scales
 from kneewise.instrument.sweep import Reassembly
-from kneewise.instrument.trace import Integrity, Reading, Trace
+from kneewise.instrument.trace import Integrity, RawPairs, Reading, Trace
 
 FEWEST_KNOTS = 8
+# Why a sweep without a curve ended, where the source is what failed: a short closed limit may
+# be over before the device calls it dark.
+NEVER_CONDUCTED = ("no current", "time limit")
 
 
 # What a profile must hold before a sweep can be converted.
@@ -30,7 +35,9 @@ SCALES = (
 def assemble(
     manifest: Message,
     reassembly: Reassembly,
+    pairs: RawPairs,
     *,
+    asked: int | None,
     rung: str,
     device: dict[str, Any],
     profile: dict[str, Any],
@@ -42,6 +49,7 @@ def assemble(
 ) -> Trace:
     """The trace of a whole sweep. `device` is its hello, `profile` the values of its record.
 
+    `pairs` are those kept one by one, `asked` how many were asked for, where that is known.
     TrustError where there are too few knots to speak of a curve.
     """
     values = manifest.values
@@ -53,12 +61,15 @@ def assemble(
             found=f"{len(raw)} knots (ended: {end_reason})",
             expected="a curve",
             next_step="check that the source is lit and connected, then sweep again"
-            if end_reason == "no current"
+            if end_reason in NEVER_CONDUCTED
             else "clear what ended the sweep, then sweep again",
         )
     scaled = all(profile.get(name) for name in SCALES)
     ordered = raw.time_us[0] >= values["conducting_us"] and bool((np.diff(raw.time_us) > 0).all())
-    if not scaled or not values["conversions"] or not raw.pairs.all() or not ordered:
+    counted = bool(
+        values["conversions"] and values["pair_ns"] and values["bin_pairs"] and raw.pairs.all()
+    )
+    if not scaled or not counted or not ordered:
         raise TrustError(
             f"sweep {values['sweep_id'].hex()[:8]}",
             found="no valid profile on the device"
@@ -71,8 +82,18 @@ def assemble(
     scales = Scales.of(profile)
     static = Reading(values["voltage_sum"], values["conversions"])
     zero = Reading(values["current_sum"], values["conversions"])
+    zero_voltage = None
+    if values["zero_conversions"]:
+        zero_voltage = Reading(values["voltage_zero_sum"], values["zero_conversions"])
     si = convert(
-        raw, scales, zero, conducting_us=values["conducting_us"], skew_ns=values["skew_ns"]
+        raw,
+        scales,
+        static_voltage=static,
+        zero_current=zero,
+        zero_voltage=zero_voltage,
+        pair_ns=values["pair_ns"],
+        skew_ns=values["skew_ns"],
+        bin_pairs=values["bin_pairs"],
     )
     integrity = Integrity(
         knots=values["knots"],
@@ -81,9 +102,22 @@ def assemble(
         blocks_resent=reassembly.resent,
         ring_overruns=values["ring_overruns"],
         manifest_crc_ok=reassembly.crc_ok(),
+        bounces=values["bounces"],
     )
+    full_rate = None
+    if asked or len(pairs):
+        full_rate = FullRatePairs(
+            raw=pairs,
+            asked=asked,
+            pair_ns=values["pair_ns"],
+            skew_ns=values["skew_ns"],
+            scales=replace(
+                scales,
+                voltage_zero_code=si.voltage_zero_code,
+                current_zero_code=si.current_zero_code,
+            ),
+        )
     residual_v = scales.capacitor(values["residual_sum"] / max(values["residual_conversions"], 1))
-    voc_static = scales.voltage(static.code)
     return Trace(
         trace_id=values["sweep_id"].hex(),
         rung=rung,
@@ -108,7 +142,7 @@ def assemble(
         weight=si.weight,
         voltage_sigma=si.voltage_sigma,
         current_sigma=si.current_sigma,
-        voc_static=voc_static,
+        voc_static=si.voc_static,
         residual_capacitor_v=residual_v,
         integrity=integrity,
         checks=check_trace(
@@ -117,13 +151,23 @@ def assemble(
             si.current,
             si.time,
             si.voltage_sigma,
-            voc_static=voc_static,
+            voc_static=si.voc_static,
             residual_v=residual_v,
+            conducting_us=values["conducting_us"],
+            pair_ns=values["pair_ns"],
             end_reason=end_reason,
             integrity=integrity,
             conversions_lost=bool(values["conversions_lost"]),
             scales=scales,
+            zero_off=(
+                si.voltage_zero_code - scales.voltage_zero_code if zero_voltage else None,
+                si.current_zero_code - scales.current_zero_code,
+            ),
+            bounce_ms=profile.get("bounce_ms", 0),
+            pairs=pairs,
         ),
         scenario=scenario,
         truth=truth,
+        zero_voltage=zero_voltage,
+        full_rate=full_rate,
     )

@@ -4,11 +4,13 @@ from __future__ import annotations
 
 import numpy as np
 
+from kneewise.curve.unbend import Cells
 from kneewise.instrument.profile import Scales
-from kneewise.instrument.trace import Check, Floats, Integrity, RawKnots
+from kneewise.instrument.trace import Check, Codes, Floats, Integrity, RawKnots, RawPairs
 
-RAIL_CODE = 4090
+RAIL_CODES = 5 / 4096  # of the range, below its last code
 STATIC_LIMIT = 0.005  # of Voc, between the static reading and the end of the curve
+ZERO_CODES = 24 / 4096  # of the range, between a zero and the profile's, as on the device
 MONOTONIC_SIGMAS = 5.0
 # Capacitance by charge balance refutes a gross fault only: parts are +-20 % new, and age.
 CAPACITANCE_LIMIT = 0.35
@@ -23,14 +25,24 @@ def check_trace(
     *,
     voc_static: float,
     residual_v: float,
+    conducting_us: int,
+    pair_ns: int,
     end_reason: str,
     integrity: Integrity,
     conversions_lost: bool,
     scales: Scales,
+    zero_off: tuple[float | None, float],
+    bounce_ms: int,
+    pairs: RawPairs,
 ) -> tuple[Check, ...]:
-    """All checks of one sweep, in the order in which people read them."""
+    """All checks of one sweep, in the order in which people read them.
+
+    `zero_off`: codes between the zeros read and the profile's, of voltage (None where its was
+    not read) and current.
+    """
     return (
         _whole(raw, integrity),
+        *_pairs_add_up(raw, pairs),
         Check(
             "every conversion in its place",
             integrity.ring_overruns == 0 and not conversions_lost,
@@ -39,7 +51,10 @@ def check_trace(
             "none: a lost one swaps voltage and current",
         ),
         Check("ended by itself", end_reason == "complete", end_reason, "complete"),
-        _within_range(raw),
+        *_closed_for_good(integrity.bounces, bounce_ms),
+        _zeros(*zero_off, scales.code_max),
+        _evenly_timed(raw, conducting_us, pair_ns),
+        _within_range(raw, scales.code_max),
         _rising(voltage, voltage_sigma),
         _ends_at_voc(voltage, voc_static),
         _charge_balance(voltage, current, time, scales),
@@ -62,15 +77,83 @@ def _whole(raw: RawKnots, integrity: Integrity) -> Check:
     )
 
 
-def _within_range(raw: RawKnots) -> Check:
+def _pairs_add_up(raw: RawKnots, pairs: RawPairs) -> list[Check]:
+    """Knots that lie within the stretch are sums over its pairs, code by code."""
+    if not len(pairs):
+        return []
+    after = np.cumsum(raw.pairs.astype(np.int64))
+    begin, end = after - raw.pairs.astype(np.int64) - pairs.first, after - pairs.first
+    within = (begin >= 0) & (end <= len(pairs))
+
+    def sums(codes: Codes) -> np.ndarray[tuple[int], np.dtype[np.int64]]:
+        up_to = np.concatenate(([0], np.cumsum(codes, dtype=np.int64)))
+        return np.asarray(up_to[end[within]] - up_to[begin[within]])
+
+    alike = (sums(pairs.voltage) == raw.voltage_sum[within].astype(np.int64)) & (
+        sums(pairs.current) == raw.current_sum[within].astype(np.int64)
+    )
+    last = pairs.first + len(pairs)
+    return [
+        Check(
+            "pairs one by one add up to their knots",
+            bool(alike.all()) and last <= int(after[-1]),
+            f"{np.count_nonzero(alike)} knots of the {len(alike)} within the stretch, "
+            f"pairs up to {last} of {int(after[-1])}",
+            "each knot within it the sum over its pairs, and no pair behind the last knot",
+        )
+    ]
+
+
+def _closed_for_good(bounces: int, bounce_ms: int) -> list[Check]:
+    """Refuses nothing: what came before the last closing is no part of the curve."""
+    if not bounces and not bounce_ms:
+        return []
+    should = f"bounces are over within {bounce_ms} ms" if bounce_ms else "a contact without bounce"
+    return [
+        Check(
+            "contact closed for good",
+            True,
+            f"opened again {bounces} times before, which is cut off"
+            if bounces
+            else "without opening again",
+            f"{should}, by the profile",
+        )
+    ]
+
+
+def _zeros(voltage_off: float | None, current_off: float, code_max: int) -> Check:
+    most = ZERO_CODES * (code_max + 1)
+    read = "not read" if voltage_off is None else f"{voltage_off:+.1f} codes"
+    return Check(
+        "zeros near the profile's",
+        abs(voltage_off or 0.0) <= most and abs(current_off) <= most,
+        f"voltage {read}, current {current_off:+.1f} codes off",
+        f"within {most:.0f} codes",
+    )
+
+
+def _evenly_timed(raw: RawKnots, conducting_us: int, pair_ns: int) -> Check:
+    """Knots are taken apart by the counts of their pairs, so their times must agree with them."""
+    told = (raw.time_us - np.uint64(conducting_us)).astype(np.float64)
+    off = float(np.abs(told - Cells.of(raw.pairs).middles * pair_ns * 1e-3).max())
+    return Check(
+        "times agree with the counts of pairs",
+        off < 1.5,
+        f"at most {off:.1f} us off",
+        "whole microseconds apart from rounding",
+    )
+
+
+def _within_range(raw: RawKnots, code_max: int) -> Check:
+    rail = code_max - RAIL_CODES * (code_max + 1)
     highest = max(
         float((raw.voltage_sum / raw.pairs).max()), float((raw.current_sum / raw.pairs).max())
     )
     return Check(
         "within the converter's range",
-        highest < RAIL_CODE,
+        highest < rail,
         f"highest mean code {highest:.0f}",
-        f"below {RAIL_CODE}",
+        f"below {rail:.0f}",
     )
 
 

@@ -10,9 +10,9 @@ import tomllib
 from dataclasses import dataclass
 from datetime import date
 from pathlib import Path
-from typing import Any, Literal
+from typing import Any, Literal, Self
 
-from pydantic import BaseModel, ConfigDict, Field, ValidationError
+from pydantic import BaseModel, ConfigDict, Field, ValidationError, model_validator
 
 from kneewire.profile_record import FORMAT, pack_profile, unpack_profile
 from kneewise.errors import ProfileError
@@ -24,11 +24,29 @@ class _Section(BaseModel):
     model_config = ConfigDict(frozen=True, extra="forbid")
 
 
+class ConverterSection(_Section):
+    kind: Literal["internal", "spi16"]
+    pair_us: int = Field(ge=2, le=100)
+    wide_code_lsb: float = Field(ge=1, le=32)
+    spi_clock_mhz: float = Field(ge=0, le=60)
+    spi_convert_us: float = Field(ge=0, le=60)
+
+    @model_validator(mode="after")
+    def _of_its_kind(self) -> Self:
+        spi = (self.spi_clock_mhz, self.spi_convert_us)
+        if self.kind == "internal" and (self.pair_us != 4 or any(spi)):
+            raise ValueError("internal goes with pair_us = 4 and zeros for spi_")
+        if self.kind == "spi16" and (not all(spi) or self.wide_code_lsb != 1):
+            raise ValueError("spi16 needs spi_clock_mhz and spi_convert_us, and wide_code_lsb = 1")
+        return self
+
+
 class VoltageSection(_Section):
     per_code_v: float = Field(gt=0, le=1.0)
     zero_code: float = Field(ge=0, le=4095)
     delay_us: float = Field(ge=0, le=1000)
     divider_ohm: float = Field(ge=1e3, le=1e9)
+    zero_switch: bool
     lead_ohm: float = Field(ge=0, le=100)
 
 
@@ -51,6 +69,7 @@ class TimingSection(_Section):
     relay_release_ms: int = Field(ge=1, le=200)
     bleed_operate_ms: int = Field(ge=1, le=200)
     bleed_release_ms: int = Field(ge=1, le=200)
+    bounce_ms: int = Field(ge=0, le=20)
     dead_time_ms: int = Field(ge=20, le=1000)
 
 
@@ -79,6 +98,7 @@ class BoardProfile(_Section):
     device_id: str = Field(pattern=r"^([0-9a-f]{16})?$")
     hazard_class: Literal["A", "B"]
     contact: Literal["relay+switch", "relay"]
+    converter: ConverterSection
     voltage: VoltageSection
     current: CurrentSection
     capacitor: CapacitorSection
@@ -123,6 +143,12 @@ class BoardProfile(_Section):
             "device_id": bytes.fromhex(self.device_id) or device_id or bytes(8),
             "hazard_class": 1 if self.hazard_class == "A" else 2,
             "contact": 1 if self.contact == "relay+switch" else 2,
+            "converter": 1 if self.converter.kind == "internal" else 2,
+            "pair_us": self.converter.pair_us,
+            "spi_clock_khz": round(self.converter.spi_clock_mhz * 1e3),
+            "spi_convert_ns": round(self.converter.spi_convert_us * 1e3),
+            "wide_code_x16": round(self.converter.wide_code_lsb * 16),
+            "zero_switch": int(self.voltage.zero_switch),
             "voltage_nv_per_code": round(self.voltage.per_code_v * 1e9),
             "voltage_zero_x16": round(self.voltage.zero_code * 16),
             "current_na_per_code": round(self.current.per_code_a * 1e9),
@@ -142,6 +168,7 @@ class BoardProfile(_Section):
             "relay_release_ms": timing.relay_release_ms,
             "bleed_operate_ms": timing.bleed_operate_ms,
             "bleed_release_ms": timing.bleed_release_ms,
+            "bounce_ms": timing.bounce_ms,
             "dead_time_ms": timing.dead_time_ms,
             "safe_mv": round(limits.safe_v * 1e3),
             "start_permyriad": round(limits.start_percent_of_voc * 100),
@@ -172,6 +199,9 @@ class Scales:
     lead_ohm: float
     capacitance_f: float
     safe_v: float
+    code_max: int
+    wide_code_lsb: float
+    """Width of the wide codes; 1 for a converter that has none."""
 
     @classmethod
     def of(cls, values: dict[str, Any]) -> Scales:
@@ -188,6 +218,8 @@ class Scales:
             lead_ohm=values["lead_mohm"] * 1e-3,
             capacitance_f=values["capacitance_nf"] * 1e-9,
             safe_v=values["safe_mv"] * 1e-3,
+            code_max=4095 if values["converter"] == 1 else 65535,
+            wide_code_lsb=values["wide_code_x16"] / 16,
         )
 
     def voltage(self, code: float) -> float:

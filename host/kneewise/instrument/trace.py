@@ -9,15 +9,19 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import cached_property
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
 
 from kneewise.curve.figures import Figures, extract
 
+if TYPE_CHECKING:
+    from kneewise.instrument.full_rate import FullRatePairs
+
 Floats = npt.NDArray[np.float64]
 Counts = npt.NDArray[np.uint64]
+Codes = npt.NDArray[np.uint16]
 
 
 REPLAY = "replay"
@@ -52,6 +56,21 @@ class RawKnots:
 
 
 @dataclass(frozen=True, slots=True)
+class RawPairs:
+    """Pairs kept one by one, as measured: codes in arrays of shape (n,), uint16.
+
+    `first`: number of the first of them, counted from the first pair of the first knot.
+    """
+
+    first: int
+    voltage: Codes
+    current: Codes
+
+    def __len__(self) -> int:
+        return len(self.voltage)
+
+
+@dataclass(frozen=True, slots=True)
 class Reading:
     """A mean of several conversions: `code_sum` over `conversions`."""
 
@@ -83,6 +102,8 @@ class Integrity:
     blocks_resent: int
     ring_overruns: int
     manifest_crc_ok: bool
+    bounces: int = 0
+    """Times that the contact opened again after it first conducted; the curve begins behind."""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -90,8 +111,9 @@ class Trace:
     """One I-V trace.
 
     `voltage` (V), `current` (A), `time` (s since the contact began to conduct) and `weight`
-    (pairs averaged) have shape (n,). `voltage_sigma` and `current_sigma` are the standard
-    deviations of each knot's mean from scatter alone.
+    (pairs averaged) have shape (n,). They are points of the curve at the knots' middles, not
+    means over them: see `kneewise.instrument.convert`. `voltage_sigma` and `current_sigma` are
+    their standard deviations from scatter alone.
     """
 
     trace_id: str
@@ -126,6 +148,13 @@ class Trace:
     """Where the trace is emulated and the scenario is known: its whole content."""
     truth: dict[str, float] | None = None
     """isc, voc, imp, vmp, pmp, ff of the emulated source itself; None for a real one."""
+    zero_voltage: Reading | None = None
+    """Voltage codes just before closing, with the channel's input at its zero; None where the
+    board cannot bring it there: the profile's zero was taken then."""
+    full_rate: FullRatePairs | None = None
+    """Pairs of one stretch, kept one by one; None where none were asked for."""
+    scout: Trace | None = None
+    """The coarse sweep before this one that steered it, if there was one."""
 
     @property
     def sound(self) -> bool:

@@ -9,7 +9,6 @@ from __future__ import annotations
 import logging
 import secrets
 from collections.abc import Callable
-from datetime import timedelta
 from pathlib import Path
 from types import TracebackType
 from typing import Self, TypeVar
@@ -23,13 +22,23 @@ from kneewise.errors import (
     RefusedError,
     TrustError,
 )
+from kneewise.instrument.arming import arm
 from kneewise.instrument.assemble import assemble
+from kneewise.instrument.bled import wait_bled
+from kneewise.instrument.full_rate import NO_WINDOW, FullRate, Window
 from kneewise.instrument.opened import Opened, open_target
 from kneewise.instrument.profile import read_record
-from kneewise.instrument.status import Status, fault_of, status_of
-from kneewise.instrument.sweep import Reassembly, fetch
+from kneewise.instrument.scout import (
+    SCOUT_KNOTS,
+    maximum_s,
+    steered_limit_s,
+    unusable,
+    with_scout,
+)
+from kneewise.instrument.status import Status, status_of
+from kneewise.instrument.sweep import fetch, fetch_raw
+from kneewise.instrument.timing import probes_of, utc_of
 from kneewise.instrument.trace import Trace, label_of
-from kneewise.link.clock import Probe, estimate
 from kneewise.link.frames import FrameLog
 from kneewise.link.port import Port
 from kneewise.link.recording import Recorder
@@ -39,11 +48,6 @@ from kneewise.link.session import Session
 log = logging.getLogger(__name__)
 log.addHandler(logging.NullHandler())
 
-CLOCK_PROBES = 4
-PROBE_TRIES = 40
-BLEED_S = 60.0
-FAULT_BLEED_S = 5.0
-SAFE_TO_SHOW_V = 1.0  # in a fault, readings are waited for down to here
 REJOIN_S = 20.0
 NOTICE_S = 5.0
 MANIFEST_S = 10.0
@@ -170,37 +174,79 @@ class Tracer:
         *,
         knots: int = 96,
         limit_s: float = 10.0,
+        full_rate: FullRate | None = None,
+        scout: bool = False,
         keep: Keep | None = None,
         progress: Callable[[str], None] = lambda stage: None,
     ) -> Trace:
         """One sweep: arm, fire, capture, bleed, fetch.
 
         `knots`: 16 to 512 points. `limit_s`: longest time the contact may be closed.
+        `full_rate`: a stretch whose pairs are kept one by one, in `Trace.full_rate`. `scout`:
+        sweep twice, coarsely first; the scout steers where the pairs of the other are kept (about
+        its maximum power, where `full_rate` names no start) and how long its contact may be
+        closed, a check compares the two, and the scout is in `Trace.scout`.
         `keep` is given the trace before the device is told that it may forget it; what it
         raises leaves the sweep held. `progress` is told each stage.
 
-        Raises RefusedError, DeviceFaultError, LinkError, OutcomeUnknownError, TrustError.
+        Raises UsageError, RefusedError, DeviceFaultError, LinkError, OutcomeUnknownError,
+        TrustError; with a scout that is not sound the last, after `keep` was given the scout.
         """
+        if full_rate is not None:
+            full_rate.check(self.profile, limit_s)
+            scout = scout or full_rate.start_s is None
         try:
-            return self._sweep(knots, limit_s, keep, progress)
+            if scout:
+                return self._scouted(knots, limit_s, full_rate or FullRate(), keep, progress)
+            window = NO_WINDOW if full_rate is None else full_rate.window(self.profile)
+            return self._sweep(knots, limit_s, window, keep, progress)
         except KeyboardInterrupt:
             self._session.abort()
             raise
 
+    def _scouted(
+        self,
+        knots: int,
+        limit_s: float,
+        full_rate: FullRate,
+        keep: Keep | None,
+        progress: Callable[[str], None],
+    ) -> Trace:
+        """A scout sweep, and the one that it steers."""
+
+        def keep_unusable(trace: Trace) -> None:
+            if keep is not None and unusable(trace) is not None:
+                keep(trace)
+
+        scout = self._sweep(
+            SCOUT_KNOTS,
+            limit_s,
+            NO_WINDOW,
+            keep_unusable,
+            lambda stage: progress(f"scout: {stage}"),
+        )
+        error = unusable(scout)
+        if error is not None:
+            raise error
+        window = full_rate.window(self.profile, maximum_s(scout))
+        limit_s = steered_limit_s(scout, limit_s, self.profile)
+        return self._sweep(knots, limit_s, window, keep, progress, scout)
+
     def _sweep(
-        self, knots: int, limit_s: float, keep: Keep | None, progress: Callable[[str], None]
+        self,
+        knots: int,
+        limit_s: float,
+        window: Window,
+        keep: Keep | None,
+        progress: Callable[[str], None],
+        scout: Trace | None = None,
     ) -> Trace:
         progress("getting ready")
         self._wait_safe()
         sweep_id = secrets.token_bytes(16)
-        values = {
-            "knots": knots,
-            "closed_limit_ms": round(limit_s * 1000),
-            "confirmed": 1 if self.source_stands_alone else 0,
-        }
         for left in reversed(range(ARMINGS)):
             progress("arming")
-            token = self._session.request("arm", values)["token"]
+            token, window = arm(self._session, knots, limit_s, window, self.source_stands_alone)
             try:
                 self._fire(token, sweep_id, progress)
                 break
@@ -209,18 +255,20 @@ class Tracer:
                 if not left or error.code not in (CODES["bad token"], CODES["wrong state"]):
                     raise
         progress("bleeding")
-        trace = self._after_fire(sweep_id, lambda: self._finish(sweep_id, progress))
+        trace = self._after_fire(sweep_id, lambda: self._finish(sweep_id, progress, window.pairs))
+        if scout is not None:
+            trace = with_scout(trace, scout)
         self._hand_over(trace, sweep_id, keep)
         return trace
 
     def held(self, *, keep: Keep | None = None) -> Trace | None:
         """Fetch a finished sweep that the device still holds, or None; see `sweep` for `keep`."""
         # A latched fault is no reason to lose what was measured before it.
-        status, _ = self._wait_bled()
+        status, _ = wait_bled(self._session, self.profile)
         if not status.held_sweep:
             return None
         sweep_id = bytes.fromhex(status.held_sweep)
-        trace = self._rejoining(lambda: self._finish(sweep_id, lambda stage: None))
+        trace = self._rejoining(lambda: self._finish(sweep_id, lambda stage: None, None))
         self._hand_over(trace, sweep_id, keep)
         return trace
 
@@ -300,18 +348,39 @@ class Tracer:
                 self._session.port.close()
                 port.sleep(SETTLE_S)
 
-    def _finish(self, sweep_id: bytes, progress: Callable[[str], None]) -> Trace:
-        """Wait for the bleed, fetch the held sweep, make the trace."""
+    def _finish(self, sweep_id: bytes, progress: Callable[[str], None], asked: int | None) -> Trace:
+        """Wait for the bleed, fetch the held sweep, make the trace.
+
+        `asked`: pairs that were to be kept one by one; None where that is not known.
+        """
         fault = self._await_bleed(sweep_id)
         progress("fetching")
+        session = self._session
         manifest = self._manifest(sweep_id, fault)
-        reassembly = fetch(self._session, manifest)
-        probes = self._probes()
+        reassembly = fetch(session, manifest)
+        pairs = fetch_raw(session, manifest)
+        probes = probes_of(session)
         try:
-            return self._trace(manifest, reassembly, probes)
+            started, uncertainty_s = utc_of(
+                manifest["conducting_us"], probes, session, self._opened.utc()
+            )
+            return assemble(
+                manifest,
+                reassembly,
+                pairs,
+                asked=asked,
+                rung=self.rung,
+                device=self.device,
+                profile=self.profile,
+                frames_bad=session.frames_bad,
+                started_utc=started,
+                started_uncertainty_s=uncertainty_s,
+                scenario=self._opened.scenario,
+                truth=self._opened.truth,
+            )
         except TrustError as error:
             # Not a curve: held on, it would only stand in the way of the next sweep.
-            self._session.request("acknowledge", {"sweep_id": sweep_id})
+            session.request("acknowledge", {"sweep_id": sweep_id})
             raise (fault or error) from None
 
     def _manifest(self, sweep_id: bytes, fault: DeviceFaultError | None) -> Message:
@@ -338,101 +407,19 @@ class Tracer:
         notice = self._session.wait_notice("bleed_ended", NOTICE_S, sweep_id)
         if notice is not None and catalogue.STATES.get(notice["state"]) != "fault":
             return None
-        _, fault = self._wait_bled()
+        _, fault = wait_bled(self._session, self.profile)
         return fault
-
-    def _trace(self, manifest: Message, reassembly: Reassembly, probes: list[Probe]) -> Trace:
-        started, uncertainty_s = self._utc(manifest["conducting_us"], probes)
-        return assemble(
-            manifest,
-            reassembly,
-            rung=self.rung,
-            device=self.device,
-            profile=self.profile,
-            frames_bad=self._session.frames_bad,
-            started_utc=started,
-            started_uncertainty_s=uncertainty_s,
-            scenario=self._opened.scenario,
-            truth=self._opened.truth,
-        )
 
     def _hand_over(self, trace: Trace, sweep_id: bytes, keep: Keep | None) -> None:
         if keep is not None:
             keep(trace)
         self._rejoining(lambda: self._session.request("acknowledge", {"sweep_id": sweep_id}))
 
-    # -- waiting and clocks ------------------------------------------------------------
-
     def _wait_safe(self) -> Status:
         """Wait out the bleed; a latched fault is raised."""
-        status, fault = self._wait_bled()
+        status, fault = wait_bled(self._session, self.profile)
         if fault is not None:
             raise fault
         if status.state == "armed":
             self._session.abort()
         return status
-
-    def _wait_bled(self) -> tuple[Status, DeviceFaultError | None]:
-        port = self._session.port
-        start = port.clock()
-        end = start + BLEED_S
-        while True:
-            message = self._session.request("status")
-            status = status_of(message, self.profile)
-            if status.state == "fault":
-                fault = fault_of(message)
-                # The bleed works in a fault as well, unless the contact has welded.
-                falling = status.bleed_engaged and status.capacitor_v > SAFE_TO_SHOW_V
-                if not falling or port.clock() >= start + FAULT_BLEED_S:
-                    return status, fault
-                port.sleep(0.02)
-                continue
-            if status.state not in ("bleeding", "charging"):
-                return status, None
-            if port.clock() >= end:
-                raise DeviceFaultError(
-                    "waiting for the bleed",
-                    found=f"{status.capacitor_v:.1f} V on the capacitor after {BLEED_S:g} s",
-                    expected="an empty capacitor",
-                    next_step="keep away from the terminals; check the bleed resistor",
-                    guard=1,
-                )
-            port.sleep(0.02)
-
-    def _probes(self) -> list[Probe]:
-        """Clock probes. One that was sent twice says nothing: which of the two was answered?"""
-        clock = self._session.port.clock
-        counters = self._session.frames.counters
-        found: list[Probe] = []
-        for _ in range(PROBE_TRIES):
-            sent, again = clock(), counters.sent_again
-            reply = self._session.request("heartbeat")
-            if counters.sent_again == again:
-                received, replied = reply["received_us"] / 1e6, reply["replied_us"] / 1e6
-                found.append(Probe(sent, received, replied, clock()))
-            if len(found) == CLOCK_PROBES:
-                return found
-        if not found:
-            raise LinkError(
-                f"setting the clock by {self._session.port.name}",
-                found=f"no answer at the first asking in {PROBE_TRIES} tries "
-                f"({self._session.frames.summary()})",
-                expected="one at the least",
-                next_step="use a shorter or better cable; the sweep is still held",
-            )
-        return found
-
-    def _utc(self, device_us: int, probes: list[Probe]) -> tuple[str, float]:
-        offset = estimate(probes)
-        now = self._opened.utc()
-        ago_s = self._session.port.clock() + offset.offset_s - device_us / 1e6
-        try:
-            started = now - timedelta(seconds=ago_s)
-        except OverflowError:
-            raise TrustError(
-                f"setting the clock by {self._session.port.name}",
-                found=f"a sweep {ago_s:g} s ago",
-                expected="times since the device's boot",
-                next_step="use firmware and host of the same version; then sweep again",
-            ) from None
-        return started.isoformat(), offset.uncertainty_s

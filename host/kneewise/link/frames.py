@@ -67,7 +67,10 @@ _CODES = {
 }
 
 
-_HEX = ("fingerprint", "profile_crc", "knots_crc", "boot_nonce", "host_nonce", "token")
+_HEX = (
+    *("fingerprint", "profile_crc", "knots_crc", "raw_crc"),
+    *("boot_nonce", "host_nonce", "token"),
+)
 
 
 def shown(name: str, value: Any) -> Any:

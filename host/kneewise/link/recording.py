@@ -3,7 +3,7 @@
 Comes in: what a port reads and writes, or a file. Goes out: the file, or its chunks and frames.
 What the frames mean to a host is the business of `replay.py`. The lines of a file:
 
-{"kneewise_recording": 1, "protocol": "0.1", "target": "COM5", "begun_utc": "2031-05-06T..."}
+{"kneewise_recording": 1, "protocol": "0.2", "target": "COM5", "begun_utc": "2031-05-06T..."}
 {"t": 0.000214, "to": "device", "hex": "2300..."}   t: s since the beginning, by the port's clock
 {"t": 7.5, "event": "opened"}                       the port was opened again
 """

@@ -16,15 +16,32 @@ from math import inf, nextafter
 from typing import Any
 
 from kneewire import catalogue, framing
-from kneewire.messages import KNOT_BYTES, KNOTS_A_BLOCK, Message, Refused, pack, unpack
+from kneewire.messages import (
+    KNOT_BYTES,
+    KNOTS_A_BLOCK,
+    RAW_A_BLOCK,
+    RAW_BYTES,
+    Message,
+    Refused,
+    pack,
+    unpack,
+)
 from kneewise.errors import LinkError, UsageError
 from kneewise.link.frames import TO_DEVICE
 from kneewise.link.recording import OPENED, RUN_BYTES, Recording, protocol
 
 # Answered by what was recorded under the sweep's own id alone.
-BY_SWEEP = ("fetch", "acknowledge")
+BY_SWEEP = ("fetch", "fetch_raw", "acknowledge")
 # What these tell is another thing after a fire than before it.
 OF_A_SWEEP = ("status", "read_manifest")
+# By request: the message that its records come in, bytes of a record, records in a block at most.
+BURSTS = {
+    "fetch": ("block", KNOT_BYTES, KNOTS_A_BLOCK),
+    "fetch_raw": ("raw_block", RAW_BYTES, RAW_A_BLOCK),
+}
+
+Records = dict[int, bytes]
+"""By their number."""
 
 
 @dataclass(slots=True)
@@ -144,7 +161,7 @@ class ReplayPort:
         self.name = f"replay:{recording.path}"
         self._begun = recording.begun_utc
         self._exchanges = exchanges_of(recording)
-        self._knots = _knots_of(self._exchanges)
+        self._records = {name: _records_of(self._exchanges, name) for name in BURSTS}
         self._place = 0
         self._clock_s = 0.0
         # Virtual time at which the exchange last used began, and when it was recorded.
@@ -289,9 +306,11 @@ class ReplayPort:
     def _play(self, exchange: Exchange, request: Message | None) -> None:
         """Put the answers of an exchange in line, each as late as it was."""
         self._from_s, self._recorded_s = self._clock_s, exchange.time_s
-        knots = self._knots_for(request) if request is not None else None
-        if request is not None and knots:
-            for frame in self._burst(request, knots):
+        records = self._records_for(request) if request is not None else None
+        made_anew: tuple[str, ...] = ()
+        if request is not None and records:
+            made_anew = (BURSTS[request.name][0], f"{request.name}_reply")
+            for frame in self._burst(request, records):
                 self._due.append((self._clock_s, frame))
         for piece in exchange.pieces:
             if exchange.used and piece.once:
@@ -303,7 +322,7 @@ class ReplayPort:
             if message is None:
                 if piece.lost or piece.raw:
                     self._due.append((due, None if piece.lost else piece.raw))
-            elif not (knots and message.name in ("block", "fetch_reply")):
+            elif message.name not in made_anew:
                 self._due.append((due, self._frame(message)))
         exchange.used = True
 
@@ -318,55 +337,58 @@ class ReplayPort:
         body = pack(message.name, session, sequence, values)
         return framing.encode(body, toward_device=False)
 
-    # -- knots ---------------------------------------------------------------------------
+    # -- knots and raw pairs -------------------------------------------------------------
 
-    def _knots_for(self, request: Message) -> dict[int, bytes] | None:
-        """All recorded knots of the sweep that a fetch asks for."""
-        if request.name != "fetch":
+    def _records_for(self, request: Message) -> Records | None:
+        """All recorded knots, or raw pairs, of the sweep that a fetch asks for."""
+        if request.name not in BURSTS:
             return None
         sweep_id = request["sweep_id"]
-        return self._knots.get(self._to_recorded.get(sweep_id, sweep_id))
+        return self._records[request.name].get(self._to_recorded.get(sweep_id, sweep_id))
 
-    def _burst(self, request: Message, knots: dict[int, bytes]) -> Iterator[bytes]:
-        """The answer to a fetch in blocks of its own size; knots never recorded are left out."""
-        most = min(request["a_block"] or KNOTS_A_BLOCK, KNOTS_A_BLOCK)
+    def _burst(self, request: Message, records: Records) -> Iterator[bytes]:
+        """The answer to a fetch in blocks of its own size; what was never recorded is left out."""
+        block, _, fit = BURSTS[request.name]
+        most = min(request["a_block"] or fit, fit)
         first, after = request["first"], request["first"] + request["count"]
         place = first
         while place < after:
             data = b""
             start = place
-            while place < min(start + most, after) and place in knots:
-                data += knots[place]
+            while place < min(start + most, after) and place in records:
+                data += records[place]
                 place += 1
             if data:
-                yield self._coded(request, "block", {"first": start, "data": data})
+                yield self._coded(request, block, {"first": start, "data": data})
             else:
                 place += 1
-        yield self._coded(request, "fetch_reply", {"first": first, "count": request["count"]})
+        end = {"first": first, "count": request["count"]}
+        yield self._coded(request, f"{request.name}_reply", end)
 
     def _coded(self, request: Message, name: str, values: dict[str, Any]) -> bytes:
         body = pack(name, request.session, request.sequence, values)
         return framing.encode(body, toward_device=False)
 
 
-def _knots_of(exchanges: list[Exchange]) -> dict[bytes, dict[int, bytes]]:
-    """By recorded sweep id: knot records by their number, from whatever blocks brought them."""
-    known: dict[bytes, dict[int, bytes]] = {}
+def _records_of(exchanges: list[Exchange], name: str) -> dict[bytes, Records]:
+    """By recorded sweep id, what came for requests of that name, whatever blocks brought it."""
+    block_name, size, _ = BURSTS[name]
+    known: dict[bytes, Records] = {}
     of_sweep: dict[tuple[int, int], bytes] = {}
     for exchange in exchanges:
         request = exchange.request
-        if request is not None and request.name == "fetch":
+        if request is not None and request.name == name:
             of_sweep[request.session, request.sequence] = request["sweep_id"]
         for piece in exchange.pieces:
             block = piece.message
-            if block is None or block.name != "block":
+            if block is None or block.name != block_name:
                 continue
             sweep_id = of_sweep.get((block.session, block.sequence))
             if sweep_id is None:
                 continue
-            knots = known.setdefault(sweep_id, {})
+            records = known.setdefault(sweep_id, {})
             data: bytes = block["data"]
-            for number in range(len(data) // KNOT_BYTES):
-                record = data[number * KNOT_BYTES : (number + 1) * KNOT_BYTES]
-                knots.setdefault(block["first"] + number, record)
+            for number in range(len(data) // size):
+                record = data[number * size : (number + 1) * size]
+                records.setdefault(block["first"] + number, record)
     return known

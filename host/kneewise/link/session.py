@@ -44,6 +44,7 @@ BEAT_S = 0.5
 NUDGE_AFTER = 3
 NUDGE = b"\r\x02" + framing.DELIMITER
 HELLO_NUDGE = b"\x02" + framing.DELIMITER
+BLOCKS = {"fetch": "block", "fetch_raw": "raw_block"}  # by the request that they answer
 SMALL_FRAME = 64  # bytes of body and CRC that any device takes; hello tells the rest
 # Bytes of a hello that mean nothing to a MicroPython prompt (see the catalogue).
 HELLO_SEQUENCE = int.from_bytes(b"iKne", "little")
@@ -120,13 +121,17 @@ class Session:
         return self._converse(name, self.sequence, body, deadline_s, again_s)
 
     def burst(
-        self, values: dict[str, Any], on_block: Callable[[Message], None], idle_s: float = AGAIN_S
+        self,
+        name: str,
+        values: dict[str, Any],
+        on_block: Callable[[Message], None],
+        idle_s: float = AGAIN_S,
     ) -> bool:
-        """One `fetch`: its blocks go to `on_block`; True where its end was heard.
+        """One `fetch` or `fetch_raw`: its blocks go to `on_block`; True where its end was heard.
 
         Not sent again: what is missing is for the caller to see, and to ask for.
         """
-        self._send(self._next("fetch", values))
+        self._send(self._next(name, values))
         quiet_from = self.port.clock()
         while self.port.clock() - quiet_from < idle_s:
             for message in self._pump(idle_s):
@@ -134,10 +139,10 @@ class Session:
                     self.frames.counters.late += 1
                     continue
                 quiet_from = self.port.clock()
-                if message.name == "block":
+                if message.name == BLOCKS[name]:
                     on_block(message)
                 elif message.name == "refusal":
-                    raise refused("fetch", message)
+                    raise refused(name, message)
                 else:
                     return True
             if self._at_prompt():

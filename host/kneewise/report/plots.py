@@ -25,6 +25,7 @@ from kneewise.instrument.trace import Trace
 # Dark blue drawn through and burnt orange broken: apart for the colour-blind and in grey.
 _CURRENT_INK = "#14345c"
 _POWER_INK = "#b35a00"
+_PAIR_INK = "#a9bdd6"
 _TEXT_INK = "#222222"
 _GRID_INK = "#d5d5d5"
 _FACE_INK = "#2b2b2b"
@@ -87,6 +88,8 @@ def describe(trace: Trace) -> str:
         f"{trace.current[0]:.3g} A to {trace.voltage[-1]:.3g} V, {trace.current[-1]:.3g} A, "
         "and power over voltage."
     )
+    if _pairs_in_words(trace):
+        parts.append(f"Faint dots: {_pairs_in_words(trace)}.")
     if figures is None:
         parts.append(f"No figures: {why_none}.")
     else:
@@ -177,6 +180,7 @@ def _draw_curve(axes: Axes, trace: Trace, figures: Figures | None, why_none: str
     # On the upper axes as well, so that the I-V curve lies over the P-V curve.
     axes.set_zorder(right.get_zorder() + 1)
     axes.patch.set_visible(False)
+    _draw_pairs(axes, trace)
     axes.plot(
         trace.voltage,
         trace.current,
@@ -199,6 +203,23 @@ def _draw_curve(axes: Axes, trace: Trace, figures: Figures | None, why_none: str
         )
     else:
         _draw_figures(axes, right, trace, figures)
+
+
+def _draw_pairs(axes: Axes, trace: Trace) -> None:
+    """Pairs kept one by one: faint dots under the curve, pixels in an SVG as well."""
+    pairs = trace.full_rate
+    if pairs is not None:
+        faint: dict[str, Any] = {"linestyle": "", "marker": ".", "markersize": 9.0, "zorder": 1.5}
+        faint |= {"markeredgewidth": 0.0, "rasterized": True}
+        axes.plot(pairs.voltage, pairs.current, color=_PAIR_INK, **faint)
+
+
+def _pairs_in_words(trace: Trace) -> str:
+    pairs = trace.full_rate
+    if pairs is None or not len(pairs):
+        return ""
+    begin_s, end_s = pairs.stretch_s
+    return f"{len(pairs)} pairs one by one, {1e3 * begin_s:.2f} to {1e3 * end_s:.2f} ms"
 
 
 def _draw_figures(axes: Axes, right: Axes, trace: Trace, figures: Figures) -> None:
@@ -269,6 +290,8 @@ def _draw_notes(picture: Figure, trace: Trace, figures: Figures | None) -> None:
         f"{len(trace.voltage)} knots of {int(np.sum(trace.weight))} pairs, "
         f"from {trace.time[0] * 1e3:.2f} ms after closing over {lasted * 1e3:.2f} ms"
     ]
+    if _pairs_in_words(trace):
+        lines[0] += f"; faint dots: {_pairs_in_words(trace)}"
     if figures is not None:
         each = ", ".join(
             f"{_NAMES[name]} {quantity.standard_uncertainty:.1g} {quantity.unit}".rstrip()

@@ -10,15 +10,13 @@ same process. Two objects are passed in:
 
 from tracer import hal
 
+MHZ = 125  # of the RP2040 that is stood in for
 UNHEARD_US = 1000000  # of a charge may pass at once; from then on it takes its real time
 SAFE_LEVEL = 0
 
 
 class EmulatedHal(hal.Hal):
     EMULATED = True
-    # A quarter of a board's: nothing arrives here between two waits, and the objects of this
-    # 64-bit MicroPython are twice as large as a board's.
-    RING_PAIRS = 1024
 
     def __init__(self, bus, link, device_id, seed):
         self._bus = bus
@@ -55,6 +53,20 @@ class EmulatedHal(hal.Hal):
         x ^= (x << 5) & 0xFFFFFFFF
         self._random = x
         return x
+
+    def use_converters(self, kind, pair_us, clock_khz, convert_ns):
+        if kind == hal.SPI16:
+            from tracer.spi_timing import plan
+
+            plan(MHZ, pair_us, clock_khz, convert_ns)
+        if not self._number("use_converters", kind, pair_us):
+            raise ValueError("no such converters")
+        self.PAIR_US = pair_us
+        self.SKEW_NS = 2000 if kind == hal.INTERNAL else 0
+        self.CODE_BITS = 12 if kind == hal.INTERNAL else 16
+
+    def zero_input(self, on):
+        self._bus.call("zero_input", 1 if on else 0, 0)
 
     def safe(self):
         self.pulse(0)
@@ -118,6 +130,9 @@ class EmulatedHal(hal.Hal):
 
     def now_us(self):
         return self._number("now_us")
+
+    def ticks_us(self):
+        return self.now_us() & 0x3FFFFFFF
 
     def wait_us(self, us):
         self._bus.call("wait", us, 0)
