@@ -24,7 +24,7 @@ from tracer import memory
 MAX_BIN_PAIRS = 32768
 DRAIN_PAIRS = const(2048)
 LAP_MARGIN = const(64)  # pairs (256 us) that may arrive between the count and the first fold
-MEAN_PAIRS = 256  # of the newest, for `recent_means`
+MEAN_PAIRS = 48  # of the newest, for `recent_means`: enough for a quarter of a code, and quick
 
 # Words that the native functions are told and keep.
 C_AT = const(0)  # place of the first pair in the ring
@@ -62,19 +62,32 @@ def fold(ring: ptr32, bins: ptr32, control: ptr32):
         total = 0
         if left < size:
             total = bins[place]
-        while at < end:
-            stop = at + left
-            if stop > end:
-                stop = end
-            left -= stop - at
-            while at < stop:
+        if size < 8:
+            while at < end:
                 total += ring[at]
                 at += 1
+                left -= 1
+                if left == 0:
+                    bins[place] = total
+                    place += 1
+                    left = size
+                    total = 0
+        else:
+            while at < end:
+                stop = at + left
+                if stop > end:
+                    stop = end
+                left -= stop - at
+                while at < stop:
+                    total += ring[at]
+                    at += 1
+                if left == 0:
+                    bins[place] = total
+                    place += 1
+                    left = size
+                    total = 0
+        if left < size:
             bins[place] = total
-            if left == 0:
-                place += 1
-                left = size
-                total = 0
         control[C_LEFT] = left
     control[C_BIN] = place
 
@@ -198,16 +211,16 @@ def opened(ring: ptr32, control: ptr32) -> int:
 
 @micropython.viper
 def add_up(ring: ptr32, control: ptr32, count: int):
-    """Sums of V and I over the `count` pairs before C_AT."""
-    at = control[C_AT]
+    """Sums of V and I over the `count` pairs before C_AT, none of them before the ring's start."""
+    end = control[C_AT]
+    at = end - count
     v = 0
     i = 0
-    while count > 0:
-        at = (at - 1) & control[C_MASK]
+    while at < end:
         pair = ring[at]
         v += pair & 0xFFFF
         i += (pair >> 16) & 0xFFFF
-        count -= 1
+        at += 1
     control[C_VOLTAGE] = v
     control[C_CURRENT] = i
 
@@ -400,10 +413,14 @@ class Capture:
         """Write the means over the newest pairs of the last `drain`, in sixteenths of a code, into
         `voltage_x16` and `current_x16`; False where it folded none.
         """
-        count = min(self._recent, MEAN_PAIRS)
+        # Where the newest lie on both sides of the ring's end, those behind it do.
+        count = min(self._recent, MEAN_PAIRS, self.control[C_AT] or MEAN_PAIRS)
         if not count:
             return False
+        if not self.control[C_AT]:
+            self.control[C_AT] = self.ring_pairs
         add_up(self.ring, self.control, count)
+        self.control[C_AT] &= self.ring_pairs - 1
         self.voltage_x16 = 16 * self.control[C_VOLTAGE] // count
         self.current_x16 = 16 * self.control[C_CURRENT] // count
         return True

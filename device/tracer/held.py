@@ -5,15 +5,13 @@ Knot records are written from the bins each time that they are asked for.
 
 from kneewire.catalogue import MAX_FRAME
 from kneewire.framing import CRC_BYTES
-from kneewire.messages import KNOT_BYTES, KNOTS_A_BLOCK, pack
+from kneewire.messages import KNOT_BYTES, KNOTS_A_BLOCK, RAW_BYTES, pack
 from kneewire.seam import crc32
 from tracer import coder, records
 from tracer.knots import Placer
 from tracer.memory import MAX_FRAME as FRAME_BYTES
 
 NO_ID = bytes(16)
-RAW_BYTES = 4  # of a pair kept one by one
-RAW_A_BLOCK = (MAX_FRAME - 13 - CRC_BYTES) // RAW_BYTES  # kind, session, sequence, first, length
 
 if (records.RECORD_BYTES, FRAME_BYTES) != (KNOT_BYTES, MAX_FRAME):
     raise ValueError("memory.py or records.py and the catalogue disagree")

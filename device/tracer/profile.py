@@ -40,8 +40,10 @@ class Profile:
         voltage codes x ratio >> shift; ratio below 2**13, so that 16-bit codes fit.
         """
         values = self.values
+        if not values["permanent_bleeder_ohm"]:
+            return 0, 0
         volts = values["voltage_nv_per_code"]
-        amperes = values["current_na_per_code"] * max(values["permanent_bleeder_ohm"], 1)
+        amperes = values["current_na_per_code"] * values["permanent_bleeder_ohm"]
         shift = 28
         while shift and (volts << shift) // amperes >= 8192:
             shift -= 1

@@ -5,9 +5,18 @@ the last few state-changing requests are kept, so that a request sent twice acts
 """
 
 from kneewire import PROTOCOL, catalogue, framing
-from kneewire.messages import KNOTS_A_BLOCK, NO_SESSION, Refused, fingerprint, pack, unpack
+from kneewire.messages import (
+    KNOTS_A_BLOCK,
+    NO_SESSION,
+    RAW_A_BLOCK,
+    RAW_BYTES,
+    Refused,
+    fingerprint,
+    pack,
+    unpack,
+)
 from tracer import sequencer as states
-from tracer.held import NO_ID, RAW_A_BLOCK, RAW_BYTES
+from tracer.held import NO_ID
 from tracer.interlocks import BEFORE_CLOSING, first_finding
 from tracer.memory import MAX_KNOTS
 
@@ -218,6 +227,7 @@ class Service:
 
     def _abort(self, request):
         self.sequencer.disarm()
+        self.armed_raw = None
         return {"state": self.sequencer.state}
 
     def _status(self, request):
@@ -267,6 +277,7 @@ class Service:
         token = self.hal.random32() or 1
         finding = self.sequencer.arm(token, readings)
         if finding is not None:
+            self.armed_raw = None
             raise Refusal(R_INTERLOCK, finding)
         self.armed_knots = request["knots"]
         self.armed_limit_ms = request["closed_limit_ms"]

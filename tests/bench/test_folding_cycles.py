@@ -18,6 +18,7 @@ pytest.importorskip("unicorn")
 import folding
 
 from bench.m0 import Core
+from kneewise.emulator.firmware import firmware_module
 
 capture = folding.module
 BINS = folding.BIN_WORDS
@@ -74,15 +75,15 @@ def copied(count: int) -> int:
 # Cycles of 1024 pairs, and of the call on top of them.
 FOUND = {
     "fold, bins of 1": (folded("fold", 1), 55296, 147),
-    "fold, bins of 2": (folded("fold", 2), 109056, 184),
-    "fold, bins of 8": (folded("fold", 8), 59520, 184),
-    "fold, bins of 16": (folded("fold", 16), 51264, 184),
+    "fold, bins of 2": (folded("fold", 2), 79872, 215),
+    "fold, bins of 8": (folded("fold", 8), 59520, 215),
+    "fold, bins of 16": (folded("fold", 16), 51264, 215),
     "fold_wide, bins of 4": (folded("fold_wide", 4), 111616, 179),
     "fold_wide, bins of 64": (folded("fold_wide", 64), 75136, 179),
     "fold_wide, bins of 1024": (folded("fold_wide", 1024), 72856, 179),
     "conducting": (skipped, 88064, 16),
     "opened": (looked_for_openings, 57344, 112),
-    "add_up": (added_up, 79872, 104),
+    "add_up": (added_up, 72704, 122),
     "copy": (copied, 55296, 122),
 }
 MERGED = {"double": 128851, "widen": 378219, "double_wide": 106367}  # all bins
@@ -114,6 +115,8 @@ MEANS = a_pair("add_up")
 WINDOWS = a_pair("opened") + a_pair("copy")
 # Where the capture is behind, a call takes so many pairs and looks at the newest of them alone.
 MEANS_BEHIND = MEANS * capture.MEAN_PAIRS / capture.DRAIN_PAIRS
+# Where no pair waits, a call comes after the slice's wait at the earliest.
+MEANS_IN_TIME = MEANS * capture.MEAN_PAIRS / firmware_module("tracer.charge").SLICE_PAIRS
 SUMS = {
     1: a_pair("fold, bins of 1") + merged("double", 1),
     2: a_pair("fold, bins of 2") + merged("double", 2),
@@ -126,27 +129,26 @@ SUMS = {
 @pytest.mark.parametrize(
     ("bin_pairs", "behind", "everything", "in_time"),
     [
-        (1, 96, 206, 274),
-        (2, 148, 258, 327),
-        (8, 76, 186, 255),
-        (16, 72, 182, 250),
-        (64, 84, 194, 263),
+        (1, 88, 198, 223),
+        (2, 112, 222, 247),
+        (8, 68, 178, 204),
+        (16, 64, 174, 199),
+        (64, 76, 186, 212),
     ],
 )
 def test_a_pair_has_its_time(bin_pairs: int, behind: int, everything: int, in_time: int) -> None:
     """`behind`: folding, merging, means, where pairs wait. `everything`: looking for an opening and
-    keeping the pair as well. `in_time`: all that, where no pair waits and each is in a mean.
+    keeping the pair as well. `in_time`: all that, where no pair waits.
     """
     fold = SUMS[bin_pairs]
-    found = fold + MEANS_BEHIND, fold + MEANS_BEHIND + WINDOWS, fold + MEANS + WINDOWS
+    found = fold + MEANS_BEHIND, fold + MEANS_BEHIND + WINDOWS, fold + MEANS_IN_TIME + WINDOWS
     assert [ceil(cycles) for cycles in found] == [behind, everything, in_time]
-    assert in_time < A_PAIR
+    assert in_time <= 250, "the goal: half of the time, at the worst"
 
 
-def test_bins_of_one_and_of_eight_pairs_have_time_to_spare() -> None:
-    """The goals: half of the time with everything, less than a quarter without the windows."""
-    assert SUMS[1] + MEANS_BEHIND + WINDOWS <= 250
-    assert SUMS[8] + MEANS_BEHIND <= 110
+def test_bins_of_eight_pairs_have_time_to_spare() -> None:
+    """The goal: less than a quarter, where no window is asked for."""
+    assert SUMS[8] + MEANS_IN_TIME <= 110
 
 
 def test_a_merge_leaves_the_ring_room() -> None:

@@ -56,6 +56,7 @@ def test_every_pair_is_in_exactly_one_knot(seed, count, knots, kind, code_bits):
 
 @settings(max_examples=25)
 @given(st.integers(0, 2**32 - 1), st.integers(1, 200_000), st.integers(16, 512), KINDS, CODE_BITS)
+@example(210361, 705, 22, "steps", 12)  # cuts were out of order once
 @example(1, 200_000, 96, "curve", 12)
 @example(1, 200_000, 96, "noise", 16)
 @example(1, 131_000, 512, "noise", 12)

@@ -13,10 +13,10 @@ from hosting import SWEEP_ID, Device, refusal, service_module
 from test_service import INTERLOCK, NO_SWEEP, OUT_OF_RANGE
 
 from kneewire import catalogue
+from kneewire.messages import RAW_A_BLOCK
 from kneewire.seam import crc32
 from kneewise.emulator.firmware import firmware_module
 
-RAW_A_BLOCK = firmware_module("tracer.held").RAW_A_BLOCK
 READ = firmware_module("tracer.charge").READ_CONVERSIONS
 MOST = catalogue.MAX_RAW_PAIRS
 

@@ -179,7 +179,7 @@ def test_what_the_loop_computes_while_charging_needs_no_object():
     rail = 65535
     made.ring[:] = [rail << 16 | rail] * 4096
     made._recent = SmallWord(2048)
-    made.control[module.C_MASK] = 4095
+    made.control[module.C_AT] = 4096
     module.add_up(made.ring, made.control, module.MEAN_PAIRS)
     count = SmallWord(module.MEAN_PAIRS)
     for channel in (module.C_VOLTAGE, module.C_CURRENT):
