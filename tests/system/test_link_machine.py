@@ -29,7 +29,7 @@ from kneewise.instrument.trace import RawKnots, Trace
 from kneewise.instrument.tracer import Tracer
 
 NONCES = [int.from_bytes(b"abc" + bytes([97 + n]), "little") for n in range(26)]
-CALL_S = 180.0  # of virtual time: a bad link's deadlines, one after the other
+CALL_S = 300.0  # of virtual time; the worst link needs about 210
 
 SCENARIO = Scenario.default().varied(load={"capacitance_f": 470e-6})  # a sweep of 3 ms
 # What a link may do, and how badly a link can be while a sweep still has a chance.
