@@ -224,7 +224,7 @@ def test_a_slot_that_dies_while_dma_runs_leaves_the_other_a_sound_heap(slots: Ch
         },
     )
     copy = (
-        "for name in ('adc_rp2', 'coder_thumb', 'fold_thumb', 'hal', 'hal_rp2', 'pulse_pio',\n"
+        "for name in ('adc_rp2', 'coder_thumb', 'plane_thumb', 'hal', 'hal_rp2', 'pulse_pio',\n"
         "             'ring_rp2', 'usb_serial'):\n"
         "    data = open('/tracer/' + name + '.py').read()\n"
         "    open('/a/tracer/' + name + '.py', 'w').write(data)\n"
