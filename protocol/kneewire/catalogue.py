@@ -79,6 +79,15 @@ _GUARD = (
     ("unit", "u8"),
 )
 
+# Knots and raw pairs are fetched alike.
+_FETCH = (
+    ("sweep_id", "b16"),
+    ("first", "u16"),
+    ("count", "u16"),
+    ("a_block", "u8"),
+)
+_FETCHED = (("first", "u16"), ("count", "u16"))
+
 # kind: (name, direction, frozen, changes state, fields)
 MESSAGES: "dict[int, tuple[str, int, bool, bool, tuple[tuple[str, str], ...]]]" = {
     # "H", and no control character where it can be helped: a hello may arrive at a MicroPython
@@ -250,19 +259,14 @@ MESSAGES: "dict[int, tuple[str, int, bool, bool, tuple[tuple[str, str], ...]]]" 
         TO_DEVICE,
         False,
         False,
-        (
-            ("sweep_id", "b16"),
-            ("first", "u16"),
-            ("count", "u16"),
-            ("a_block", "u8"),
-        ),
+        _FETCH,
     ),
     0xB1: (
         "fetch_reply",
         TO_HOST,
         False,
         False,
-        (("first", "u16"), ("count", "u16")),
+        _FETCHED,
     ),
     0xE1: (
         "block",
@@ -276,19 +280,14 @@ MESSAGES: "dict[int, tuple[str, int, bool, bool, tuple[tuple[str, str], ...]]]" 
         TO_DEVICE,
         False,
         False,
-        (
-            ("sweep_id", "b16"),
-            ("first", "u16"),
-            ("count", "u16"),
-            ("a_block", "u8"),
-        ),
+        _FETCH,
     ),
     0xB3: (
         "fetch_raw_reply",
         TO_HOST,
         False,
         False,
-        (("first", "u16"), ("count", "u16")),
+        _FETCHED,
     ),
     0xE3: (
         "raw_block",

@@ -168,9 +168,9 @@ def test_as_long_as_memory_allows() -> None:
 
 
 def test_a_length_that_was_asked_for_is_not_cut_down() -> None:
-    with pytest.raises(RefusedError, match=r"2000 pairs to be kept one by one.*no memory"):
+    with pytest.raises(RefusedError, match=r"2000 raw pairs to be kept.*no memory"):
         arm(Scarce(600), 96, 1.0, Window(0, 2000), True)  # type: ignore[arg-type]
-    with pytest.raises(RefusedError, match="128 pairs to be kept one by one"):
+    with pytest.raises(RefusedError, match="128 raw pairs to be kept"):
         arm(Scarce(10), 96, 1.0, FullRate().window(PROFILE), True)  # type: ignore[arg-type]
     session = Scarce(-1)
     with pytest.raises(RefusedError):

@@ -143,7 +143,7 @@ def test_pairs_kept_one_by_one_are_faint_dots_under_the_curve(
     assert dots.get_ydata().tolist() == kept.current.tolist()
     assert dots.get_zorder() < curve.get_zorder()
     assert luminance(str(dots.get_color())) > 3.0 * luminance(str(curve.get_color()))
-    said = "400 pairs one by one, 6.50 to 8.10 ms"
+    said = "400 raw pairs, 6.50 to 8.10 ms"
     assert f"; faint dots: {said}" in "\n".join(texts(drawn[0]))
     assert f"Faint dots: {said}." in describe(pictured)
     for words in drawn[0].texts:
@@ -152,7 +152,7 @@ def test_pairs_kept_one_by_one_are_faint_dots_under_the_curve(
     assert (tmp_path / "pairs.svg").stat().st_size < 200_000
     none = replace(trace, full_rate=replace(kept, raw=RawPairs(0, *[np.zeros(0, np.uint16)] * 2)))
     curve_picture(none, tmp_path / "none.png", dpi=60)
-    assert "one by one" not in describe(none)
+    assert "raw pairs" not in describe(none)
 
 
 def test_failed_checks_stand_on_the_face(tmp_path: Path, drawn: list[Figure]) -> None:

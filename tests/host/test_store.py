@@ -231,7 +231,7 @@ def test_a_scout_is_stored_with_the_sweep_that_it_steered(tmp_path: Path) -> Non
 def test_pairs_without_a_knot_are_not_dropped_in_silence(tmp_path: Path) -> None:
     trace = with_pairs(make_trace(), 0, 5)
     none = RawKnots(*[np.zeros(0, np.uint64)] * 6)
-    with pytest.raises(ArchiveError, match="5 pairs kept one by one, and no knot"):
+    with pytest.raises(ArchiveError, match="5 raw pairs, and no knot"):
         save(replace(trace, raw=none), tmp_path)
 
 

@@ -35,13 +35,13 @@ def lines_of(trace: Trace) -> list[str]:
 @pytest.mark.parametrize(
     ("pairs", "line"),
     [
-        (kept(500, 500), "  500 pairs one by one, 1.00 to 3.00 ms"),
-        (kept(500, None), "  500 pairs one by one, 1.00 to 3.00 ms"),
+        (kept(500, 500), "  500 raw pairs, 1.00 to 3.00 ms"),
+        (kept(500, None), "  500 raw pairs, 1.00 to 3.00 ms"),
         (
             kept(500, 2000),
-            "  500 pairs one by one, 1.00 to 3.00 ms; 2000 were asked for, the sweep ended first",
+            "  500 raw pairs, 1.00 to 3.00 ms; 2000 were asked for, the sweep ended first",
         ),
-        (kept(0, 2000), "  no pairs one by one; 2000 were asked for, the sweep ended first"),
+        (kept(0, 2000), "  no raw pairs; 2000 were asked for, the sweep ended first"),
     ],
 )
 def test_how_many_pairs_and_which_stretch(pairs: FullRatePairs, line: str) -> None:

@@ -104,7 +104,7 @@ def test_pairs_about_the_knee(tmp_path, rung):
     words = ("sweep", "--on", f"emulator:{rung}", "--full-rate", "knee:4")
     done = run(*words, folder=tmp_path)
     assert done.returncode == 0, done.stderr
-    assert "1000 pairs one by one, " in done.stdout
+    assert "1000 raw pairs, " in done.stdout
     assert "  steered by scout sweep " in done.stdout
     assert "32 knots in " in done.stdout
     assert "holds   agrees with the scout sweep: Isc " in done.stdout

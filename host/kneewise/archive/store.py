@@ -34,7 +34,7 @@ from kneewise.instrument.trace import Check, Integrity, RawKnots, RawPairs, Read
 
 SCHEMA = 2
 """Version of the file's content. A higher one may hold what this program cannot read; files of
-version 1 have no pairs kept one by one, no zero of the voltage and no scout."""
+version 1 have no raw pairs, no zero of the voltage and no scout."""
 
 _KEY = b"kneewise"
 _CRC_KEY = b"kneewise_crc32"
@@ -56,8 +56,8 @@ _CALIBRATED_COLUMNS = {
     "weight": ("weight", "1", "pairs averaged"),
 }
 _PAIR_COLUMNS = {
-    "pair_voltage_codes": ("voltage", "code", "voltage codes of the pairs kept one by one"),
-    "pair_current_codes": ("current", "code", "current codes of the pairs kept one by one"),
+    "pair_voltage_codes": ("voltage", "code", "voltage codes of the raw pairs"),
+    "pair_current_codes": ("current", "code", "current codes of the raw pairs"),
 }
 _PLAIN_FIELDS = (
     "trace_id",
@@ -175,7 +175,7 @@ def _offsets(trace: Trace, pairs: RawPairs, what: str) -> Any:
     if not len(trace.raw) and len(pairs):
         raise ArchiveError(
             what,
-            found=f"{len(pairs)} pairs kept one by one, and no knot",
+            found=f"{len(pairs)} raw pairs, and no knot",
             expected="knots that they belong to",
             next_step="report this: a trace must not be able to get into this state",
         )
@@ -287,7 +287,7 @@ def _trace(table: pa.Table, head: dict[str, Any]) -> Trace:
 
 
 def _trace_of(head: dict[str, Any], column: Callable[[str, type[np.generic]], Any]) -> Trace:
-    """The trace of a description and its columns, without pairs kept one by one and scout."""
+    """The trace of a description and its columns, without raw pairs and scout."""
     readings = {name: Reading(**reading) for name, reading in head["readings"].items()}
     return Trace(
         raw=RawKnots(**{name: column(name, np.uint64) for name in _RAW_COLUMNS}),

@@ -137,14 +137,14 @@ def as_text(trace: Trace, file: Path, picture: Path) -> str:
 
 
 def _sweep_lines(trace: Trace) -> list[str]:
-    """The scout, the pairs kept one by one, the zeros and the contact, a line each."""
+    """The scout, the raw pairs, the zeros and the contact, a line each."""
     lines = []
     pairs, scout, bounces = trace.full_rate, trace.scout, trace.integrity.bounces
     if pairs is not None:
         begin_s, end_s = pairs.stretch_s
-        kept = f"{len(pairs)} pairs one by one, {1e3 * begin_s:.2f} to {1e3 * end_s:.2f} ms"
+        kept = f"{len(pairs)} raw pairs, {1e3 * begin_s:.2f} to {1e3 * end_s:.2f} ms"
         if not len(pairs):
-            kept = "no pairs one by one"
+            kept = "no raw pairs"
         short = pairs.asked is not None and len(pairs) < pairs.asked
         lines.append(
             f"  {kept}" + (f"; {pairs.asked} were asked for, the sweep ended first" * short)

@@ -8,7 +8,7 @@ from kneewise.link.refusals import CODES
 from kneewise.link.session import Session
 
 FEWEST_PAIRS = 128
-"""Kept one by one: a device without memory for so many has none for any."""
+"""Raw pairs: a device without memory for so many has none for any."""
 
 
 def arm(
@@ -31,7 +31,7 @@ def arm(
                 raise
             if not window.shrinks or window.pairs < 2 * FEWEST_PAIRS:
                 raise RefusedError(
-                    f"arming, with {window.pairs} pairs to be kept one by one",
+                    f"arming, with {window.pairs} raw pairs to be kept",
                     found="out of range: the tracer has no memory for so many, or a setting is "
                     "beyond its limits",
                     expected="a stretch that it can keep",

@@ -49,7 +49,7 @@ def assemble(
 ) -> Trace:
     """The trace of a whole sweep. `device` is its hello, `profile` the values of its record.
 
-    `pairs` are those kept one by one, `asked` how many were asked for, where that is known.
+    `pairs` are the raw ones, `asked` how many were asked for, where that is known.
     TrustError where there are too few knots to speak of a curve.
     """
     values = manifest.values

@@ -95,7 +95,7 @@ def _pairs_add_up(raw: RawKnots, pairs: RawPairs) -> list[Check]:
     last = pairs.first + len(pairs)
     return [
         Check(
-            "pairs one by one add up to their knots",
+            "raw pairs add up to their knots",
             bool(alike.all()) and last <= int(after[-1]),
             f"{np.count_nonzero(alike)} knots of the {len(alike)} within the stretch, "
             f"pairs up to {last} of {int(after[-1])}",

@@ -1,4 +1,4 @@
-"""Pairs kept one by one: asking for a stretch of them, and what they are in volts and amperes.
+"""Raw pairs: asking for a stretch of them, and what they are in volts and amperes.
 
 Knots are means; where the converter's own pace matters (a knee, a contact, noise), the device
 keeps the pairs of one stretch as well. Comes in: which stretch, in seconds; codes as measured.
@@ -53,7 +53,7 @@ NO_WINDOW = Window(0, 0)
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class FullRate:
-    """A stretch of a sweep whose pairs are wanted one by one.
+    """A stretch of a sweep whose raw pairs are wanted.
 
     `start_s`: s after conduction began, as `Trace.time` counts; None for a stretch with the
     maximum power in its middle, which needs a scout sweep. `duration_s`: s; None for as long as
@@ -69,7 +69,7 @@ class FullRate:
         last_s = min(limit_s, LATEST_S)
         if self.start_s is not None and not 0.0 <= self.start_s < last_s:
             raise UsageError(
-                "asking for pairs one by one",
+                "asking for raw pairs",
                 found=f"a stretch from {1e3 * self.start_s:g} ms on",
                 expected="a start from 0 ms on, before the longest closed time, "
                 f"{1e3 * last_s:g} ms",
@@ -93,7 +93,7 @@ class FullRate:
         pairs = round(min(1e6 * self.duration_s / pair_us, 1e9)) if self.duration_s > 0.0 else 0
         if not 0 < pairs <= most:
             raise UsageError(
-                "asking for pairs one by one",
+                "asking for raw pairs",
                 found=f"a stretch of {1e3 * self.duration_s:g} ms, {pairs} pairs",
                 expected=f"{1e-3 * pair_us:g} to {1e-3 * most * pair_us:g} ms, which is "
                 f"{most} pairs at one every {pair_us} us",

@@ -1,7 +1,7 @@
 """Fetching a held sweep: blocks in any order and number become one sweep, proven by its CRC.
 
-Comes in: the manifest and blocks. Goes out: gaps to ask for, then raw knots, and the pairs that
-were kept one by one. How a message travels is the link's business.
+Comes in: the manifest and blocks. Goes out: gaps to ask for, then raw knots and raw
+pairs. How a message travels is the link's business.
 """
 
 from __future__ import annotations
@@ -107,7 +107,7 @@ def fetch(session: Session, manifest: Message) -> Reassembly:
 
 
 def fetch_raw(session: Session, manifest: Message) -> RawPairs:
-    """All pairs that were kept one by one, in the way of `fetch`; it may be none. LinkError."""
+    """All raw pairs, in the way of `fetch`; it may be none. LinkError."""
     pairs = _fetched(session, Reassembly(manifest, RAW_PAIRS), RAW_A_BLOCK)
     codes = np.frombuffer(pairs.records(), dtype="<u2").reshape(-1, 2).astype(np.uint16)
     return RawPairs(int(manifest["raw_first"]), codes[:, 0].copy(), codes[:, 1].copy())

@@ -57,7 +57,7 @@ class RawKnots:
 
 @dataclass(frozen=True, slots=True)
 class RawPairs:
-    """Pairs kept one by one, as measured: codes in arrays of shape (n,), uint16.
+    """Raw pairs, kept one by one as measured: codes in arrays of shape (n,), uint16.
 
     `first`: number of the first of them, counted from the first pair of the first knot.
     """
@@ -152,7 +152,7 @@ class Trace:
     """Voltage codes just before closing, with the channel's input at its zero; None where the
     board cannot bring it there: the profile's zero was taken then."""
     full_rate: FullRatePairs | None = None
-    """Pairs of one stretch, kept one by one; None where none were asked for."""
+    """Raw pairs of one stretch; None where none were asked for."""
     scout: Trace | None = None
     """The coarse sweep before this one that steered it, if there was one."""
 

@@ -182,7 +182,7 @@ class Tracer:
         """One sweep: arm, fire, capture, bleed, fetch.
 
         `knots`: 16 to 512 points. `limit_s`: longest time the contact may be closed.
-        `full_rate`: a stretch whose pairs are kept one by one, in `Trace.full_rate`. `scout`:
+        `full_rate`: a stretch whose raw pairs are kept, in `Trace.full_rate`. `scout`:
         sweep twice, coarsely first; the scout steers where the pairs of the other are kept (about
         its maximum power, where `full_rate` names no start) and how long its contact may be
         closed, a check compares the two, and the scout is in `Trace.scout`.
@@ -351,7 +351,7 @@ class Tracer:
     def _finish(self, sweep_id: bytes, progress: Callable[[str], None], asked: int | None) -> Trace:
         """Wait for the bleed, fetch the held sweep, make the trace.
 
-        `asked`: pairs that were to be kept one by one; None where that is not known.
+        `asked`: raw pairs that were to be kept; None where that is not known.
         """
         fault = self._await_bleed(sweep_id)
         progress("fetching")

@@ -206,7 +206,7 @@ def _draw_curve(axes: Axes, trace: Trace, figures: Figures | None, why_none: str
 
 
 def _draw_pairs(axes: Axes, trace: Trace) -> None:
-    """Pairs kept one by one: faint dots under the curve, pixels in an SVG as well."""
+    """Raw pairs: faint dots under the curve, pixels in an SVG as well."""
     pairs = trace.full_rate
     if pairs is not None:
         faint: dict[str, Any] = {"linestyle": "", "marker": ".", "markersize": 9.0, "zorder": 1.5}
@@ -219,7 +219,7 @@ def _pairs_in_words(trace: Trace) -> str:
     if pairs is None or not len(pairs):
         return ""
     begin_s, end_s = pairs.stretch_s
-    return f"{len(pairs)} pairs one by one, {1e3 * begin_s:.2f} to {1e3 * end_s:.2f} ms"
+    return f"{len(pairs)} raw pairs, {1e3 * begin_s:.2f} to {1e3 * end_s:.2f} ms"
 
 
 def _draw_figures(axes: Axes, right: Axes, trace: Trace, figures: Figures) -> None:
