@@ -14,18 +14,14 @@ export function correct(mcu, world) {
   const api = {
     boot: world.boot,
     nanos: () => world.base + mcu.clock.nanosCounter, // runs on over resets
-    after: (ns, fn) => {
-      const alarm = mcu.clock.createAlarm(fn);
-      alarm.schedule(ns);
-      return alarm;
-    },
+    alarm: (fn) => mcu.clock.createAlarm(fn), // with schedule(ns from now)
   };
   correctAdc(mcu, api);
   correctDma(mcu);
   correctGpio(mcu, api);
   for (const pio of mcu.pio) correctPio(mcu, pio, api);
   startTimerAt(mcu, world.uptimeUs);
-  fillGaps(mcu);
+  fillGaps(mcu, world);
   return api;
 }
 
@@ -257,7 +253,7 @@ function correctPio(mcu, pio, api) {
 }
 
 // Registers that MicroPython touches at start and that rp2040js lacks.
-function fillGaps(mcu) {
+function fillGaps(mcu, world) {
   const remember = (base, first = []) => {
     const words = new Map(first);
     mcu.peripherals[base].readUint32 = (offset) => words.get(offset & 0xfff) ?? 0;
@@ -266,10 +262,10 @@ function fillGaps(mcu) {
   remember(0x40018); // QSPI pads
   remember(0x40064, [[8, 0x100]]); // VREG_AND_CHIP_RESET: HAD_POR
 
-  // Ring oscillator: stable, with a seeded random bit.
+  // Ring oscillator: stable, with a seeded random bit, other ones at each boot.
   const rosc = mcu.peripherals[0x40060];
   const words = new Map();
-  let random = 12345;
+  let random = 12345 + world.boot;
   rosc.readUint32 = (offset) => {
     if ((offset & 0xfff) === 0x18) return 0x80001000;
     if ((offset & 0xfff) !== 0x1c) return words.get(offset & 0xfff) ?? 0;

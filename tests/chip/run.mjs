@@ -20,8 +20,12 @@
 //     {"do": "plant"}                      the plant's state
 //     {"do": "describe", "plant": {...}}   another description, see plant.mjs
 //     {"do": "drive", "pin": 5, "level": 0}  the pin alone
-//     {"do": "stop_loop", "closed": 0}     with it the drive of both coils and of the wave
-//     {"do": "forge", "bytes": [3]}        bytes on the link that no host has sent
+//     {"do": "change", "what": "weld", "value": 1}          something goes wrong now, or at
+//     {"do": "after_closing", "delay_us": 5000, "what": "power_off", "value": 1}   such a time
+//                                          after the source next conducts: names and values of
+//                                          mishaps.py, a source as u_volt, i_ampere, open_volt
+//     {"do": "record"}                     what moved since the start: [us, what, level]
+//     {"do": "forge", "bytes": [3]}        bytes on the link that no host has sent; when, in ns
 //     {"do": "speed", "cap": 0}
 
 import fs from 'node:fs';
@@ -67,11 +71,15 @@ const rom = new Uint32Array(romFile.buffer.slice(romFile.byteOffset, romFile.byt
 const flash = new Uint8Array(FLASH_BYTES).fill(0xff); // what is on the flash, over resets
 flash.set(fs.readFileSync(options.image));
 if (options.lfs) flash.set(fs.readFileSync(options.lfs), FILES_AT);
-const plant = new Plant(options.plant && JSON.parse(fs.readFileSync(options.plant, 'utf8')));
+const outside = { powerOff, powerOn, cutLink };
+const description = options.plant && JSON.parse(fs.readFileSync(options.plant, 'utf8'));
+const plant = new Plant(description, outside);
 
 const world = { base: 0, boot: 0, uptimeUs: Number(options['uptime-us']) };
 let mcu, core, api, usb; // of the present boot
 let resetWanted = null;
+let powered = true;
+let bootWanted = false;
 let edges = [];
 let edgesDropped = 0;
 let said = Buffer.alloc(0);
@@ -111,6 +119,17 @@ function replaceFlashRoutines() {
   };
 }
 
+// The chip stands still from this instruction on.
+function powerOff() {
+  if (!powered) return;
+  powered = false;
+  core.stop = true;
+  for (const pin of OUTPUTS) noteEdge(pin, null, nanos());
+  cutLink();
+}
+
+function powerOn() { bootWanted = !powered; }
+
 function noteEdge(pin, level, ns) {
   if (edges.length < EDGES_KEPT) edges.push([pin, level, Math.round(ns)]);
   else edgesDropped += 1;
@@ -136,8 +155,10 @@ async function boot(carried) {
   };
   usb = new UsbHost(mcu);
   if (carried) for (const pin of OUTPUTS) noteEdge(pin, null, nanos()); // in reset
-  for (const pin of OUTPUTS) api.onPin(pin, (level, ns) => noteEdge(pin, level, ns));
-  api.onPin(MARK, (level, ns) => { if (level === 1) noteEdge(MARK, level, ns); });
+  for (const pin of OUTPUTS) {
+    api.onPin(pin, (level, ns) => { if (powered) noteEdge(pin, level, ns); });
+  }
+  api.onPin(MARK, (level, ns) => { if (powered && level === 1) noteEdge(MARK, level, ns); });
   plant.attach(api);
   mcu.core.PC = 0x10000000;
   core = (await import(`./core.mjs?boot=${world.boot}`)).makeCore(mcu);
@@ -198,7 +219,19 @@ class UsbHost {
   }
 }
 
+function cutLink() {
+  client?.destroy();
+  client = null;
+  usb.forget();
+  const chip = usb;
+  setImmediate(() => chip.setDtr(client !== null)); // between two slices of the chip
+}
+
 const linkServer = net.createServer((socket) => {
+  if (!powered) {
+    socket.destroy();
+    return;
+  }
   client?.destroy();
   client = socket;
   socket.setNoDelay(true);
@@ -228,9 +261,14 @@ const orders = {
   said: () => ({ text: said.toString('latin1') }),
   plant: () => plant.state(nanos()),
   describe: (order) => { plant.describe(order.plant); return {}; },
-  stop_loop: (order) => { plant.stopLoop(order.closed, nanos()); return {}; },
+  change: (order) => { plant.change(order.what, order.value, nanos()); return {}; },
+  after_closing: (order) => {
+    plant.afterClosing(order.delay_us, order.what, order.value);
+    return {};
+  },
+  record: () => ({ entries: plant.record(nanos()) }),
   drive: (order) => { api.drive(order.pin, order.level); return {}; },
-  forge: (order) => { usb.take(Buffer.from(order.bytes)); return {}; },
+  forge: (order) => { usb.take(Buffer.from(order.bytes)); return { ns: Math.round(nanos()) }; },
   speed: (order) => { speed = order.cap; return {}; },
 };
 
@@ -271,11 +309,17 @@ async function turn() {
     }
     until = Math.min(until, allowed);
   }
-  if (until > here) core.run(until - world.base);
-  if (resetWanted) {
+  if (until > here) {
+    if (powered) core.run(until - world.base);
+    else world.base += until - here;
+  }
+  if (!powered) resetWanted = null;
+  if (resetWanted || bootWanted) {
     const carried = resetWanted;
     resetWanted = null;
-    console.error(`chip reset at ${(nanos() / 1e6).toFixed(3)} ms`);
+    bootWanted = false;
+    powered = true;
+    console.error(`chip ${carried ? 'reset' : 'powered'} at ${(nanos() / 1e6).toFixed(3)} ms`);
     world.base = nanos();
     world.boot += 1;
     world.uptimeUs = 0;

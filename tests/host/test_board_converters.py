@@ -11,7 +11,8 @@ import numpy as np
 import pytest
 from test_board import NOISELESS, NOON, board, pairs
 
-from kneewise.emulator.board import OPS, Board
+from kneewise.emulator.board import Board
+from kneewise.emulator.bus import OPS, dispatch
 from kneewise.emulator.converters import (
     CAPACITOR,
     CURRENT,
@@ -169,7 +170,7 @@ def board_file(made: Board) -> Any:
 
     class Bus:
         def call(self, name: str, a: int, b: int) -> bytes:
-            return made.dispatch(OPS[name], a, b)
+            return dispatch(made, OPS[name], a, b)
 
     return firmware_module("hal_emulated").EmulatedHal(Bus(), None, bytes(8), 1)
 
@@ -227,7 +228,7 @@ def test_without_power_the_input_is_back_at_the_source() -> None:
 
 def test_the_new_requests_go_by_number() -> None:
     made = board()
-    assert struct.unpack("<q", made.dispatch(OPS["use_converters"], INTERNAL, 4))[0] == 1
-    made.dispatch(OPS["zero_input"], 1)
+    assert struct.unpack("<q", dispatch(made, OPS["use_converters"], INTERNAL, 4))[0] == 1
+    dispatch(made, OPS["zero_input"], 1)
     assert made.record[-1][1:] == ("zero_input", 1)
     assert made.read(VOLTAGE, 10) < 10 * 40

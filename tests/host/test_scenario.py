@@ -113,6 +113,31 @@ CASES = [
         ("n_ns_vt_v = 1.62", "cells_in_series = 60"),
         "found cells_in_series in [source]; expected either n_ns_vt_v",
     ),
+    (
+        ("capacitance_of_nominal = 1.0", "capacitance_of_nominal = 0.0"),
+        "found load.capacitance_of_nominal = 0.0; expected a number at least 0.05 and at most 5.0. "
+        "Next: correct load.capacitance_of_nominal",
+    ),
+    (
+        ("bleed_of_nominal = 1.0", "bleed_of_nominal = 1000.0"),
+        "found load.bleed_of_nominal = 1000.0; expected a number at least 0.0001 and at most 100.0",
+    ),
+    (
+        ('contact = "relay+switch"', 'contact = "switch"'),
+        'found board.contact = \'switch\'; expected "relay+switch" or "relay"',
+    ),
+    (
+        ("bounce_ms = 0.0", "bounce_ms = 21.0"),
+        "found board.bounce_ms = 21.0; expected a number at least 0.0 and at most 20.0",
+    ),
+    (
+        ("# voltage_stuck_code = 0 ", "voltage_stuck_code = 4096 "),
+        "board.voltage_stuck_code = 4096; expected a whole number at least 0 and at most 4095",
+    ),
+    (
+        ("switch_shorted = false", "switch_shorted = 1"),
+        "found board.switch_shorted = 1; expected true or false",
+    ),
     (("[source]", "[[source]]"), "expected a section [source]. Next: correct source"),
     (
         ("seed = 1", "seed = = 1"),

@@ -19,6 +19,9 @@ def arm(tracer):
         "confirmed": 1,
         "raw_from_us": 0,
         "raw_pairs": 0,
+        "limit_mv": 0xFFFFFFFF,
+        "limit_ma": 0xFFFFFFFF,
+        "exercise": 0,
     }
     return tracer._session.request("arm", values)["token"]
 
@@ -66,7 +69,7 @@ def test_while_charging(after_us, bench, rung):
     one = bench(rung)
     tracer = one.tracer()
     tracer.rest()
-    one.board.power_off_after_closing_us = after_us
+    one.emulated.after_closing(after_us, "power_off")
     token = arm(tracer)
     with pytest.raises(KneewiseError):
         fire_and_look(tracer, token)

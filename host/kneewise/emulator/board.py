@@ -1,7 +1,7 @@
 """The emulated board: what stands between the firmware's pins and the analogue plant.
 
 Comes in: calls of the firmware's emulated board file, in this process or as numbered
-requests from another (`dispatch`). Goes out: code sums, switch states and virtual time, all
+requests from another (`bus.py`). Goes out: code sums, switch states and virtual time, all
 whole numbers. The circuit does not belong here (`plant.py`), nor how a code comes about
 (`converters.py`), nor any decision of the firmware.
 
@@ -18,16 +18,18 @@ contact closed.
 from __future__ import annotations
 
 import contextlib
-import struct
 import time
 from collections import deque
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
+from dataclasses import replace
 
 import numpy as np
 
 from kneewise.emulator.converters import Converters, Scaling
+from kneewise.emulator.mishaps import CIRCUIT, STUCK, Mishaps, Value, check, undoes
 from kneewise.emulator.plant import Plant
 from kneewise.emulator.scenario import Scenario
+from kneewise.emulator.source import Source
 
 Level = int | None
 """1, 0, or None for a pin that nothing drives."""
@@ -45,13 +47,21 @@ class PowerLost(BaseException):
     """
 
 
+class WatchdogBite(PowerLost):
+    """The watchdog has reset the board; it has power, and starts again."""
+
+
+POWER_ON, WATCHDOG, SOFT_RESET = 1, 3, 4  # reset causes, as on the wire
+
+
 class Board:
     """One board, powered from the moment it is made, on one scenario.
 
     `clock` gives seconds. `record` holds (virtual microseconds, what, level) of every change
     of a commanded output (`relay`, `bleed_release`, `zero_input`, `pulse`: 1 while the wave
-    runs) and of an actual contact (`relay_contact`, `switch_contact`, `bleed_contact`), newest
-    last.
+    runs), of an actual contact (`relay_contact`, `switch_contact`, `bleed_contact`), of the path
+    as a whole (`conducting`), and of what a test has let go wrong ("event:" and its name in
+    `mishaps.py`: 1, or 0 where it is put right), newest last.
     """
 
     def __init__(
@@ -60,29 +70,31 @@ class Board:
         *,
         scaling: Scaling | None = None,
         clock: Callable[[], float] = time.monotonic,
+        cut_link: Callable[[], None] | None = None,
     ) -> None:
         self.scenario = scenario
         self.scaling = scaling or Scaling()
         self.record: deque[tuple[int, str, Level]] = deque(maxlen=RECORD_ENTRIES)
-        self.power_off_after_closing_us: int | None = None
-        """Lose power this long after the source next begins to conduct; then None again."""
-        self.open_stop_loop_after_closing_us: int | None = None
-        """Open the stop loop this long after the source next begins to conduct; then None."""
-        self._power_off_us: int | None = None
-        self._stop_loop_us: int | None = None
+        self._foreseen = scenario  # once all that is planned has happened
+        self._mishaps = Mishaps()
+        self._cut_link = cut_link
         self._clock = clock
         self._plant = Plant(scenario.build_source(), scenario.build_circuit(), self._moved)
         self._converters = Converters(scenario, self.scaling)
         self._powered = True
+        self.reset_cause = POWER_ON
+        """Code of the last reset, as hello has it."""
+        self._breaks = False
+        self._bite_us: int | None = None
         self._boot_us = 0
         self._quiet = False
         self._quiet_count = 0
         self._levels: dict[str, Level] = dict.fromkeys(
             ("relay", "bleed_release", "zero_input", "pulse")
         )
-        self._stop_loop_open = False
+        self._stop_loop_open = scenario.board.stop_loop_open
+        self._plant.stop_loop(not self._stop_loop_open)
         self._anchor()
-        self.open_stop_loop(scenario.board.stop_loop_open)
 
     # -- time -----------------------------------------------------------------------------
 
@@ -123,24 +135,31 @@ class Board:
         self._quiet = bool(begin)
 
     def _pass_until(self, end_us: int) -> None:
-        plant = self._plant
+        plant, powered = self._plant, self._powered
         while plant.now_us < end_us:
             stops = [end_us]
             if self._converters.capturing:
                 stops.append(plant.now_us + CHUNK_US)
-            planned = (self.power_off_after_closing_us, self.open_stop_loop_after_closing_us)
-            if planned != (None, None) and plant.next_event_us is not None:
+            if self._mishaps.waiting and plant.next_event_us is not None:
                 # A closing sets the moment of what is planned, so none may be passed over.
                 stops.append(plant.next_event_us)
-            stops += [us for us in (self._power_off_us, self._stop_loop_us) if us is not None]
+            if self._mishaps.next_us is not None:
+                stops.append(self._mishaps.next_us)
+            if self._breaks and self._converters.next_look_us is not None:
+                stops.append(self._converters.next_look_us)
+            if self._quiet and self._bite_us is not None:
+                stops.append(max(self._bite_us, plant.now_us))
             self._converters.run(plant, min(stops), self._stop_loop_open)
-            if self._stop_loop_us is not None and self._stop_loop_us <= plant.now_us:
-                self._stop_loop_us = None
-                self.open_stop_loop(True)
-            if self._power_off_us is not None and self._power_off_us <= plant.now_us:
-                self._power_off_us = None
-                self._let_go(powered=False)
+            for what, given in self._mishaps.take(plant.now_us):
+                self._happen(what, given)
+            if self._tripped():
+                self._stop_wave()
+            if powered and not self._powered:
                 raise PowerLost(f"at {plant.now_us} us of virtual time")
+            if self._quiet and self._bite_us is not None and self._bite_us <= plant.now_us:
+                self._let_go(powered=True)
+                self.reset_cause = WATCHDOG
+                raise WatchdogBite(f"at {plant.now_us} us of virtual time")
 
     # -- power and outputs ----------------------------------------------------------------
 
@@ -159,8 +178,11 @@ class Board:
     def _let_go(self, *, powered: bool) -> None:
         """As out of reset: no pin driven, no converter running, the clock followed."""
         self._powered = powered
+        self.reset_cause = POWER_ON
+        self._breaks = False
+        self._bite_us = None
         self._boot_us = self._plant.now_us
-        self._power_off_us = None
+        self._mishaps.power_is_gone()
         self._quiet = False
         self._anchor()
         self._converters.reset()
@@ -203,9 +225,17 @@ class Board:
         A new call replaces what was left.
         """
         self.tick_wall()
-        if self._powered:
+        if self._powered and not self._tripped():
             self._note("pulse", None if us is None else int(us > 0))
             self._plant.pulse(us or 0)
+
+    def _tripped(self) -> bool:
+        """Whether the supervision has ended the wave for good."""
+        return self._breaks and self._converters.trips != 0
+
+    def _stop_wave(self) -> None:
+        self._note("pulse", 0)
+        self._plant.pulse(0)
 
     def _note(self, what: str, level: Level) -> None:
         if self._levels[what] != level:
@@ -216,23 +246,53 @@ class Board:
         """Notice of the plant."""
         if what in self._levels:
             self._levels[what] = level
-        if what != "conducting":
-            self.record.append((time_us, what, level))
-        elif level:
-            if self.power_off_after_closing_us is not None:
-                self._power_off_us = time_us + self.power_off_after_closing_us
-                self.power_off_after_closing_us = None
-            if self.open_stop_loop_after_closing_us is not None:
-                self._stop_loop_us = time_us + self.open_stop_loop_after_closing_us
-                self.open_stop_loop_after_closing_us = None
+        self.record.append((time_us, what, level))
+        if what == "conducting" and level:
+            self._mishaps.closed(time_us)
+
+    # -- what goes wrong ------------------------------------------------------------------
+
+    def after_closing(self, delay_us: int, what: str, value: Value = 1) -> None:
+        """Let something happen, once, `delay_us` after the source next begins to conduct.
+
+        Names and values are those of `mishaps.py`. ValueError, ScenarioError.
+        """
+        self._mishaps.after_closing(delay_us, what, self._given(what, value, delay_us))
+
+    def change(self, what: str, value: Value = 1) -> None:
+        """Let the same happen now."""
+        self.tick_wall()
+        self._happen(what, self._given(what, value))
+
+    def _given(self, what: str, value: Value, delay_us: int = 0) -> tuple[Value, Source | None]:
+        """With the source that a change of it leads to."""
+        check(what, value, delay_us)
+        if what == "link_cut" and self._cut_link is None:
+            raise ValueError("this board has no link to cut")
+        if what != "source":
+            return value, None
+        self._foreseen = self._foreseen.varied(source=value)
+        return value, self._foreseen.build_source()
+
+    def _happen(self, what: str, given: tuple[Value, Source | None]) -> None:
+        value, source = given
+        self.record.append((self._plant.now_us, f"event:{what}", int(not undoes(what, value))))
+        if what in CIRCUIT:
+            self._plant.alter(circuit=replace(self._plant.circuit, **{CIRCUIT[what]: bool(value)}))
+        elif what in STUCK:
+            assert not isinstance(value, Mapping)
+            self._converters.stuck[STUCK[what]] = value
+        elif what == "source":
+            self._plant.alter(source=source)
+        elif what == "stop_loop":
+            self._stop_loop_open = bool(value)
+            self._plant.stop_loop(not value)
+        elif what == "power_off":
+            self._let_go(powered=not value)
+        elif self._cut_link is not None and value:
+            self._cut_link()
 
     # -- inputs ---------------------------------------------------------------------------
-
-    def open_stop_loop(self, is_open: bool) -> None:
-        """Open or close the lid: with it the drive current of every coil and of the wave."""
-        self.tick_wall()
-        self._stop_loop_open = is_open
-        self._plant.stop_loop(not is_open)
 
     def stop_loop_closed(self) -> int:
         self.tick_wall()
@@ -291,6 +351,19 @@ class Board:
         self._converters.stop()
         return 0
 
+    def watchdog(self, ms: int) -> None:
+        """Bite `ms` from now on, unless fed by another call; 0 stops it.
+
+        It counts declared waits within a quiet alone: a busy machine is no firmware that hangs.
+        """
+        self.tick_wall()
+        self._bite_us = self._plant.now_us + 1000 * ms if ms else None
+
+    def supervise_breaks(self, breaks: int) -> None:
+        """1: from now on a trip ends the wave at once, until the supervision ends."""
+        self.tick_wall()
+        self._breaks = bool(breaks)
+
     def supervise(self, voltage_trip_code: int, current_trip_code: int) -> None:
         """Look every millisecond from now on; a code at or above its trip code trips."""
         self.tick_wall()
@@ -306,8 +379,14 @@ class Board:
         self.tick_wall()
         return self._converters.trips
 
+    def trip_code(self) -> int:
+        """The code that was the first to trip."""
+        self.tick_wall()
+        return self._converters.trip_code
+
     def supervise_end(self) -> None:
         self.tick_wall()
+        self._breaks = False
         self._converters.supervise_end()
 
     # -- what a test may look at, and the firmware may not --------------------------------
@@ -326,53 +405,21 @@ class Board:
         return self._plant.capacitor_v
 
     @property
+    def loop_current_a(self) -> float:
+        """The true current through the contact (A), at the virtual time reached."""
+        return self._plant.loop_current_a
+
+    @property
+    def bleed_energy_j(self) -> float:
+        """What the bleed resistor has truly taken since the plant began (J)."""
+        return self._plant.bleed_energy_j
+
+    @property
+    def hot_openings(self) -> list[tuple[int, float]]:
+        """(virtual microseconds, amperes broken) of each opening under more than 0.1 A."""
+        return self._plant.hot_openings
+
+    @property
     def virtual_us(self) -> int:
         """Virtual time reached since the plant began, which no power cycle sets back."""
         return self._plant.now_us
-
-    # -- from another process -------------------------------------------------------------
-
-    def dispatch(self, op: int, a: int = 0, b: int = 0) -> bytes:
-        """Carry out one numbered request: an i64 in little endian, or the bytes of a take.
-
-        Requests without a result answer 0. A negative level stands for an undriven pin.
-        Raises PowerLost, and ValueError for a number that `OPS` does not have.
-        """
-        if not 1 <= op <= len(_CALLS):
-            raise ValueError(f"no request has the number {op}; there are 1 to {len(_CALLS)}")
-        reply = _CALLS[op - 1][1](self, a, b)
-        if isinstance(reply, bytes):
-            return reply
-        return struct.pack("<q", reply or 0)
-
-
-def _level(value: int) -> Level:
-    return None if value < 0 else value
-
-
-_Call = Callable[[Board, int, int], int | bytes | None]
-# The order is the number: append only.
-_CALLS: tuple[tuple[str, _Call], ...] = (
-    ("now_us", lambda board, a, b: board.now_us()),
-    ("wait", lambda board, a, b: board.wait(a)),
-    ("tick_wall", lambda board, a, b: board.tick_wall()),
-    ("quiet", lambda board, a, b: board.quiet(a)),
-    ("relay", lambda board, a, b: board.relay(_level(a))),
-    ("bleed_release", lambda board, a, b: board.bleed_release(_level(a))),
-    ("pulse", lambda board, a, b: board.pulse(_level(a))),
-    ("stop_loop_closed", lambda board, a, b: board.stop_loop_closed()),
-    ("leads_reversed", lambda board, a, b: board.leads_reversed()),
-    ("read", lambda board, a, b: board.read(a, b)),
-    ("capture_start", lambda board, a, b: board.capture_start()),
-    ("capture_written", lambda board, a, b: board.capture_written()),
-    ("capture_take", lambda board, a, b: board.capture_take()),
-    ("capture_stop", lambda board, a, b: board.capture_stop()),
-    ("supervise", lambda board, a, b: board.supervise(a, b)),
-    ("supervision_ticks", lambda board, a, b: board.supervision_ticks()),
-    ("trips", lambda board, a, b: board.trips()),
-    ("supervise_end", lambda board, a, b: board.supervise_end()),
-    ("use_converters", lambda board, a, b: board.use_converters(a, b)),
-    ("zero_input", lambda board, a, b: board.zero_input(_level(a))),
-)
-OPS: dict[str, int] = {name: number for number, (name, _) in enumerate(_CALLS, start=1)}
-"""Number of each request, for the emulated board file on the other side of a byte pair."""

@@ -18,14 +18,18 @@ from typing import Any
 import numpy as np
 
 from kneewire.profile_record import seal
+from kneewise.emulator.board import Level
 from kneewise.emulator.converters import Scaling
 from kneewise.emulator.firmware import compiled, device_folder
+from kneewise.emulator.mishaps import Value, check
 from kneewise.emulator.scenario import Scenario
 from kneewise.errors import UsageError
 from kneewise.link.port import Port, open_port
 
 CHIP_DEVICE_ID = bytes(8)  # the emulated flash chip has no id of its own
 CURVE_POINTS = 2001
+REVERSE_A = 100.0
+REVERSE_POINTS = 501
 # What the two SPI converters at the chip's pins keep to: slower than a fast part.
 SPI_PARTS = {"valid_ns": 25, "convert_ns": 700}
 START_MS = 1500  # MicroPython, then the compiled firmware
@@ -56,31 +60,36 @@ def missing() -> str:
 
 def plant_description(scenario: Scenario, scaling: Scaling) -> dict[str, Any]:
     """The scenario as the plant beside the chip takes it: a table of I over V, and parts."""
-    voltage, current = scenario.build_source().curve(CURVE_POINTS)
     circuit = scenario.build_circuit()
     bank = scenario.bank
     board = scenario.board
     return {
-        "u_volt": np.asarray(voltage).tolist(),
-        "i_ampere": np.asarray(current).tolist(),
-        "c_farad": bank.capacitance_f,
+        **source_table(scenario),
+        "c_farad": circuit.capacitance_f,
         "esr_ohm": bank.capacitor_esr_ohm,
         "line_ohm": circuit.line_ohm,
-        "bleed_ohm": bank.bleed_ohm,
+        "bleed_ohm": circuit.bleed_ohm,
         "leak_ohm": bank.permanent_bleeder_ohm,
         "v_start": bank.capacitor_start_v,
+        "bare_relay": 1 if circuit.bare_relay else 0,
+        "bounce_us": circuit.bounce_us,
         "welded": 1 if board.contact_welded else 0,
+        "relay_welded": 1 if board.relay_welded else 0,
+        "switch_shorted": 1 if board.switch_shorted else 0,
         "bleed_open": 1 if board.bleed_open else 0,
         "relay_operate_us": circuit.relay_operate_us,
         "relay_release_us": circuit.relay_release_us,
         "bleed_operate_us": circuit.bleed_operate_us,
         "bleed_release_us": circuit.bleed_release_us,
         "switch_open_us": circuit.switch_open_us,
-        "volt_per_code": [scaling.voltage_v_per_code, scaling.capacitor_v_per_code],
-        "ampere_per_code": scaling.current_a_per_code,
+        "volt_per_code": [
+            scaling.voltage_v_per_code / (1.0 + board.voltage_gain_error),
+            scaling.capacitor_v_per_code,
+        ],
+        "ampere_per_code": scaling.current_a_per_code / (1.0 + board.current_gain_error),
         "zero_code": [
-            scaling.voltage_zero_code,
-            scaling.current_zero_code,
+            scaling.voltage_zero_code + board.voltage_offset_codes,
+            scaling.current_zero_code + board.current_offset_codes,
             scaling.capacitor_zero_code,
         ],
         "noise_code": board.adc_noise_codes,
@@ -89,6 +98,24 @@ def plant_description(scenario: Scenario, scaling: Scaling) -> dict[str, Any]:
         "seed": scenario.seed,
         "stop_loop": 0 if board.stop_loop_open else 1,
         "reversed": 1 if board.leads_reversed else 0,
+        "stuck": [board.voltage_stuck_code, board.current_stuck_code, board.capacitor_stuck_code],
+    }
+
+
+def source_table(scenario: Scenario) -> dict[str, Any]:
+    """The source as the plant beside the chip takes it: its curve from Isc to Voc, and on to
+    where a capacitor above Voc drives REVERSE_A back into it.
+    """
+    source = scenario.build_source()
+    voltage, current = source.curve(CURVE_POINTS)
+    open_v = float(source.voltage_at(0.0))
+    # In the diode voltage, which differs from the terminals' by the drop at Rs.
+    farthest = float(source.voltage_at(-REVERSE_A)) - REVERSE_A * source.series_resistance_ohm
+    far = np.linspace(open_v, farthest, REVERSE_POINTS)[1:]
+    return {
+        "u_volt": [*voltage.tolist(), *source.voltage(far).tolist()],
+        "i_ampere": [*current.tolist(), *source.current(far).tolist()],
+        "open_volt": open_v,
     }
 
 
@@ -118,6 +145,7 @@ class ChipTracer:
         runner = _runner()
         assert runner is not None
         self.scenario = scenario
+        self._foreseen = scenario  # once all that is planned has happened
         files: dict[str, bytes] = {
             f"/{path.relative_to(compiled('armv6m'))}": path.read_bytes()
             for path in compiled("armv6m").rglob("*.mpy")
@@ -139,6 +167,30 @@ class ChipTracer:
         if not self._port_name:
             self._port_name = self.chip.serial_port()
         return open_port(self._port_name)
+
+    # -- what goes wrong ---------------------------------------------------------------
+
+    def after_closing(self, delay_us: int, what: str, value: Value = 1) -> None:
+        """Let something of `mishaps.py` happen `delay_us` after the source next conducts."""
+        given = self._given(what, value, delay_us)
+        self.chip.order("after_closing", delay_us=delay_us, what=what, value=given)
+
+    def change(self, what: str, value: Value = 1) -> None:
+        """Let it happen now."""
+        self.chip.order("change", what=what, value=self._given(what, value))
+        if what == "power_off" and not value:
+            self.chip.let_pass(START_MS)
+
+    def _given(self, what: str, value: Value, delay_us: int = 0) -> Any:
+        check(what, value, delay_us)
+        if what != "source":
+            return value
+        self._foreseen = self._foreseen.varied(source=value)
+        return source_table(self._foreseen)
+
+    def record(self) -> list[tuple[int, str, Level]]:
+        """As `Board.record`: (emulated microseconds, what, level) of pins, contacts and mishaps."""
+        return [(us, what, level) for us, what, level in self.chip.order("record")["entries"]]
 
     def close(self) -> None:
         """Stop the emulation; twice is harmless."""

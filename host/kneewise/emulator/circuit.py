@@ -31,6 +31,7 @@ import numpy as np
 
 from kneewise.emulator.source import Floats, Source, solve_diode
 
+SHORTED = 1e-3  # of a bleed resistor's value, once it has shorted
 STEP = 0.1  # step times the fastest rate; leaves about 1e-7 of the thermal voltage
 TAIL = 1e-5  # distance to equilibrium, in thermal voltages, from which it is linear (1e-10 left)
 
@@ -56,10 +57,20 @@ class Circuit:
     bleed_operate_us: int = 5000
     bleed_release_us: int = 5000
     leads_reversed: bool = False
+    bare_relay: bool = False
+    """No series switch: the make-and-break wave drives the relay's coil, and the stop loop
+    carries no drive current."""
+    bounce_us: int = 0
+    """How long the contact of a bare relay opens and closes again after it first makes."""
+    bounce_seed: int = 0
     contact_welded: bool = False
     """Relay and switch both conduct, whatever is commanded."""
+    relay_welded: bool = False
+    switch_shorted: bool = False
     bleed_open: bool = False
     """The bleed contact moves but its resistor is not in circuit."""
+    bleed_shorted: bool = False
+    """What is left of the bleed resistor is SHORTED of its value."""
 
     @property
     def line_ohm(self) -> float:
@@ -67,14 +78,19 @@ class Circuit:
         return (
             self.lead_resistance_ohm
             + self.contact_resistance_ohm
-            + self.switch_ohm
+            + (0.0 if self.bare_relay else self.switch_ohm)
             + self.shunt_ohm
         )
 
+    def bleed_siemens(self, bleed_closed: bool) -> float:
+        """Conductance of the bleed resistor, where it is in circuit."""
+        if not bleed_closed or self.bleed_open:
+            return 0.0
+        return 1.0 / (self.bleed_ohm * (SHORTED if self.bleed_shorted else 1.0))
+
     def leak_siemens(self, bleed_closed: bool) -> float:
         """Conductance across the bank's terminals."""
-        bleeding = bleed_closed and not self.bleed_open
-        return 1.0 / self.permanent_bleeder_ohm + (1.0 / self.bleed_ohm if bleeding else 0.0)
+        return 1.0 / self.permanent_bleeder_ohm + self.bleed_siemens(bleed_closed)
 
 
 class Stretch(Protocol):
@@ -88,12 +104,17 @@ class Stretch(Protocol):
     def capacitor_v(self, time: float) -> float:
         """Voltage on the ideal capacitor, without its ESR: the state that outlives the stretch."""
 
+    def bleed_j(self, time: float) -> float:
+        """Energy that the bleed resistor has taken since the stretch began."""
+
 
 class OpenStretch:
     """Contact open: the source at rest, the capacitor on its bleeders."""
 
-    def __init__(self, circuit: Circuit, leak: float, open_v: float, start_us: int, v0: float):
+    def __init__(self, circuit: Circuit, bled: bool, open_v: float, start_us: int, v0: float):
         self.start_us = start_us
+        leak = circuit.leak_siemens(bled)
+        self._bleed = circuit.bleed_siemens(bled)
         self._open_v = open_v
         self._v0 = v0
         share = 1.0 + circuit.capacitor_esr_ohm * leak
@@ -107,12 +128,21 @@ class OpenStretch:
     def capacitor_v(self, time: float) -> float:
         return self._v0 * math.exp(-self._rate * time)
 
+    def bleed_j(self, time: float) -> float:
+        """Integral of v^2 G over one exponential."""
+        if not self._bleed:
+            return 0.0
+        spent = -math.expm1(-2.0 * self._rate * time) / (2.0 * self._rate)
+        return self._bleed * (self._v0 / self._share) ** 2 * spent
+
 
 class ClosedStretch:
     """Contact closed: one equation in the diode voltage, integrated as far as was asked."""
 
-    def __init__(self, source: Source, circuit: Circuit, leak: float, start_us: int, v0: float):
+    def __init__(self, source: Source, circuit: Circuit, bled: bool, start_us: int, v0: float):
         self.start_us = start_us
+        leak = circuit.leak_siemens(bled)
+        self._bleed = circuit.bleed_siemens(bled)
         self._a = source.n_ns_vt_v
         self._esr = circuit.capacitor_esr_ohm
         rs, i0 = source.series_resistance_ohm, source.saturation_current_a
@@ -230,3 +260,14 @@ class ClosedStretch:
             u = self._step(self._u[at], self._slopes[at], time - self._times[at])
         c = self._capacitor
         return c[0] + c[1] * math.exp(u / self._a) + c[2] * u
+
+    def bleed_j(self, time: float) -> float:
+        """Integral of v^2 G by Simpson's rule over each step; from the tail on, v stands still."""
+        if not self._bleed:
+            return 0.0
+        self._reach(time)
+        ends = np.array([*(t for t in self._times if t < time), time])
+        middles = 0.5 * (ends[1:] + ends[:-1])
+        power = self._bleed * self.values(np.sort(np.concatenate((ends, middles))))[2] ** 2
+        parts = power[:-1:2] + 4.0 * power[1::2] + power[2::2]
+        return float(np.sum(np.diff(ends) * parts)) / 6.0

@@ -50,7 +50,9 @@ class _Channel:
     code_max: int = 4095
     wide_code_lsb: float = 1.0
 
-    def codes(self, analogue: Floats, noise: Floats) -> Codes:
+    def codes(self, analogue: Floats, noise: Floats, stuck_code: int | None) -> Codes:
+        if stuck_code is not None:
+            return np.full(len(analogue), stuck_code * (self.code_max + 1) // 4096, np.uint16)
         exact = self.zero_code + analogue * self.codes_per_unit + noise + 0.5
         inside = np.clip(exact, 0.0, np.nextafter(self.code_max + 1.0, 0.0))
         if self.wide_code_lsb == 1.0:
@@ -99,7 +101,21 @@ class _Supervision:
     current_trip_code: int
     ticks: int = 0
     trips: int = 0
+    trip_code: int = 0
     running: bool = True
+
+    def look(self, pairs: Codes, stop_loop_open: bool) -> None:
+        """One look at the newest two pairs, shape (2, 2): one alone may be noise."""
+        self.ticks += 1
+        if stop_loop_open:
+            self.trips |= TRIP_STOP_LOOP
+        codes = (self.voltage_trip_code, self.current_trip_code)
+        for column, (trip_code, bit) in enumerate(
+            zip(codes, (TRIP_OVER_VOLTAGE, TRIP_OVER_CURRENT), strict=True)
+        ):
+            if self.trips & ~TRIP_STOP_LOOP == 0 and (pairs[:, column] >= trip_code).all():
+                self.trip_code = int(pairs[1, column])
+                self.trips |= bit
 
 
 class Converters:
@@ -109,6 +125,9 @@ class Converters:
         self._channels = _channels(scaling, scenario)
         self._kind = KINDS[scenario.board.converter]
         self._noise_codes = scenario.board.adc_noise_codes
+        b = scenario.board
+        self.stuck = [b.voltage_stuck_code, b.current_stuck_code, b.capacitor_stuck_code]
+        """For each channel the 12-bit code that it always reads, or None."""
         self._seed = scenario.seed
         self._idle_random = np.random.default_rng([self._seed, 0])
         self._random = self._idle_random
@@ -119,7 +138,7 @@ class Converters:
         self._start_us: int | None = None
         self._pairs = 0
         self._untaken = bytearray()
-        self._newest = (0, 0)
+        self._newest = np.zeros((2, 2), dtype="<u2")
         self._watch = _Supervision(0, 0, 0, running=False)
         self._pair_us = PAIR_US
         self.voltage_at_zero = False
@@ -155,7 +174,9 @@ class Converters:
         """Convert one channel at instants already sampled."""
         if channel == VOLTAGE and self.voltage_at_zero:
             analogue = np.zeros_like(analogue)
-        return self._channels[channel].codes(analogue, self._noise(len(analogue)))
+        return self._channels[channel].codes(
+            analogue, self._noise(len(analogue)), self.stuck[channel]
+        )
 
     # -- capture --------------------------------------------------------------------------
 
@@ -176,7 +197,7 @@ class Converters:
         self._start_us = now_us
         self._pairs = 0
         self._untaken.clear()
-        self._newest = (0, 0)
+        self._newest = np.zeros((2, 2), dtype="<u2")
 
     def take(self) -> bytes:
         """The newest pairs not yet taken, at most UNTAKEN_PAIRS of them."""
@@ -194,8 +215,6 @@ class Converters:
         made = self._make_pairs(plant, upto_us)
         plant.advance_to(upto_us)
         self._look(upto_us, made, first, stop_loop_open)
-        if len(made):
-            self._newest = (int(made[-1, 0]), int(made[-1, 1]))
 
     def _make_pairs(self, plant: Plant, upto_us: int) -> Codes:
         """Those complete by `upto_us`: shape (n, 2), voltage first."""
@@ -211,8 +230,8 @@ class Converters:
         if self.voltage_at_zero:
             voltage = np.zeros_like(voltage)
         noise = self._noise(2 * count)
-        made[:, 0] = self._channels[VOLTAGE].codes(voltage, noise[0::2])
-        made[:, 1] = self._channels[CURRENT].codes(current, noise[1::2])
+        made[:, 0] = self._channels[VOLTAGE].codes(voltage, noise[0::2], self.stuck[VOLTAGE])
+        made[:, 1] = self._channels[CURRENT].codes(current, noise[1::2], self.stuck[CURRENT])
         self._untaken += made.tobytes()
         del self._untaken[: max(0, len(self._untaken) - 4 * UNTAKEN_PAIRS)]
         self._pairs += count
@@ -237,19 +256,24 @@ class Converters:
         """TRIP_ bits seen since `supervise`."""
         return self._watch.trips
 
+    @property
+    def trip_code(self) -> int:
+        """The code that was the first to trip."""
+        return self._watch.trip_code
+
+    @property
+    def next_look_us(self) -> int | None:
+        """When the supervision looks next."""
+        watch = self._watch
+        return watch.start_us + TICK_US * (watch.ticks + 1) if watch.running else None
+
     def _look(self, upto_us: int, made: Codes, first: int, stop_loop_open: bool) -> None:
         """Take the looks due by `upto_us`; `made` holds the pairs from number `first` on."""
         watch = self._watch
+        known = np.concatenate((self._newest, made))
         while watch.running and (due_us := watch.start_us + TICK_US * (watch.ticks + 1)) <= upto_us:
-            watch.ticks += 1
-            voltage, current = self._newest
+            newest = len(self._newest)
             if self._start_us is not None:
-                newest = (due_us - self._start_us) // self._pair_us - 1 - first
-                if newest >= 0:
-                    voltage, current = (int(code) for code in made[newest])
-            if stop_loop_open:
-                watch.trips |= TRIP_STOP_LOOP
-            if voltage >= watch.voltage_trip_code:
-                watch.trips |= TRIP_OVER_VOLTAGE
-            if current >= watch.current_trip_code:
-                watch.trips |= TRIP_OVER_CURRENT
+                newest += min((due_us - self._start_us) // self._pair_us - first, len(made))
+            watch.look(known[max(newest, 2) - 2 :][:2], stop_loop_open)
+        self._newest = known[-2:]

@@ -24,7 +24,7 @@ from typing import Any
 
 import kneewire
 from kneewire.profile_record import seal
-from kneewise.emulator.board import OPS
+from kneewise.emulator.bus import OPS
 
 # What the wire's fields and hazards mean: for people, not for the firmware's memory.
 _PROSE = ("hazards.py", "meanings.py", "spec.py")

@@ -8,15 +8,19 @@ time has reached the host's deadline. So the same seed gives the same bytes, alw
 from __future__ import annotations
 
 import math
+import shutil
 import tempfile
 import threading
+import weakref
 from pathlib import Path
 from typing import Any
 
 from kneewire.profile_record import seal
-from kneewise.emulator.board import OPS, Board, PowerLost
+from kneewise.emulator.board import SOFT_RESET, Board, PowerLost, WatchdogBite
+from kneewise.emulator.bus import OPS, dispatch
 from kneewise.emulator.converters import Scaling
 from kneewise.emulator.firmware import boot_seed, firmware_module
+from kneewise.emulator.mishaps import Value
 from kneewise.emulator.prompt import RESET, Prompt
 from kneewise.emulator.scenario import Scenario
 from kneewise.errors import LinkError
@@ -38,14 +42,14 @@ class _DirectBus:
         self._board = board
 
     def call(self, name: str, a: int, b: int) -> bytes:
-        return self._board.dispatch(OPS[name], a, b)
+        return dispatch(self._board, OPS[name], a, b)
 
 
 class InProcessTracer:
     """An emulated tracer in this process; `connect` gives a port to it.
 
     `board` is the emulated board. `unplug` takes power and link away, `plug` gives them back;
-    `cut_link` takes the link alone.
+    `cut_link` takes the link alone. `change` and `after_closing` let something go wrong.
     """
 
     rung = "in-process"
@@ -54,17 +58,17 @@ class InProcessTracer:
         self, scenario: Scenario, scaling: Scaling, record: bytes, device_id: bytes
     ) -> None:
         self.scenario = scenario
-        self.board = Board(scenario, scaling=scaling, clock=lambda: 0.0)
+        self.board = Board(scenario, scaling=scaling, clock=lambda: 0.0, cut_link=self.cut_link)
         self.crash: BaseException | None = None
         """What ended the firmware, if anything did."""
         self._device_id = device_id
-        self._record = record
+        self._flash = Path(tempfile.mkdtemp(prefix="kneewise-"))
+        weakref.finalize(self, shutil.rmtree, self._flash, ignore_errors=True)
+        (self._flash / "profile.bin").write_bytes(seal(record))
         self._boots = 0
         self._to_device = bytearray()
         self._to_host = bytearray()
         self._thread: threading.Thread | None = None
-        self._device_turn = threading.Semaphore(0)
-        self._host_turn = threading.Semaphore(0)
         self._host_until_us = 0
         self._sleeping = False
         self._stopping = False
@@ -136,11 +140,17 @@ class InProcessTracer:
         if self._thread is not None:
             return
         self._stopping = False
+        # A firmware that ended by itself, and one that was ended, leave turns that nobody took.
+        self._device_turn = threading.Semaphore(0)
+        self._host_turn = threading.Semaphore(0)
         self._interrupted = False
         self._prompt = None
         self.crash = None
         self._to_device.clear()
         self._to_host.clear()
+        # An unplugging leaves them out of step.
+        self._device_turn = threading.Semaphore(0)
+        self._host_turn = threading.Semaphore(0)
         self.board.power(True)
         self._boots += 1
         self._thread = threading.Thread(target=self._run, daemon=True, name="emulated tracer")
@@ -162,6 +172,21 @@ class InProcessTracer:
         """Unplug; twice is harmless."""
         self.unplug()
 
+    # -- what goes wrong ---------------------------------------------------------------
+
+    def after_closing(self, delay_us: int, what: str, value: Value = 1) -> None:
+        """Let something of `mishaps.py` happen `delay_us` after the source next conducts."""
+        self.board.after_closing(delay_us, what, value)
+
+    def change(self, what: str, value: Value = 1) -> None:
+        """Let it happen now, as far as the virtual time has come."""
+        if what != "power_off":
+            self.board.change(what, value)
+        elif value:
+            self.unplug()
+        else:
+            self.plug()
+
     # -- the device's side -------------------------------------------------------------
 
     def _run(self) -> None:
@@ -171,8 +196,14 @@ class InProcessTracer:
                 return
             while True:
                 self.firmware = self._boot()
-                while self._serve() != RESET:
-                    pass
+                try:
+                    while self._serve() != RESET:
+                        pass
+                    self.board.reset_cause = SOFT_RESET
+                except WatchdogBite:
+                    # The bus goes away with the chip, and comes back.
+                    self.cut_link()
+                    self._to_device.clear()
                 self._boots += 1
         except BaseException as error:  # what ends the firmware is told to the host
             self.crash = error
@@ -188,10 +219,9 @@ class InProcessTracer:
         )
         buffers = firmware_module("tracer.memory").Buffers()
         loop = firmware_module("tracer.loop").Loop
-        with tempfile.TemporaryDirectory() as folder:
-            profile = Path(folder) / "profile.bin"
-            profile.write_bytes(seal(self._record))
-            return loop(hal, buffers, str(profile))
+        return loop(
+            hal, buffers, str(self._flash / "profile.bin"), str(self._flash / "logbook.bin")
+        )
 
     def _serve(self) -> str:
         """Run the firmware, then the prompt that it leaves to; what the prompt was told."""
@@ -221,8 +251,10 @@ class InProcessTracer:
 
     def hand_over(self) -> None:
         """Called by the firmware's thread: let the host go on, wait for the next turn."""
+        # Without power nobody hands back: what the firmware's clean-up still waits for ends too.
         answered = self._to_host and not self._sleeping
-        if answered or self.board.virtual_us >= self._host_until_us:
+        due = answered or self.board.virtual_us >= self._host_until_us
+        if due and not self._stopping:
             self._host_turn.release()
             self._device_turn.acquire()
         if self._stopping:

@@ -7,13 +7,16 @@ emulator:RUNG[:FILE.toml]       RUNG is micropython or in-process
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
 from functools import lru_cache
 from pathlib import Path
 
+from kneewire.guards import STORED_MJ
 from kneewise.emulator.chip import CHIP_DEVICE_ID, ChipTracer
 from kneewise.emulator.converters import Scaling
 from kneewise.emulator.firmware import device_folder
+from kneewise.emulator.hands import EmulatedHands
 from kneewise.emulator.inprocess import InProcessTracer
 from kneewise.emulator.process import ProcessTracer, available
 from kneewise.emulator.scenario import Scenario
@@ -39,12 +42,16 @@ def open_emulator(target: str) -> Opened:
         rung=tracer.rung,
         scenario=scenario.content(),
         truth=scenario.build_source().truth(),
+        hands=None if isinstance(tracer, ChipTracer) else EmulatedHands(tracer),
     )
 
 
-def start(scenario: Scenario, rung: str = "") -> Emulated:
-    """An emulated tracer on a scenario; without a rung, MicroPython where it is installed."""
-    profile = profile_for(scenario)
+def start(scenario: Scenario, rung: str = "", profile: BoardProfile | None = None) -> Emulated:
+    """An emulated tracer on a scenario; without a rung, MicroPython where it is installed.
+
+    `profile`: what the board is told it is, in place of what goes with the scenario.
+    """
+    profile = profile or profile_for(scenario)
     scaling = scaling_of(profile)
     if rung == "chip":
         return ChipTracer(scenario, scaling, profile.record(CHIP_DEVICE_ID))
@@ -79,20 +86,38 @@ def _ready_profile(converter: str) -> BoardProfile:
 
 
 def profile_for(scenario: Scenario) -> BoardProfile:
-    """The ready profile for the scenario's converters, with its wide codes, capacitor and bleed."""
-    ready = _ready_profile(scenario.board.converter)
+    """The ready profile for the scenario's converters, with its wide codes and contact, and
+    capacitor and bleed as they are meant to be.
+    """
+    board = scenario.board
+    ready = _ready_profile(board.converter)
+    bounce_ms = max(math.ceil(board.bounce_ms), 1 if board.contact == "relay" else 0)
     capacitor = ready.capacitor.model_copy(
         update={
             "capacitance_f": scenario.bank.capacitance_f,
-            "bleed_ohm": scenario.bank.bleed_ohm,
             "permanent_bleeder_ohm": scenario.bank.permanent_bleeder_ohm,
         }
     )
+    # As a builder would: no more than class A stores, and a resistor for two sweeps of it.
+    farad = scenario.bank.capacitance_f
+    rated_v = min(ready.limits.rated_v, max(math.floor((2e-3 * STORED_MJ[0] / farad) ** 0.5), 1))
+    energy_j = max(ready.bleed.energy_j, math.ceil(farad * rated_v**2))
+    bleed = ready.bleed.model_copy(update={"ohm": scenario.bank.bleed_ohm, "energy_j": energy_j})
     converter = ready.converter
     if converter.kind == "internal":
-        wide = {"wide_code_lsb": scenario.board.wide_code_lsb}
+        wide = {"wide_code_lsb": board.wide_code_lsb}
         converter = converter.model_copy(update=wide)
-    return ready.model_copy(update={"capacitor": capacitor, "converter": converter})
+    return ready.model_copy(
+        update={
+            "contact": board.contact,
+            "contact_breaks_dc": board.contact == "relay+switch",
+            "capacitor": capacitor,
+            "bleed": bleed,
+            "limits": ready.limits.model_copy(update={"rated_v": rated_v}),
+            "converter": converter,
+            "timing": ready.timing.model_copy(update={"bounce_ms": bounce_ms}),
+        }
+    )
 
 
 def scaling_of(profile: BoardProfile) -> Scaling:

@@ -21,39 +21,28 @@ from dataclasses import dataclass
 import numpy as np
 
 from kneewise.emulator.circuit import Circuit, ClosedStretch, OpenStretch, Stretch
+from kneewise.emulator.contacts import Contact
 from kneewise.emulator.source import Floats, Source, solve_diode
 
 Notice = Callable[[int, str, int], None]
 
+HOT_A = 0.1  # an opening that breaks more than this is one under load
 HISTORY_US = 100  # how far back `sample` may look; a pair in progress is at most so old
 
 
 @dataclass(slots=True)
-class _Contact:
-    """A contact that follows its drive after a delay, or is stuck."""
-
-    what: str
-    close_us: int
-    open_us: int
-    closed: bool = False
-    stuck: bool = False
-    due_us: int | None = None
-
-    def aim(self, closed: bool, now_us: int) -> None:
-        if self.stuck or closed == self.closed:
-            self.due_us = None
-        elif self.due_us is None:
-            self.due_us = now_us + (self.close_us if closed else self.open_us)
-
-
-@dataclass(slots=True)
 class _Drive:
-    """What the pins ask for, after pulls and the stop loop that carries all drive current."""
+    """What the pins ask for, after pulls, and the stop loop."""
 
     relay: bool = False
     bleed_release: bool = False
     wave_end_us: int | None = None
     loop_closed: bool = True
+
+
+def _sign_of(circuit: Circuit) -> float:
+    """Of what is measured: the mirrored circuit is solved where the leads are reversed."""
+    return -1.0 if circuit.leads_reversed else 1.0
 
 
 class Plant:
@@ -68,25 +57,40 @@ class Plant:
         self.source = source
         self.circuit = circuit
         self._notice = notice
-        self._sign = -1.0 if circuit.leads_reversed else 1.0
-        stuck = circuit.contact_welded
-        self._relay = _Contact(
-            "relay_contact", circuit.relay_operate_us, circuit.relay_release_us, stuck, stuck
+        self._sign = _sign_of(circuit)
+        self._relay = Contact(
+            "relay_contact",
+            circuit.relay_operate_us,
+            circuit.relay_release_us,
+            welded=self._stuck("relay_contact"),
+            bounce_us=circuit.bounce_us if circuit.bare_relay else 0,
+            seed=circuit.bounce_seed,
         )
-        self._switch = _Contact("switch_contact", 0, circuit.switch_open_us, stuck, stuck)
+        # Where there is none, a wire is in its place.
+        self._switch = Contact(
+            "switch_contact", 0, circuit.switch_open_us, welded=self._stuck("switch_contact")
+        )
         # Closed when unpowered: its coil opens it.
-        self._bleed = _Contact(
+        self._bleed = Contact(
             "bleed_contact", circuit.bleed_release_us, circuit.bleed_operate_us, closed=True
         )
         self._drive = _Drive()
-        self._open_v = self._rest_voltage()
         self._now_us = 0
-        self._past: deque[tuple[Stretch, int]] = deque()
+        self._past: deque[tuple[Stretch, float, int]] = deque()
         self._held_us: int | None = None
         self._state = (self.conducting, self._bleed.closed)
         # A source connected in reverse charges the capacitor in reverse; the loop has no
         # other sense of direction, so the mirrored circuit is solved.
         self._stretch = self._begin(self._sign * circuit.capacitor_start_v)
+        self._bled_j = 0.0
+        self.hot_openings: list[tuple[int, float]] = []
+        """(us, A) of each time that the path opened with more than HOT_A in it."""
+
+    def _stuck(self, what: str) -> bool:
+        c = self.circuit
+        if what == "relay_contact":
+            return c.contact_welded or c.relay_welded
+        return c.contact_welded or c.switch_shorted or c.bare_relay
 
     def _rest_voltage(self) -> float:
         """Terminal voltage with nothing but the divider as load."""
@@ -117,9 +121,21 @@ class Plant:
         self._follow()
 
     def stop_loop(self, closed: bool) -> None:
-        """An open stop loop takes the drive from everything."""
+        """An open stop loop takes the drive from everything, but from nothing in a bare relay
+        build, where the board only senses it.
+        """
         self._drive.loop_closed = closed
         self._follow()
+
+    # -- what changes by itself -------------------------------------------------------------
+
+    def alter(self, *, source: Source | None = None, circuit: Circuit | None = None) -> None:
+        """From now on another source or circuit; what the contacts and the capacitor hold stays."""
+        self.source = source or self.source
+        self.circuit = circuit or self.circuit
+        self._relay.welded = self._stuck("relay_contact")
+        self._switch.welded = self._stuck("switch_contact")
+        self._follow(anew=True)
 
     # -- time -----------------------------------------------------------------------------
 
@@ -130,12 +146,12 @@ class Plant:
     @property
     def next_event_us(self) -> int | None:
         """When something moves next if nothing new is commanded."""
-        due = [c.due_us for c in (self._relay, self._switch, self._bleed)]
+        due = [contact.next_us for contact in (self._relay, self._switch, self._bleed)]
         return min((t for t in (*due, self._drive.wave_end_us) if t is not None), default=None)
 
     def advance_to(self, time_us: int) -> None:
         """Let time pass; an earlier time than now is now."""
-        while self._past and self._past[0][1] < self._known_from_us:
+        while self._past and self._past[0][2] < self._known_from_us:
             self._past.popleft()
         while (event_us := self.next_event_us) is not None and event_us <= time_us:
             self._now_us = event_us
@@ -145,33 +161,46 @@ class Plant:
             self._follow()
         self._now_us = max(self._now_us, time_us)
 
-    def _follow(self) -> None:
-        """Aim the contacts at their drives, and move those that are due."""
+    def _follow(self, anew: bool = False) -> None:
+        """Aim the contacts at their drives, and move those that are due; a new stretch begins
+        where one has moved, or `anew`.
+        """
         drive, now_us = self._drive, self._now_us
-        self._relay.aim(drive.relay and drive.loop_closed, now_us)
-        self._switch.aim(drive.wave_end_us is not None and drive.loop_closed, now_us)
-        self._bleed.aim(not (drive.bleed_release and drive.loop_closed), now_us)
+        wave = drive.wave_end_us is not None
+        bare = self.circuit.bare_relay
+        carried = drive.loop_closed or bare
+        self._relay.aim(wave if bare else drive.relay and carried, now_us)
+        self._switch.aim(wave and carried, now_us)
+        self._bleed.aim(not (drive.bleed_release and carried), now_us)
         for contact in (self._relay, self._switch, self._bleed):
-            if contact.due_us is not None and contact.due_us <= now_us:
-                contact.due_us = None
-                contact.closed = not contact.closed
+            if contact.move(now_us):
                 self._tell(contact.what, int(contact.closed))
         state = (self.conducting, self._bleed.closed)
-        if state == self._state:
+        if state == self._state and not anew:
             return
-        v0 = self._stretch.capacitor_v((now_us - self._stretch.start_us) * 1e-6)
-        self._past.append((self._stretch, now_us))
+        ended, since, before = self._stretch, self._since_s, self._sign
+        self._sign = _sign_of(self.circuit)
+        v0 = before * self._sign * ended.capacitor_v(since)
+        self._bled_j += ended.bleed_j(since)
+        self._past.append((ended, before, now_us))
         moved = state[0] != self._state[0]
         self._state = state
         self._stretch = self._begin(v0)
         if moved:
+            broken_a = abs(float(ended.values(np.array([since]))[1][0]))
+            if broken_a > HOT_A:
+                self.hot_openings.append((now_us, broken_a))
             self._tell("conducting", int(state[0]))
 
+    @property
+    def _since_s(self) -> float:
+        return (self._now_us - self._stretch.start_us) * 1e-6
+
     def _begin(self, v0: float) -> Stretch:
-        leak = self.circuit.leak_siemens(self._bleed.closed)
+        bled = self._bleed.closed
         if self.conducting:
-            return ClosedStretch(self.source, self.circuit, leak, self._now_us, v0)
-        return OpenStretch(self.circuit, leak, self._open_v, self._now_us, v0)
+            return ClosedStretch(self.source, self.circuit, bled, self._now_us, v0)
+        return OpenStretch(self.circuit, bled, self._rest_voltage(), self._now_us, v0)
 
     def _tell(self, what: str, level: int) -> None:
         if self._notice is not None:
@@ -192,8 +221,17 @@ class Plant:
     @property
     def capacitor_v(self) -> float:
         """Voltage on the ideal capacitor now; its terminals differ by the ESR's drop."""
-        since = (self._now_us - self._stretch.start_us) * 1e-6
-        return self._sign * self._stretch.capacitor_v(since)
+        return self._sign * self._stretch.capacitor_v(self._since_s)
+
+    @property
+    def loop_current_a(self) -> float:
+        """What flows through contact and shunt now."""
+        return self._sign * float(self._stretch.values(np.array([self._since_s]))[1][0])
+
+    @property
+    def bleed_energy_j(self) -> float:
+        """What the bleed resistor has taken since the plant began."""
+        return self._bled_j + self._stretch.bleed_j(self._since_s)
 
     def sample(self, instants_us: Floats) -> tuple[Floats, Floats, Floats]:
         """Source voltage (V), loop current (A) and bank terminal voltage (V), shape (n,).
@@ -208,13 +246,12 @@ class Plant:
             raise ValueError(f"{instants_us[0]} us is past; virtual time is {self._now_us} us")
         self.advance_to(math.ceil(instants_us[-1]))
         begin = 0
-        for stretch, end_us in (*self._past, (self._stretch, math.inf)):
+        for stretch, sign, end_us in (*self._past, (self._stretch, self._sign, math.inf)):
             end = int(np.searchsorted(instants_us, end_us))
             if end > begin:
                 times = (instants_us[begin:end] - stretch.start_us) * 1e-6
-                out[:, begin:end] = stretch.values(times)
+                out[:, begin:end] = sign * np.stack(stretch.values(times))
                 begin = end
-        out *= self._sign
         return out[0], out[1], out[2]
 
     @contextmanager

@@ -24,9 +24,11 @@ import time
 import tty
 from pathlib import Path
 
-from kneewise.emulator.board import Board, PowerLost
+from kneewise.emulator.board import Board, PowerLost, WatchdogBite
+from kneewise.emulator.bus import dispatch
 from kneewise.emulator.converters import Scaling
 from kneewise.emulator.firmware import boot_seed, lay_out
+from kneewise.emulator.mishaps import Value
 from kneewise.emulator.scenario import Scenario
 
 # The new session takes the pty as its own terminal, so that 0x03 reaches it as Ctrl-C.
@@ -37,7 +39,7 @@ from micropython_unix import main
 main()
 """
 _POWER_ON = Path(__file__).parent / "onboard" / "power_on.py"
-HEAP = "200k"
+HEAP = "240k"  # its objects are twice as large as those of an RP2040, which has about as much
 KEPT_UNREAD = 256  # bytes of output that wait for a host that is not there, as on the RP2 port
 IDLE_S = 0.005
 CTRL_C = b"\x03"
@@ -54,6 +56,7 @@ class ProcessTracer:
 
     `board` is the emulated board. `unplug` takes power and cable away, `plug` gives them back
     under the same name. `cut_link` takes away the cable alone, `join_link` gives it back.
+    `change` and `after_closing` let something go wrong.
     """
 
     rung = "micropython"
@@ -68,7 +71,7 @@ class ProcessTracer:
         program: str | None = None,
     ) -> None:
         self.scenario = scenario
-        self.board = Board(scenario, scaling=scaling)
+        self.board = Board(scenario, scaling=scaling, cut_link=self.cut_link)
         self._lock = threading.RLock()
         self._folder = Path(tempfile.mkdtemp(prefix="kneewise-"))
         self._flash = self._folder / "flash"
@@ -134,11 +137,20 @@ class ProcessTracer:
 
     def unplug(self) -> None:
         """Take power and cable away at once; every pin is undriven from here on."""
-        process = self._process
-        if process is None:
+        if self._process is None:
             return
         with self._lock:
             self.board.power(False)
+        self._end_process()
+
+    def _restart(self) -> None:
+        """A reset that leaves the power on: the bus goes away with the process, and comes back."""
+        self._end_process()
+        self.plug()
+
+    def _end_process(self) -> None:
+        process = self._process
+        assert process is not None
         self.cut_link()
         process.kill()
         process.wait()
@@ -174,6 +186,22 @@ class ProcessTracer:
         link.symlink_to(name)
         self._cable = master
 
+    def after_closing(self, delay_us: int, what: str, value: Value = 1) -> None:
+        """Let something of `mishaps.py` happen `delay_us` after the source next conducts."""
+        with self._lock:
+            self.board.after_closing(delay_us, what, value)
+
+    def change(self, what: str, value: Value = 1) -> None:
+        """Let it happen now."""
+        if what == "power_off":
+            if value:
+                self.unplug()
+            else:
+                self.plug()
+            return
+        with self._lock:
+            self.board.change(what, value)
+
     def wait_power_lost(self, timeout_s: float = 10.0) -> None:
         """Return once the board's own loss of power has ended the process. TimeoutError."""
         end = time.monotonic() + timeout_s
@@ -198,8 +226,12 @@ class ProcessTracer:
                     return
                 number, *call = _REQUEST.unpack(request)
                 with self._lock:
-                    reply = self.board.dispatch(*call)
+                    reply = dispatch(self.board, *call)
                 bus.sendall(len(reply).to_bytes(2, "little") + bytes([number]) + reply)
+            except WatchdogBite:
+                # A reset takes the process, and another begins.
+                self._restart()
+                return
             except PowerLost:
                 # The board is without power from that very moment; only the process is left.
                 self.unplug()

@@ -74,8 +74,10 @@ class LoadSection(_Section):
     """From the source's terminals to the capacitor bank and what empties it."""
 
     capacitance_f: float = Field(ge=1e-6, le=100.0)
+    capacitance_of_nominal: float = Field(default=1.0, ge=0.05, le=5.0)
     capacitor_esr_ohm: float = Field(ge=0.0, le=10.0)
     bleed_ohm: float = Field(ge=0.1, le=1e6)
+    bleed_of_nominal: float = Field(default=1.0, ge=1e-4, le=100.0)
     permanent_bleeder_ohm: float = Field(ge=10.0, le=1e9)
     lead_resistance_ohm: float = Field(ge=0.0, le=10.0)
     contact_resistance_ohm: float = Field(ge=0.0, le=10.0)
@@ -85,6 +87,8 @@ class LoadSection(_Section):
 class BoardSection(_Section):
     """How the board's own readings are off, and which faults it has."""
 
+    contact: Literal["relay+switch", "relay"] = "relay+switch"
+    bounce_ms: float = Field(default=0.0, ge=0.0, le=20.0)
     converter: Literal["internal", "spi16"] = "internal"
     wide_code_lsb: float = Field(default=9.0, ge=1.0, le=32.0)
     adc_noise_codes: float = Field(default=1.2, ge=0.0, le=200.0)
@@ -95,7 +99,12 @@ class BoardSection(_Section):
     leads_reversed: bool = False
     stop_loop_open: bool = False
     contact_welded: bool = False
+    relay_welded: bool = False
+    switch_shorted: bool = False
     bleed_open: bool = False
+    voltage_stuck_code: int | None = Field(default=None, ge=0, le=4095)
+    current_stuck_code: int | None = Field(default=None, ge=0, le=4095)
+    capacitor_stuck_code: int | None = Field(default=None, ge=0, le=4095)
 
 
 class Scenario(_Section):
@@ -178,12 +187,23 @@ class Scenario(_Section):
         )
 
     def build_circuit(self) -> Circuit:
-        """Capacitor bank, leads and contacts."""
-        board = self.board
+        """Capacitor bank, leads and contacts, as they truly are."""
+        bank, board = self.bank, self.board
         return Circuit(
-            **self.bank.model_dump(),
+            capacitance_f=bank.capacitance_f * bank.capacitance_of_nominal,
+            capacitor_esr_ohm=bank.capacitor_esr_ohm,
+            bleed_ohm=bank.bleed_ohm * bank.bleed_of_nominal,
+            permanent_bleeder_ohm=bank.permanent_bleeder_ohm,
+            lead_resistance_ohm=bank.lead_resistance_ohm,
+            contact_resistance_ohm=bank.contact_resistance_ohm,
+            capacitor_start_v=bank.capacitor_start_v,
+            bare_relay=board.contact == "relay",
+            bounce_us=round(1000 * board.bounce_ms),
+            bounce_seed=self.seed,
             leads_reversed=board.leads_reversed,
             contact_welded=board.contact_welded,
+            relay_welded=board.relay_welded,
+            switch_shorted=board.switch_shorted,
             bleed_open=board.bleed_open,
         )
 

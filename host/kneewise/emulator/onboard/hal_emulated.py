@@ -13,6 +13,7 @@ from tracer import hal
 MHZ = 125  # of the RP2040 that is stood in for
 UNHEARD_US = 1000000  # of a charge may pass at once; from then on it takes its real time
 SAFE_LEVEL = 0
+HANG_US = 1000
 
 
 class EmulatedHal(hal.Hal):
@@ -43,7 +44,7 @@ class EmulatedHal(hal.Hal):
         return self._device_id
 
     def reset_cause(self):
-        return hal.RESET_POWER_ON
+        return self._number("reset_cause")
 
     def random32(self):
         # xorshift32 (Marsaglia 2003): an emulated tracer must repeat itself for the same seed.
@@ -78,6 +79,9 @@ class EmulatedHal(hal.Hal):
 
     def bleed(self, engaged):
         self._bus.call("bleed_release", 0 if engaged else 1, 0)
+
+    def use_contact(self, bare):
+        """The emulated wave ends by itself however long it is."""
 
     def pulse(self, us):
         self._bus.call("pulse", us, 0)
@@ -116,7 +120,8 @@ class EmulatedHal(hal.Hal):
     def capture_stop(self):
         return self._number("capture_stop") != 0
 
-    def supervise(self, voltage_trip_code, current_trip_code):
+    def supervise(self, voltage_trip_code, current_trip_code, breaks):
+        self._bus.call("supervise_breaks", 1 if breaks else 0, 0)
         self._bus.call("supervise", voltage_trip_code, current_trip_code)
 
     def supervision_ticks(self):
@@ -124,6 +129,9 @@ class EmulatedHal(hal.Hal):
 
     def trips(self):
         return self._number("trips")
+
+    def trip_code(self):
+        return self._number("trip_code")
 
     def supervise_end(self):
         self._bus.call("supervise_end", 0, 0)
@@ -153,8 +161,13 @@ class EmulatedHal(hal.Hal):
     def quiet_end(self):
         self._bus.call("quiet", 0, 0)
 
+    def hang(self):
+        while True:
+            self.wait_us(HANG_US)
+            self._link.pace(0)
+
     def watchdog(self, ms):
-        """The emulated board has no watchdog of its own; the chip rung has."""
+        self._bus.call("watchdog", ms, 0)
 
     def link_wait(self, ms):
         self._link.wait(ms)
