@@ -81,9 +81,18 @@ def run(folder):
 
 def forget(folder):
     """Make room for the other slot's modules of the same names."""
-    # The converter and DMA still know memory that is about to be handed back.
+    # Interrupt, converters and DMA still know memory that is about to be handed back.
+    timer = getattr(sys.modules.get("tracer.ring_rp2"), "timer", None)
+    if timer is not None:
+        timer.deinit()
+    mem32[0x50203000] = 0xF  # PIO0, PIO1: CTRL.SM_ENABLE cleared
+    mem32[0x50303000] = 0xF
     mem32[0x4004F000] = 8  # ADC: CS.START_MANY cleared
-    mem32[0x50000444] = 0xFFF  # DMA: CHAN_ABORT, all channels
+    for channel in range(12):
+        mem32[0x50000010 + 64 * channel] = 0  # DMA: AL1_CTRL, so that none starts again
+    mem32[0x50000444] = 0xFFF  # CHAN_ABORT, all channels
+    while mem32[0x50000444]:
+        pass
     if folder in sys.path:
         sys.path.remove(folder)
     for name in list(sys.modules):

@@ -1,9 +1,10 @@
 """One charge: from the readings just before closing to the contact open again.
 
 Runs to its end in one call, inside the board's quiet: nothing is sent, nothing collected.
-Between slices it listens for abort alone. The make-and-break output is a bounded pulse that
-each slice earns anew: only when both the supervision tick and the ring have moved on, and only
-while it still runs: a contact that has opened by itself is not closed again.
+Between slices it listens for abort alone. With a switch the make-and-break output is a bounded
+pulse that each slice earns anew: only when both the supervision tick and the ring have moved on,
+and only while it still runs: a contact that has opened by itself is not closed again. A bare
+relay is given one pulse and left to its charge; `contact.py` says why.
 
 In the quiet nothing is allocated. So time is counted in pairs, by the ring: a time in
 microseconds since boot needs an object of its own from 18 minutes on.
@@ -11,19 +12,27 @@ microseconds since boot needs an object of its own from 18 minutes on.
 
 from micropython import const
 
+from kneewire.guards import ZERO_CODES
 from tracer import hal as board
+from tracer import interlocks
+from tracer.contact import READ_CONVERSIONS as FEW_CONVERSIONS
+from tracer.contact import Contact
+from tracer.ending import EndRule
+from tracer.sequencer import ZERO_SETTLE_US
 
 SLICE_US = const(500)
 SLICE_PAIRS = const(125)
 LISTEN_PAIRS = const(2500)  # 10 ms: an abort is heard by then at the latest
 READ_CONVERSIONS = const(2048)  # so that noise of a zero is far below that of a knot
-ZERO_SETTLE_US = const(2000)  # of the voltage channel, to its zero and back
 DARK_MS = const(100)  # without conduction for so long, the source is dark
 FIRST_MS = const(2)  # before the first supervision tick can be asked for
 PULSE_MARGIN_US = const(100)  # more than the wave's last period and the call itself
 CONDUCTING_CODES = const(8)  # of 12 bits, above the current zero: more than noise ever reaches
-END_SLICES = const(3)
 STEP_US = const(2000)  # of a step of the work done meanwhile, with few knots
+HANG_PAIRS = const(500)  # an exercise: closed for so long before it hangs
+SHORTED_CODES = const(32)  # that a capacitor may rise by before anything has closed
+RENEWALS = const(2)
+PREDICT_PAIRS = const(250)  # conducting for so long, the current of a charge is known
 
 # End reasons, as on the wire.
 COMPLETE = const(1)
@@ -37,6 +46,9 @@ NO_CURRENT = const(8)
 RING_OVERRUN = const(9)
 SUPERVISION_LOST = const(10)
 INTERRUPTED = const(11)
+NOT_EMPTY = const(12)
+SENSOR = const(13)
+SHORTED = const(14)
 
 
 class Result:
@@ -44,60 +56,36 @@ class Result:
 
     def __init__(self):
         self.end_reason = 0
+        self.finding = None  # what is to be latched for it
         self.voltage_sum = 0
         self.current_sum = 0
         self.voltage_zero_sum = 0
         self.zero_conversions = 0
         self.conversions = READ_CONVERSIONS
+        self.capacitor_before_sum = 0
+        self.capacitor_full_sum = 0
+        self.capacitor_conversions = 0
         self.capture_us = 0
         self.opened_us = 0
         self.capturing = False
+        self.conducted = False
         self.conversions_lost = False
         self.pairs_written = 0
+        self.trip_code = 0
+        self.opening_x16 = 0
+        self.hot = False
 
 
-class EndRule:
-    """When is the sweep complete: the current is gone and the voltage stands.
+class Settings:
+    """What an arming asked for; limits that are above the ratings are none."""
 
-    Current below 0.2 % of this sweep's peak (a quarter of a code at the least), and voltage
-    within 0.1 % of the source's open voltage or no longer rising, for END_SLICES slices in a
-    row. Never the slope of the voltage alone: a nearly dark substring crawls. What the permanent
-    bleeder draws through the shunt does not count: in low light it is what current there is.
-    """
-
-    def __init__(self, leak_ratio=0, leak_shift=0):
-        self.leak_ratio = leak_ratio
-        self.leak_shift = leak_shift
-        self.begin(0, 0, 0)
-
-    def begin(self, zero_x16, open_x16, voltage_zero_x16, finer=1):
-        """Forget the last sweep. The codes, in sixteenths: current zero, open voltage, its zero.
-
-        `finer`: codes that make one of 12 bits.
-        """
-        self.zero_x16 = zero_x16
-        self.finer = finer
-        self.voltage_zero_x16 = voltage_zero_x16
-        self.near_open_x16 = open_x16 - max((open_x16 - voltage_zero_x16) // 1000, 8 * finer)
-        self.peak_x16 = 0
-        self.quiet_slices = 0
-        self.high_x16 = 0
-
-    def complete(self, voltage_x16, current_x16):
-        volts = max(voltage_x16 - self.voltage_zero_x16, 0) >> 4
-        leak_x16 = volts * self.leak_ratio >> max(self.leak_shift - 4, 0)
-        current = current_x16 - self.zero_x16 - leak_x16
-        if current > self.peak_x16:
-            self.peak_x16 = current
-        rising = voltage_x16 > self.high_x16 + 2 * self.finer
-        if voltage_x16 > self.high_x16:
-            self.high_x16 = voltage_x16
-        gone = current < 4 * self.finer or current * 500 < self.peak_x16
-        if gone and (voltage_x16 >= self.near_open_x16 or not rising):
-            self.quiet_slices += 1
-        else:
-            self.quiet_slices = 0
-        return self.quiet_slices >= END_SLICES
+    def __init__(self, closed_limit_ms, raw=None, raw_from_us=0):
+        self.closed_limit_ms = closed_limit_ms
+        self.raw = raw  # buffer for pairs kept one by one, or None
+        self.raw_from_us = raw_from_us  # after conduction began
+        self.limit_mv = interlocks.NO_LIMIT
+        self.limit_ma = interlocks.NO_LIMIT
+        self.exercise = interlocks.SWEEP
 
 
 class Charge:
@@ -108,15 +96,25 @@ class Charge:
         self.profile = profile
         self.capture = capture
         self.ear = ear
+        self.contact = Contact(hal, profile)
         self.rule = EndRule(*profile.leak())
-        self.raw = None
-        self.raw_from_us = 0
+        self.settings = None
         self.meanwhile = None
+        self._near_zero = 0  # codes above the current zero; an opening below is cold
+        self._empty_sum = 0
+        self._trips = (0, 0)
+        # Of a bare relay: its pulse, when that began, and how often it may come again.
+        self._most_us = 0
+        self._pulsed = 0
+        self._renewals = 0
+        # Means of the newest pairs, when they were looked at last and before; one is a visit old.
+        self._current_x16 = 0
+        self._older_x16 = 0
+        self._oldest_x16 = 0
 
-    def run(self, closed_limit_ms, outputs, raw=None, raw_from_us=0, meanwhile=None):
+    def run(self, settings, outputs, meanwhile=None):
         """Close, capture, open. `outputs` (the sequencer) is told what is commanded.
 
-        `raw`: buffer for pairs kept one by one from `raw_from_us` after conduction on, or None.
         `meanwhile`: has work to do while the relay lets go, current being gone: `begin(result)`,
         then `step()` until it is True; or None.
 
@@ -124,47 +122,51 @@ class Charge:
         """
         hal = self.hal
         result = Result()
-        profile = self.profile
-        voltage_trip = profile.trip_code("voltage", profile["rated_mv"])
-        current_trip = profile.trip_code("current", profile["rated_ma"])
-        self.capture.begin(0)
-        self.raw = raw
-        self.raw_from_us = raw_from_us
+        self._get_ready(settings)
         self.meanwhile = meanwhile
         try:
             hal.quiet_begin()
-            self._before(result)
-            self._prepare(outputs)
-            self.ear.listen_out()
-            result.end_reason = self._capture(result, closed_limit_ms, voltage_trip, current_trip)
+            result.end_reason = self._before(result) or self._prepare(outputs)
+            if not result.end_reason:
+                self.ear.listen_out()
+                result.end_reason = self._capture(result)
+                self._run_out(result)
         except KeyboardInterrupt:
             result.end_reason = INTERRUPTED
         finally:
             self._end(result, outputs)
         result.capture_us = hal.capture_began_us()
         result.opened_us = hal.now_us()
+        result.finding = self._finding(result)
         return result
 
-    def _end(self, result, outputs):
-        """Whatever happened before, and whatever happens here: contact open, bleed engaged."""
-        hal = self.hal
-        try:
-            hal.pulse(0)
-            hal.zero_input(False)
-            result.conversions_lost = hal.capture_stop()
-            if result.capturing:
-                result.pairs_written = hal.capture_written()
-            hal.supervise_end()
-            self._open(outputs, result)
-        except BaseException:
-            outputs.make_safe()
-            raise
-        finally:
-            hal.quiet_end()
+    def _get_ready(self, settings):
+        """Limits in codes, while numbers may still be large."""
+        profile = self.profile
+        self.settings = settings
+        self.capture.begin(0)
+        self._current_x16 = self._older_x16 = self._oldest_x16 = 0
+        self._near_zero = profile.near_zero_codes()
+        self._trips = (
+            profile.trip_code("voltage", self._rated_mv()),
+            profile.trip_code("current", self._rated_ma()),
+        )
+        source = self.hal.read(board.VOLTAGE, FEW_CONVERSIONS)
+        source_mv = profile.millivolts("voltage", source, FEW_CONVERSIONS)
+        limit_mv = interlocks.start_limit_mv(profile, source_mv)
+        self._empty_sum = FEW_CONVERSIONS * profile.code("capacitor", limit_mv)
+
+    def _rated_mv(self):
+        return min(self.profile["rated_mv"], self.settings.limit_mv)
+
+    def _rated_ma(self):
+        return min(self.profile["rated_ma"], self.settings.limit_ma)
 
     def _before(self, result):
+        """The zeros and the open voltage; an end reason where they are not as they were."""
         hal = self.hal
-        if self.profile["zero_switch"]:
+        profile = self.profile
+        if profile["zero_switch"]:
             hal.zero_input(True)
             hal.wait_us(ZERO_SETTLE_US)
             result.voltage_zero_sum = hal.read(board.VOLTAGE, READ_CONVERSIONS)
@@ -173,28 +175,75 @@ class Charge:
             hal.wait_us(ZERO_SETTLE_US)
         result.voltage_sum = hal.read(board.VOLTAGE, READ_CONVERSIONS)
         result.current_sum = hal.read(board.CURRENT, READ_CONVERSIONS)
+        result.capacitor_before_sum = hal.read(board.CAPACITOR, FEW_CONVERSIONS)
+        off = result.current_sum // READ_CONVERSIONS - profile["current_zero_x16"] // 16
+        if abs(off) > ZERO_CODES * profile.finer:
+            return SENSOR
+        # What has crept back into the capacitor since the arming.
+        if result.capacitor_before_sum > self._empty_sum:
+            return NOT_EMPTY
+        return 0
 
     def _prepare(self, outputs):
-        """Release the bleed, and close the relay dry, with the make-and-break output still off."""
+        near_zero = self._near_zero + self.profile["current_zero_x16"] // 16
+        ready = self.contact.prepare(
+            outputs,
+            self.settings.exercise != interlocks.RELAY_OPEN,
+            self._empty_sum + FEW_CONVERSIONS * SHORTED_CODES,
+            FEW_CONVERSIONS * near_zero,
+        )
+        return 0 if ready else SHORTED
+
+    def _end(self, result, outputs):
+        """Whatever happened before, and whatever happens here: contact open, bleed engaged."""
         hal = self.hal
-        profile = self.profile
-        hal.bleed(False)
-        outputs.bleed_engaged = False
-        hal.wait_us(1000 * (profile["bleed_operate_ms"] + profile["dead_time_ms"]))
-        hal.relay(True)
-        outputs.contact_closed = True
-        hal.wait_us(1000 * 2 * profile["relay_operate_ms"])
+        try:
+            if result.end_reason == INTERRUPTED:
+                self._run_out(result)
+            hal.pulse(0)
+            hal.zero_input(False)
+            result.conversions_lost = hal.capture_stop()
+            if result.capturing:
+                result.pairs_written = hal.capture_written()
+                self._note_opening(result, outputs)
+            hal.supervise_end()
+            if outputs.contact_closed:
+                self._open(outputs, result)
+            else:
+                outputs.make_safe()
+                if self.meanwhile is not None:
+                    self.meanwhile.begin(result)
+        except BaseException:
+            outputs.make_safe()
+            raise
+        finally:
+            hal.quiet_end()
+
+    def _note_opening(self, result, outputs):
+        capture = self.capture
+        result.conducted = capture.conducts()
+        capture.recent_means()
+        result.opening_x16 = capture.current_x16
+        if result.end_reason != COMPLETE and self.contact.may_break:
+            # What is newest may have come after the current was broken.
+            result.opening_x16 = max(
+                result.opening_x16, self._current_x16, self._older_x16, self._oldest_x16
+            )
+            if result.end_reason == OVER_CURRENT:
+                result.opening_x16 = max(result.opening_x16, 16 * result.trip_code)
+        above = result.opening_x16 - self.rule.zero_x16
+        if result.conducted and above > 16 * self._near_zero:
+            result.hot = True
+            outputs.logbook.opened_hot()
 
     def _open(self, outputs, result):
-        """The current is already broken by the pulse's end; the relay opens dry."""
         hal = self.hal
-        profile = self.profile
-        hal.wait_us(1000)
-        hal.relay(False)
-        outputs.contact_closed = False
-        self._let_pass(1000 * (profile["relay_release_ms"] + profile["dead_time_ms"]), result)
-        hal.bleed(True)
-        outputs.bleed_engaged = True
+        self.contact.open()
+        self._let_pass(self.contact.release_us(), result)
+        outputs.open_contact()
+        result.capacitor_full_sum = hal.read(board.CAPACITOR, FEW_CONVERSIONS)
+        result.capacitor_conversions = FEW_CONVERSIONS
+        outputs.engage_bleed()
 
     def _let_pass(self, us, result):
         """Wait, and do what there is to do; a step that takes longer makes the wait longer."""
@@ -209,37 +258,44 @@ class Charge:
         if passed < us:
             hal.wait_us(us - passed)
 
-    def _capture(self, result, closed_limit_ms, voltage_trip, current_trip):
+    def _capture(self, result):
         hal = self.hal
         profile = self.profile
         capture = self.capture
+        contact = self.contact
+        settings = self.settings
         zero_x16 = result.current_sum // (READ_CONVERSIONS // 16)
         open_x16 = result.voltage_sum // (READ_CONVERSIONS // 16)
         finer = profile.finer
         rule = self.rule
         rule.begin(zero_x16, open_x16, profile["voltage_zero_x16"], finer)
-        pulse_us = profile["pulse_us"]
+        closed_limit_ms = min(settings.closed_limit_ms, profile.closed_limit_ms())
+        self._most_us = 1000 * closed_limit_ms
+        pulse_us = contact.pulse_us(closed_limit_ms)
         pairs_a_ms = 1000 // hal.PAIR_US
         capture.begin(
             zero_x16 // 16 + CONDUCTING_CODES * finer,
             profile["bounce_ms"] * pairs_a_ms,
-            self.raw,
-            self.raw_from_us // hal.PAIR_US,
+            settings.raw,
+            settings.raw_from_us // hal.PAIR_US,
         )
-        limit = pairs_a_ms * min(closed_limit_ms, profile["closed_limit_ms"])
+        limit = pairs_a_ms * closed_limit_ms
         lost = pairs_a_ms * profile["heartbeat_lost_ms"]
         dark = pairs_a_ms * DARK_MS
         unticked = pairs_a_ms * FIRST_MS
         lapsed = (pulse_us - PULSE_MARGIN_US) // hal.PAIR_US
+        hang = settings.exercise == interlocks.HANG
+        predicted = not contact.bare
 
         result.capturing = True
         hal.capture_start()
-        hal.supervise(voltage_trip, current_trip)
+        hal.supervise(self._trips[0], self._trips[1], contact.may_break)
         self.ear.listen()
         if self.ear.aborted:
             return ABORTED
         renewed = hal.capture_written()
-        hal.pulse(pulse_us)
+        self._pulse(pulse_us)
+        self._renewals = 0
         heard = 0
         listened = 0
         ticks = 0
@@ -254,6 +310,7 @@ class Charge:
             capture.drain(arrived)
             trips = hal.trips()
             if trips:
+                result.trip_code = hal.trip_code()
                 return trip_reason(trips)
             # A flood of bytes must not hold up a reader that is behind already.
             if waited or arrived - listened >= LISTEN_PAIRS:
@@ -278,17 +335,105 @@ class Charge:
             if not capture.conducts():
                 if arrived >= dark:
                     return NO_CURRENT
+            elif settings.exercise == interlocks.RELAY_OPEN:
+                return SHORTED
             elif capture.recent_means():
+                self._oldest_x16 = self._older_x16
+                self._older_x16 = self._current_x16
+                self._current_x16 = capture.current_x16
                 if rule.complete(capture.voltage_x16, capture.current_x16):
                     return COMPLETE
+                if not predicted and capture.pairs() >= PREDICT_PAIRS:
+                    predicted = True
+                    self._most_us = contact.predicted_us(
+                        open_x16 - rule.voltage_zero_x16,
+                        rule.peak_x16,
+                        capture.pairs() * hal.PAIR_US,
+                        self._most_us,
+                    )
+                    self._pulse(self._most_us)
+                    self._renewals = RENEWALS
             if arrived - heard >= lost:
                 return HOST_LOST
-            hal.watchdog(2000)
+            if hang and arrived >= HANG_PAIRS:
+                hal.hang()
+            hal.watchdog(contact.watchdog_ms)
+            if contact.bare:
+                self._hold()
+                continue
             late = hal.capture_written()
             if late - renewed >= lapsed:
                 return SUPERVISION_LOST
             renewed = late
             hal.pulse(pulse_us)
+
+    def _pulse(self, us):
+        self.hal.pulse(us)
+        self._pulsed = self.hal.ticks_us()
+
+    def _since_pulse(self):
+        return (self.hal.ticks_us() - self._pulsed) & 0x3FFFFFFF
+
+    def _hold(self):
+        """A bare relay's charge takes longer than predicted: a low fill factor, clouds."""
+        since = self._since_pulse()
+        if self._renewals and since >= self._most_us // 3 * 2:
+            self._renewals -= 1
+            # One that has let go by itself is not closed again.
+            if since < self._most_us - PULSE_MARGIN_US:
+                self._pulse(self._most_us)
+
+    def _run_out(self, result):
+        """A contact that is not rated to break stays closed until the current is gone, or its last
+        pulse has ended.
+        """
+        contact = self.contact
+        if contact.may_break or not result.capturing or result.end_reason in (COMPLETE, NO_CURRENT):
+            return
+        hal = self.hal
+        capture = self.capture
+        while self._since_pulse() < self._most_us:
+            hal.wait_us(SLICE_US)
+            self._hold()
+            if not capture.overruns:
+                capture.drain(hal.capture_written())
+            hal.watchdog(contact.watchdog_ms)
+            if capture.conducts() and capture.recent_means():
+                if self.rule.complete(capture.voltage_x16, capture.current_x16):
+                    break
+
+    def _finding(self, result):
+        """What the end of the charge latches, with what was measured; None for nothing."""
+        profile = self.profile
+        reason = result.end_reason
+        if reason == STOP_LOOP:
+            return 12, 0, 0, interlocks.UNIT_NONE
+        if reason == SUPERVISION_LOST:
+            return 7, 0, 0, interlocks.UNIT_NONE
+        if reason == OVER_VOLTAGE:
+            milli = profile.milli_of("voltage", result.trip_code)
+            return 4, milli, self._rated_mv(), interlocks.UNIT_MV
+        if reason == OVER_CURRENT:
+            milli = profile.milli_of("current", result.trip_code)
+            return 6, milli, self._rated_ma(), interlocks.UNIT_MA
+        if reason == SENSOR:
+            off = result.current_sum // READ_CONVERSIONS - profile["current_zero_x16"] // 16
+            return 11, off, ZERO_CODES * profile.finer, interlocks.UNIT_CODES
+        if reason == SHORTED:
+            full = self.contact.shorted_sum or result.capacitor_full_sum
+            full_mv = profile.millivolts("capacitor", full, FEW_CONVERSIONS)
+            empty_mv = profile.millivolts("capacitor", self._empty_sum, FEW_CONVERSIONS)
+            return 2, full_mv, empty_mv, interlocks.UNIT_MV
+        # Under load the capacitor has risen since the newest pairs were looked at.
+        if not result.capturing or not result.capacitor_conversions or result.hot:
+            return None
+        full_mv = profile.millivolts("capacitor", result.capacitor_full_sum, FEW_CONVERSIONS)
+        if result.conducted:
+            return interlocks.sensors_agree(
+                profile, profile.milli_of("voltage", self.capture.voltage_x16 // 16), full_mv
+            )
+        # No current was seen, and so the capacitor must be as empty as before.
+        return interlocks.sensors_agree(profile, 0, full_mv)
 
 
 def trip_reason(trips):

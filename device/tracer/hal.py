@@ -91,6 +91,10 @@ class Hal:
         """Engage the bleed (its contact is closed when unpowered) or release it."""
         raise NotImplementedError
 
+    def use_contact(self, bare):
+        """How long the longest pulse may be: 20 ms, or 5 s for a relay without a switch."""
+        raise NotImplementedError
+
     def pulse(self, us):
         """Let the make-and-break output run for at most `us` more microseconds; 0 stops it.
 
@@ -133,8 +137,11 @@ class Hal:
         """Stop; True where a conversion was dropped (V and I may have swapped)."""
         raise NotImplementedError
 
-    def supervise(self, voltage_trip_code, current_trip_code):
-        """Start the 1 kHz supervision over the newest pair and the stop loop."""
+    def supervise(self, voltage_trip_code, current_trip_code, breaks):
+        """Start the 1 kHz supervision over the newest two pairs and the stop loop.
+
+        `breaks`: a trip ends the pulse at once, and no later call of `pulse` brings it back.
+        """
         raise NotImplementedError
 
     def supervision_ticks(self):
@@ -143,6 +150,10 @@ class Hal:
 
     def trips(self):
         """TRIP_ bits seen since `supervise`."""
+        raise NotImplementedError
+
+    def trip_code(self):
+        """The code that was the first to trip."""
         raise NotImplementedError
 
     def supervise_end(self):
@@ -179,6 +190,10 @@ class Hal:
 
     def quiet_end(self):
         """Allowed at any time, any number of times."""
+        raise NotImplementedError
+
+    def hang(self):
+        """Do nothing for ever, as a firmware does that has hung. For a proof test."""
         raise NotImplementedError
 
     def watchdog(self, ms):

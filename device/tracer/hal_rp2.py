@@ -16,7 +16,7 @@ import micropython
 from machine import Pin
 from micropython import const
 
-from tracer import adc_rp2, hal, ring_rp2
+from tracer import adc_rp2, hal, pulse_pio, ring_rp2
 from tracer.coder_thumb import cobs_into
 from tracer.plane_thumb import errors
 from tracer.pulse_pio import BoundedPulse
@@ -85,6 +85,18 @@ def _unlock(quiet: ptr32):
         micropython.heap_unlock()
 
 
+# A trip that the supervision has seen has ended the pulse, for good; between the look at it and the
+# start of the wave no other may come.
+@micropython.viper
+def _pulse(words: ptr32, periods: int, origin: int):
+    irq = machine.disable_irq()
+    if periods <= 0 or int(ring_rp2.tripped(words)) != 0:
+        pulse_pio.stop()
+    else:
+        pulse_pio.run(periods, origin)
+    machine.enable_irq(irq)
+
+
 class Hal(hal.Hal):
     """The reference board. A second object takes over from the first."""
 
@@ -97,13 +109,13 @@ class Hal(hal.Hal):
     errors = staticmethod(errors)  # type: ignore[assignment]
 
     def __init__(self):
-        self._pulse = BoundedPulse()
+        self._pulse = BoundedPulse(False)
         self._relay = Pin(_RELAY, Pin.OUT, value=0)
         self._release = Pin(_BLEED_RELEASE, Pin.OUT, value=0)
         self._stop_loop = Pin(_STOP_LOOP, Pin.IN, Pin.PULL_DOWN)
         self._reversed = Pin(_REVERSED, Pin.IN, Pin.PULL_UP)
         self._zero_input = Pin(_ZERO_INPUT, Pin.OUT, value=0)
-        ring_rp2.timer.deinit()
+        ring_rp2.supervise_end()
         adc_rp2.prepare()
         # A soft reset leaves the converter running, a former object may leave DMA and PIO running.
         adc_rp2.halt()
@@ -152,7 +164,7 @@ class Hal(hal.Hal):
     # -- outputs ---------------------------------------------------------------------
 
     def safe(self):
-        self._pulse.stop()
+        pulse_pio.stop()
         self._relay.off()
         self._release.off()
 
@@ -162,8 +174,12 @@ class Hal(hal.Hal):
     def bleed(self, engaged):
         self._release.value(0 if engaged else 1)
 
+    def use_contact(self, bare):
+        self._pulse = BoundedPulse(bare)
+
     def pulse(self, us):
-        self._pulse.run(us)
+        pulse = self._pulse
+        _pulse(_words, pulse.periods(us), pulse.origin)
 
     # -- inputs ----------------------------------------------------------------------
 
@@ -203,8 +219,8 @@ class Hal(hal.Hal):
         self._pairs.halt()
         return dropped != 0
 
-    def supervise(self, voltage_trip_code, current_trip_code):
-        ring_rp2.supervise(voltage_trip_code, current_trip_code)
+    def supervise(self, voltage_trip_code, current_trip_code, breaks):
+        ring_rp2.supervise(voltage_trip_code, current_trip_code, breaks)
 
     def supervision_ticks(self):
         return ring_rp2.ticks()
@@ -212,8 +228,15 @@ class Hal(hal.Hal):
     def trips(self):
         return ring_rp2.trips()
 
+    def trip_code(self):
+        return ring_rp2.trip_code()
+
     def supervise_end(self):
-        ring_rp2.timer.deinit()
+        ring_rp2.supervise_end()
+
+    def hang(self):
+        while True:
+            pass
 
     # -- time ------------------------------------------------------------------------
 

@@ -12,6 +12,7 @@ from tracer.knots import Placer
 from tracer.memory import MAX_FRAME as FRAME_BYTES
 
 NO_ID = bytes(16)
+LEAST_RISE_CODES = 128  # of the capacitor's channel: its noise and offset are then below 1 %
 
 if (records.RECORD_BYTES, FRAME_BYTES) != (KNOT_BYTES, MAX_FRAME):
     raise ValueError("memory.py or records.py and the catalogue disagree")
@@ -119,8 +120,36 @@ class Held:
             "raw_first": capture.raw_first if self.raw_count else 0,
             "raw_pairs": self.raw_count,
             "raw_crc": crc32(self._raw_bytes(0, self.raw_count)),
+            "capacitor_before_sum": result.capacitor_before_sum,
+            "capacitor_full_sum": result.capacitor_full_sum,
+            "capacitor_conversions": result.capacitor_conversions,
+            "opening_code": max(result.opening_x16, 0) // 16,
+            "hot_opening": 1 if result.hot else 0,
+            "bleed_tau_us": 0,
         }
         self.sweep_id = sweep_id  # last: from here on it is there, whole
+
+    def capacitance_nf(self, result):
+        """From the charge that went in and the voltage that it brought; 0 where that is not known:
+        too small a rise, a bounce that took its share, a reader that was overtaken, an opening
+        under load.
+        """
+        capture = self._capture
+        profile = self._profile
+        conversions = result.capacitor_conversions
+        if not (result.conducted and conversions) or capture.bounces or capture.overruns:
+            return 0
+        if result.hot:  # a relay charges on while it lets go
+            return 0
+        rise = result.capacitor_full_sum - result.capacitor_before_sum
+        rise_uv = rise * profile["capacitor_nv_per_code"] // (1000 * conversions)
+        if rise_uv < LEAST_RISE_CODES * profile["capacitor_nv_per_code"] // 1000:
+            return 0
+        codes = records.current_sum(self._buffers.placing, self._bins, capture)
+        codes -= result.current_sum * capture.pairs() // result.conversions
+        # nA x us over uV is nF.
+        charge = codes * profile["current_na_per_code"] * (self.manifest["pair_ns"] // 1000)
+        return max(charge, 0) // rise_uv
 
     def whole_manifest(self):
         """The manifest, with the CRC over all knots, which takes its time and is made only now."""

@@ -1,34 +1,28 @@
 """The loop of one tracer: wires the parts together and gives each its turn."""
 
+from tracer import interlocks
 from tracer import sequencer as states
 from tracer.capture import Capture
-from tracer.charge import (
-    INTERRUPTED,
-    OVER_CURRENT,
-    OVER_VOLTAGE,
-    STOP_LOOP,
-    SUPERVISION_LOST,
-    Charge,
-    Result,
-)
+from tracer.charge import INTERRUPTED, Charge, Result
 from tracer.ear import Ear
 from tracer.held import Held
-from tracer.interlocks import UNIT_NONE
+from tracer.logbook import Logbook
 from tracer.profile import load
 from tracer.sequencer import Sequencer
 from tracer.service import Leave, Service
 
 PROFILE_FILE = "profile.bin"
+LOGBOOK_FILE = "logbook.bin"
 
 
 class Loop:
     """One tracer: `run` serves until the host asks for the prompt, and may be run again."""
 
-    def __init__(self, hal, buffers, profile_file=PROFILE_FILE):
+    def __init__(self, hal, buffers, profile_file=PROFILE_FILE, logbook_file=LOGBOOK_FILE):
         self.hal = hal
         self.profile, _ = load(profile_file, hal.device_id())
         self._use_converters()
-        self.sequencer = Sequencer(hal, self.profile)
+        self.sequencer = Sequencer(hal, self.profile, Logbook(logbook_file))
         self.held = Held(buffers, hal.ring, hal.cobs_into, hal.errors)
         self.capture = Capture(hal.ring, hal.RING_PAIRS, buffers, hal.CODE_BITS)
         self.ear = Ear(hal)
@@ -40,6 +34,7 @@ class Loop:
         """As the profile says; a profile whose numbers no board can keep is as good as none."""
         profile = self.profile
         if profile is not None:
+            self.hal.use_contact(profile.bare())
             try:
                 self.hal.use_converters(
                     profile["converter"],
@@ -82,9 +77,18 @@ class Loop:
             self.held.begin(result)
             self.hold(sweep_id)
 
+    def look_at_capacitor(self, result):
+        """Its capacitance, from the charge that went in and the voltage that it brought (H15)."""
+        nf = self.held.capacitance_nf(result)
+        self.sequencer.watch.capacitance_nf = nf
+        if nf:
+            finding = interlocks.capacitance(self.profile, nf)
+            if finding is not None and self.sequencer.state == states.BLEEDING:
+                self.sequencer.fault(finding)
+
     def hold(self, sweep_id):
         self.held.keep(sweep_id, self.hal)
-        self.service.armed_raw = None
+        self.service.armed.raw = None
         self.bleeding_for = sweep_id
 
     def step(self):
@@ -106,27 +110,26 @@ class Loop:
         service = self.service
         sequencer = self.sequencer
         self.ear.expect(service.abort_frame(), service.unheard)
+        if service.armed.exercise != interlocks.RELAY_OPEN:
+            # Kept before it closes: a reset in mid-charge must not lose it.
+            sequencer.logbook.closed()
+            sequencer.logbook.keep()
         sequencer.event(states.EV_FIRE)
         charge = Charge(self.hal, self.profile, self.capture, self.ear)
         self.held.prepare(service.armed_knots, self.capture, self.profile)
         try:
-            result = charge.run(
-                service.armed_limit_ms,
-                sequencer,
-                service.armed_raw,
-                service.armed_raw_from_us,
-                self.held,
-            )
+            result = charge.run(service.armed, sequencer, self.held)
         except BaseException:
             self.leave()
             raise
-        finding = LATCHED.get(result.end_reason)
-        if finding is None:
+        if result.finding is None:
             sequencer.event(states.EV_OPENED)
         else:
-            sequencer.fault(finding)
+            sequencer.fault(result.finding)
+        sequencer.settle_bleed()
         service.charge_ended(sweep_id, result.end_reason)
         self.hold(sweep_id)
+        self.look_at_capacitor(result)
         if result.end_reason == INTERRUPTED:
             raise KeyboardInterrupt
 
@@ -148,12 +151,4 @@ class Loop:
         # In a fault the bleed goes on, and its latest reading is the one to tell.
         if state == states.FAULT or (state == states.SAFE and not manifest["residual_conversions"]):
             manifest["residual_sum"], manifest["residual_conversions"] = self.sequencer.residual
-
-
-# What an end of charge latches. The trip itself is all that is known: no value is told with it.
-LATCHED = {
-    STOP_LOOP: (12, 0, 0, UNIT_NONE),
-    OVER_VOLTAGE: (4, 0, 0, UNIT_NONE),
-    OVER_CURRENT: (6, 0, 0, UNIT_NONE),
-    SUPERVISION_LOST: (7, 0, 0, UNIT_NONE),
-}
+            manifest["bleed_tau_us"] = self.sequencer.watch.tau_us

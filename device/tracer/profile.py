@@ -1,20 +1,23 @@
 """The board profile on the device: read, checked, its limits turned into ADC codes."""
 
-from kneewire import profile_record
+from kneewire import guards, profile_record
 from kneewire.seam import crc32
 
-# Hard upper bounds: no profile can ask for more than these.
-MAX_RATED_MV = 60000  # class A
-MAX_RATED_MA = 20000
-MAX_CLOSED_LIMIT_MS = 120000
-MAX_PULSE_US = 20000
-MAX_TOKEN_LIFE_MS = 10000
-MAX_SAFE_MV = 60000
-MAX_START_PERMYRIAD = 500
-MAX_NEAR_ZERO_PERMYRIAD = 500
-MAX_BLEED_TIME_PERCENT = 400
-MAX_HEARTBEAT_LOST_MS = 10000
-MIN_DEAD_TIME_MS = 20  # a lower one: less time between contact and bleed is less safe
+BARE_RELAY = 2  # code of CONTACTS: a relay that makes and breaks by itself
+CLASS_B = 2
+
+
+def ln_x1000(high, low):
+    """1000 times the natural logarithm of high / low, high >= low > 0; good to 1."""
+    halvings = 0
+    while high >= 2 * low:
+        low *= 2
+        halvings += 1
+    # ln(x) = 2 (z + z^3 / 3 + z^5 / 5 ...), z = (x - 1) / (x + 1), at most 1/3 here.
+    z = 100000 * (high - low) // (high + low)
+    cube = z * z // 100000 * z // 100000
+    fifth = cube * z // 100000 * z // 100000
+    return (693147 * halvings // 10 + 2 * z + 2 * cube // 3 + 2 * fifth // 5 + 50) // 100
 
 
 class Profile:
@@ -51,60 +54,95 @@ class Profile:
 
     def predicted_bleed_ms(self, from_mv, to_mv):
         """Time for the bleed to bring the capacitor from one voltage to the other."""
-        values = self.values
-        # t = R C ln(V0 / V); ln by halvings: ln 2 = 0.6931, the rest by its chord.
-        halvings_x1000 = 0
-        while from_mv >= 2 * to_mv:
-            from_mv //= 2
-            halvings_x1000 += 1000
-        if from_mv > to_mv:
-            halvings_x1000 += 1000 * (from_mv - to_mv) // to_mv
-        tau_us = values["bleed_mohm"] * values["capacitance_nf"] // 1000000
-        return tau_us * halvings_x1000 // 1000 * 693 // 1000000
+        if from_mv <= to_mv:
+            return 0
+        return self.bleed_tau_us() * ln_x1000(from_mv, to_mv) // 1000000
+
+    def bleed_tau_us(self):
+        return self.values["bleed_mohm"] * self.values["capacitance_nf"] // 1000000
+
+    def code(self, channel, milli):
+        """ADC code of a voltage in mV or a current in mA."""
+        scale = self.values[channel + ("_na_per_code" if channel == "current" else "_nv_per_code")]
+        return milli * 1000000 // scale + self.values[channel + "_zero_x16"] // 16
 
     def trip_code(self, channel, milli):
-        """ADC code of a voltage in mV or a current in mA, at most the converter's rail."""
+        """The same, at most the converter's rail."""
+        return min(self.code(channel, milli), 4096 * self.finer - 1)
+
+    def milli_of(self, channel, code):
+        """mV or mA of a code."""
         scale = self.values[channel + ("_na_per_code" if channel == "current" else "_nv_per_code")]
-        code = milli * 1000000 // scale + self.values[channel + "_zero_x16"] // 16
-        return min(code, 4096 * self.finer - 1)
+        return (16 * code - self.values[channel + "_zero_x16"]) * scale // 16000000
+
+    def near_zero_codes(self):
+        """Codes of current above its zero below which an opening is cold; three at the least."""
+        milli = self.values["rated_ma"] * self.values["near_zero_permyriad"] // 10000
+        return max(milli * 1000000 // self.values["current_na_per_code"], 3 * self.finer)
+
+    def stored_uj(self, milli):
+        """Energy that the capacitor holds at a voltage in mV."""
+        return self.values["capacitance_nf"] * milli * milli // 2000000000
+
+    def stored_mj(self, milli):
+        return self.stored_uj(milli) // 1000
+
+    def bare(self):
+        """True where a relay makes and breaks by itself, without a switch in series."""
+        return self.values["contact"] == BARE_RELAY
+
+    def closed_limit_ms(self):
+        limit = self.values["closed_limit_ms"]
+        return min(limit, guards.BARE_CLOSED_MS) if self.bare() else limit
 
     def fault(self, device_id):
         """ "" where this profile may be used on that board, else what speaks against it."""
         values = self.values
         if values["device_id"] != device_id:
             return "made for another board"
-        if values["hazard_class"] != 1 or values["rated_mv"] > MAX_RATED_MV:
-            return "class B is not supported by this firmware"
-        if values["contact"] != 1:
-            return "contact kind is not supported by this firmware"
-        for name, bound in (
-            ("rated_ma", MAX_RATED_MA),
-            ("closed_limit_ms", MAX_CLOSED_LIMIT_MS),
-            ("pulse_us", MAX_PULSE_US),
-            ("token_life_ms", MAX_TOKEN_LIFE_MS),
-            ("safe_mv", MAX_SAFE_MV),
-            ("start_permyriad", MAX_START_PERMYRIAD),
-            ("near_zero_permyriad", MAX_NEAR_ZERO_PERMYRIAD),
-            ("bleed_time_percent", MAX_BLEED_TIME_PERCENT),
-            ("heartbeat_lost_ms", MAX_HEARTBEAT_LOST_MS),
-        ):
-            if values[name] > bound:
-                return name + " is above the bound in the firmware"
-        if values["dead_time_ms"] < MIN_DEAD_TIME_MS:
-            return "dead_time_ms is below the bound in the firmware"
+        if values["hazard_class"] not in (1, CLASS_B) or values["contact"] not in (1, BARE_RELAY):
+            return "class or contact is none that this firmware knows"
         for name in (
             "voltage_nv_per_code",
             "current_na_per_code",
             "capacitor_nv_per_code",
+            "rated_mv",
             "rated_ma",
             "capacitance_nf",
             "bleed_mohm",
-            "pulse_us",
-            "safe_mv",
+            "permanent_bleeder_ohm",
             "pair_us",
         ):
             if values[name] == 0:
                 return name + " is zero"
+        for name, least, greatest in guards.BOUNDS:
+            if not least <= values[name] <= greatest:
+                return "%s is outside %d to %d" % (name, least, greatest)
+        return self._class_fault()
+
+    def _class_fault(self):
+        """What the hazard class asks for, and what a welded contact would do to the bleed."""
+        values = self.values
+        letter = values["hazard_class"] - 1
+        for name, found, bound in (
+            ("rated_mv", values["rated_mv"], guards.RATED_MV[letter]),
+            ("rated_ma", values["rated_ma"], guards.RATED_MA[letter]),
+            ("energy at rated_mv", self.stored_mj(values["rated_mv"]), guards.STORED_MJ[letter]),
+        ):
+            if found > bound:
+                return "%s is above %d, the bound of its class" % (name, bound)
+        if letter:
+            if values["declared"] & guards.DECLARED_ALL != guards.DECLARED_ALL:
+                return "class B without all its declarations"
+            if not values["reviewer"] or not values["reviewed_day"]:
+                return "class B without a reviewer and a date"
+        held_mw = values["rated_mv"] * values["rated_mv"] // values["bleed_mohm"]
+        if held_mw > values["bleed_mw"] and not values["bleed_cutoff"]:
+            return "bleed_mw is below what a welded contact would bring, without a cut-off"
+        if self.stored_mj(values["rated_mv"]) > values["bleed_mj"]:
+            return "bleed_mj is below the energy at rated_mv"
+        if self.bare() and not values["bounce_ms"]:
+            return "a bare relay bounces; bounce_ms is zero"
         return ""
 
 

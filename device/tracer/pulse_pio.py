@@ -3,8 +3,9 @@
 The driver of the contact is AC-coupled: it conducts only while its input toggles at 10 kHz or
 more, so a level stuck high or low opens it. A PIO state machine makes the wave. It takes the
 number of periods left from its FIFO; each period it looks for a newer word, which replaces
-what is left. Only nine bits of a word are used, so no word, not even a garbled one, runs
-longer than 511 periods: 20 ms.
+what is left. Only a few bits of a word are used, so that no word, not even a garbled one, runs
+for long: nine bits with a switch, 511 periods or 20 ms; 17 with a bare relay, which is given one
+pulse for its whole charge, 131071 periods or 5.1 s.
 
 Comes in: microseconds. Goes out: the pin. When and how long: not decided here.
 """
@@ -30,7 +31,8 @@ if TYPE_CHECKING:
     )
 
 PERIOD_US = const(39)  # 13 instructions of 3 us: 25.6 kHz
-MAX_PERIODS = const(511)  # nine bits
+SWITCH_BITS = const(9)
+BARE_BITS = const(17)
 _STEP_HZ = const(333333)
 
 _GPIO = const(2)  # make and break; see main.py, which names the pins in its first lines
@@ -53,19 +55,22 @@ _SM0_ADDR = const(0x502000D4)
 _SM0_INSTR = const(0x502000D8)
 
 
-@rp2.asm_pio(sideset_init=rp2.PIO.OUT_LOW, out_shiftdir=rp2.PIO.SHIFT_RIGHT)
-def bounded_wave():
-    # X holds the periods left. High for 6 steps, low for 7.
-    wrap_target()
-    pull().side(0)  # at rest: low, until a word comes
-    label("period")
-    out(x, 9).side(0)  # the bound: nothing above bit 8 gets in
-    jmp(x_dec, "high").side(0)
-    wrap()  # none left: low, back to rest
-    label("high")
-    nop().side(1)[5]
-    pull(noblock).side(0)[3]  # a newer word, else X itself
-    jmp("period").side(0)
+def bounded_wave(bits):
+    @rp2.asm_pio(sideset_init=rp2.PIO.OUT_LOW, out_shiftdir=rp2.PIO.SHIFT_RIGHT)
+    def wave():
+        # X holds the periods left. High for 6 steps, low for 7.
+        wrap_target()
+        pull().side(0)  # at rest: low, until a word comes
+        label("period")
+        out(x, bits).side(0)  # the bound: nothing above these bits gets in
+        jmp(x_dec, "high").side(0)
+        wrap()  # none left: low, back to rest
+        label("high")
+        nop().side(1)[5]
+        pull(noblock).side(0)[3]  # a newer word, else X itself
+        jmp("period").side(0)
+
+    return wave
 
 
 @micropython.viper
@@ -79,7 +84,8 @@ def _forget_words():
 
 
 @micropython.viper
-def _run(periods: int, origin: int):
+def run(periods: int, origin: int):
+    """The wave for so many periods from now, one at least, whatever was left."""
     _forget_words()
     ptr32(_TXF0)[0] = periods
     if ptr32(_CTRL)[0] & _SM_ENABLE == 0:
@@ -90,7 +96,7 @@ def _run(periods: int, origin: int):
 
 
 @micropython.viper
-def _stop():
+def stop():
     """Low by SIO first, then the state machine stands still."""
     ptr32(_SIO_OUT_CLR)[0] = 1 << _GPIO
     ptr32(_SIO_OE_SET)[0] = 1 << _GPIO
@@ -100,21 +106,19 @@ def _stop():
 
 
 class BoundedPulse:
-    """The wave on GP2. `run` and `stop` do not allocate and do not block."""
+    """The wave on GP2, at rest. `run` and `stop` do not allocate and do not block."""
 
-    def __init__(self):
-        rp2.StateMachine(0, bounded_wave, freq=_STEP_HZ, sideset_base=machine.Pin(_GPIO))
-        self._origin = machine.mem32[_SM0_ADDR] & 31
-        _stop()
+    def __init__(self, bare):
+        stop()
+        bits = BARE_BITS if bare else SWITCH_BITS
+        self._most = (1 << bits) - 1
+        rp2.PIO(0).remove_program()
+        wave = bounded_wave(bits)
+        rp2.StateMachine(0, wave, freq=_STEP_HZ, sideset_base=machine.Pin(_GPIO))
+        self.origin = machine.mem32[_SM0_ADDR] & 31
+        stop()
 
-    def run(self, us):
-        """At most `us` from now, whatever was left before; too short for one period: stop."""
+    def periods(self, us):
+        """For `run`: at most `us` from now; 0 where that is too short for one."""
         # The period under way when the word arrives comes on top of the word.
-        periods = us // PERIOD_US - 1
-        if periods <= 0:
-            _stop()
-        else:
-            _run(min(periods, MAX_PERIODS), self._origin)
-
-    def stop(self):
-        _stop()
+        return min(max(us // PERIOD_US - 1, 0), self._most)

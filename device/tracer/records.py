@@ -34,6 +34,24 @@ if memory.PLACING_WORDS < R_WORDS:
 
 
 @micropython.viper
+def add_currents(bins: ptr32, r: ptr32):
+    """Sum of the current codes of the first R_COUNT bins, full or not, into R_V."""
+    wide = r[R_WIDE]
+    last = r[R_COUNT]
+    low = 0
+    high = 0
+    number = 0
+    while number < last:
+        one = bins[number + number + 1] if wide else (bins[number] >> 16) & 0xFFFF
+        low += one & 0xFFFFFF
+        high += (one >> 24) + (low >> 24)
+        low = low & 0xFFFFFF
+        number += 1
+    r[R_V] = low
+    r[R_V + 1] = high
+
+
+@micropython.viper
 def write(bins: ptr32, cuts: ptr16, out: ptr8, r: ptr32):
     """Write R_COUNT records."""
     wide = r[R_WIDE]
@@ -127,6 +145,13 @@ def write(bins: ptr32, cuts: ptr16, out: ptr8, r: ptr32):
                 many -= 1
             number += 1
         knot += 1
+
+
+def current_sum(r, bins, capture):
+    """Sum of the current codes of all pairs; `describe` has been called."""
+    r[R_COUNT] = capture.full_bins() + (1 if r[R_REST] else 0)
+    add_currents(bins, r)
+    return int(r[R_V + 1]) << 24 | int(r[R_V])
 
 
 def describe(r, capture, knots, conducting_us, pair_us):

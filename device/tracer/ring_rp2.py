@@ -19,6 +19,8 @@ import rp2
 import uctypes
 from micropython import const
 
+from tracer.pulse_pio import stop
+
 # DMA, in words from a channel's base.
 _DMA = const(0x50000000)
 _CHAN_ABORT = const(0x50000444)
@@ -59,7 +61,9 @@ _W_SOURCE = const(14)
 _W_SHIFT = const(15)  # transfers of a pair, as a power of two
 _W_GO = const(16)  # address of the write that sets the converters going
 _W_GO_BITS = const(17)
-_WORDS = const(18)
+_W_BREAKS = const(18)  # 1: a trip ends the pulse at once
+_W_TRIP_CODE = const(19)  # the code that tripped
+_WORDS = const(20)
 
 
 def _aligned():
@@ -216,20 +220,38 @@ def visit(timer):
         one = uint(1)
         done = (one << _COUNT_BITS) - uint(ptr32(told[_W_DMA])[_TRANS_COUNT])
         pairs = int((done >> told[_W_SHIFT]) & 0x3FFFFFFF)
-        if pairs > 0:
+        if pairs > 1 and trips & 6 == 0:
+            # Two pairs in a row: a single one may be noise.
             codes = ptr16(told[_W_RING])
             at = 2 * ((pairs - 1) & _RING_MASK)
-            if codes[at] >= told[_W_VOLTAGE_TRIP]:
+            before = 2 * ((pairs - 2) & _RING_MASK)
+            trip = told[_W_VOLTAGE_TRIP]
+            if codes[at] >= trip and codes[before] >= trip:
+                told[_W_TRIP_CODE] = codes[at]
                 trips |= 2
-            if codes[at + 1] >= told[_W_CURRENT_TRIP]:
+            trip = told[_W_CURRENT_TRIP]
+            if trips & 2 == 0 and codes[at + 1] >= trip and codes[before + 1] >= trip:
+                told[_W_TRIP_CODE] = codes[at + 1]
                 trips |= 4
     told[_W_TRIPS] = trips
+    if trips and told[_W_BREAKS]:
+        stop()
 
 
-def supervise(voltage_trip_code, current_trip_code):
+@micropython.viper
+def tripped(words: ptr32) -> int:
+    """1 where a trip has ended the pulse, which must then not run again."""
+    if words[_W_TRIPS] and words[_W_BREAKS]:
+        return 1
+    return 0
+
+
+def supervise(voltage_trip_code, current_trip_code, breaks):
     timer.deinit()
     words[_W_TICKS] = 0
     words[_W_TRIPS] = 0
+    words[_W_TRIP_CODE] = 0
+    words[_W_BREAKS] = 1 if breaks else 0
     words[_W_VOLTAGE_TRIP] = voltage_trip_code
     words[_W_CURRENT_TRIP] = current_trip_code
     timer.init(period=1, mode=machine.Timer.PERIODIC, callback=visit, hard=True)
@@ -241,3 +263,12 @@ def ticks():
 
 def trips():
     return words[_W_TRIPS]
+
+
+def trip_code():
+    return words[_W_TRIP_CODE]
+
+
+def supervise_end():
+    timer.deinit()
+    words[_W_BREAKS] = 0

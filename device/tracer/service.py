@@ -16,14 +16,16 @@ from kneewire.messages import (
     unpack,
 )
 from tracer import sequencer as states
+from tracer.charge import Settings
 from tracer.held import NO_ID
-from tracer.interlocks import BEFORE_CLOSING, first_finding
+from tracer.interlocks import BEFORE_CLOSING, HANG, RELAY_OPEN, first_finding
 from tracer.memory import MAX_KNOTS
 
 FIRMWARE = (0, 1, 0)
 STORED_REPLIES = 8
 WINDOW = 16  # blocks in a burst
 MIN_KNOTS = 16
+RESERVE_BYTES = 3072
 
 R_UNKNOWN_KIND = 1
 R_UNKNOWN_SESSION = 3
@@ -63,9 +65,7 @@ class Service:
         self.decoder = framing.Decoder(framing.coded_limit(catalogue.MAX_FRAME, True), True)
         self.fingerprint = fingerprint()
         self.armed_knots = 0
-        self.armed_limit_ms = 0
-        self.armed_raw = None  # buffer for pairs kept one by one
-        self.armed_raw_from_us = 0
+        self.armed = Settings(0)
         self.confirmed = False
         self.fired = None  # sweep id of an accepted fire, until `loop.py` has run the charge
         self.unheard = b""  # bytes behind an accepted fire, for the ear
@@ -227,7 +227,7 @@ class Service:
 
     def _abort(self, request):
         self.sequencer.disarm()
-        self.armed_raw = None
+        self.armed.raw = None
         return {"state": self.sequencer.state}
 
     def _status(self, request):
@@ -249,6 +249,8 @@ class Service:
             "sweep_id": self.held.sweep_id,
             "frames_good": self.decoder.good,
             "frames_bad": self.decoder.bad,
+            "bleed_mj": readings.heat_mj,
+            "rest_ms": sequencer.rest_ms(readings.source_mv) if self.profile is not None else 0,
             "guard": guard,
             "measured": measured,
             "limit": limit,
@@ -269,19 +271,29 @@ class Service:
         self._in_range(request["closed_limit_ms"], 1, 120000)
         self._in_range(request["raw_pairs"], 0, catalogue.MAX_RAW_PAIRS)
         self._in_range(request["raw_from_us"], 0, 120000000)
+        # A bare relay is held by the pulse itself: there is no other to be left open.
+        bare = self.profile is not None and self.profile.bare()
+        self._in_range(request["exercise"], 0, HANG if bare else RELAY_OPEN)
         self.sequencer.disarm()
-        self.armed_raw = self._raw_buffer(request["raw_pairs"])
+        self.armed.raw = None  # what an earlier arming took is free again
+        armed = Settings(
+            request["closed_limit_ms"],
+            self._raw_buffer(request["raw_pairs"]),
+            request["raw_from_us"],
+        )
+        armed.limit_mv = request["limit_mv"]
+        armed.limit_ma = request["limit_ma"]
+        armed.exercise = request["exercise"]
         if request["confirmed"]:
             self.confirmed = True
-        readings = self.sequencer.readings(self.confirmed)
+        readings = self._readings(armed)
+        self.sequencer.read_zero(readings)
         token = self.hal.random32() or 1
         finding = self.sequencer.arm(token, readings)
         if finding is not None:
-            self.armed_raw = None
             raise Refusal(R_INTERLOCK, finding)
         self.armed_knots = request["knots"]
-        self.armed_limit_ms = request["closed_limit_ms"]
-        self.armed_raw_from_us = request["raw_from_us"]
+        self.armed = armed
         return {
             "token": token,
             "life_ms": self.profile["token_life_ms"],
@@ -290,12 +302,17 @@ class Service:
             "conversions": readings.conversions,
         }
 
+    def _readings(self, armed):
+        return self.sequencer.readings(self.confirmed, armed.limit_mv, armed.exercise)
+
     def _raw_buffer(self, pairs):
-        self.armed_raw = None  # what an earlier arming took is free again
         if not pairs:
             return None
         try:
-            return bytearray(RAW_BYTES * pairs)
+            buffer = bytearray(RAW_BYTES * pairs)
+            # Answers and what else must be possible while it is held.
+            bytearray(RESERVE_BYTES)
+            return buffer
         except MemoryError:
             raise Refusal(R_OUT_OF_RANGE) from None
 
@@ -308,19 +325,34 @@ class Service:
         if not token or request["token"] != token or request["sweep_id"] == NO_ID:
             sequencer.disarm()
             raise Refusal(R_BAD_TOKEN)
-        readings = sequencer.readings(self.confirmed)
-        finding = first_finding(BEFORE_CLOSING, self.profile, readings)
+        finding = first_finding(BEFORE_CLOSING, self.profile, self._readings(self.armed))
         if finding is not None:
             sequencer.disarm()
             raise Refusal(R_INTERLOCK, finding)
         self.fired = request["sweep_id"]
-        limit_ms = min(self.armed_limit_ms, self.profile["closed_limit_ms"])
+        limit_ms = min(self.armed.closed_limit_ms, self.profile.closed_limit_ms())
         return {"quiet_ms": limit_ms + 500}
 
     def _clear_fault(self, request):
         self._demand(states.FAULT)
-        self.sequencer.clear()
+        finding = self.sequencer.clear()
+        if finding is not None:
+            raise Refusal(R_INTERLOCK, finding)
         return {"state": self.sequencer.state}
+
+    def _read_logbook(self, request):
+        book = self.sequencer.logbook
+        return {
+            "operations": book.operations,
+            "hot_openings": book.hot_openings,
+            "proof_day": book.proof_day,
+            "proof_digest": book.proof_digest,
+        }
+
+    def _note_proof(self, request):
+        self._demand(states.SAFE)
+        self.sequencer.logbook.proven(request["day"], request["digest"])
+        return {"kept": 1 if self.sequencer.logbook.keep() else 0}
 
     def _read_manifest(self, request):
         self._demand_held()
@@ -385,6 +417,8 @@ HANDLERS = {
     "arm": Service._arm,
     "fire": Service._fire,
     "clear_fault": Service._clear_fault,
+    "read_logbook": Service._read_logbook,
+    "note_proof": Service._note_proof,
     "read_manifest": Service._read_manifest,
     "fetch": Service._fetch,
     "fetch_raw": Service._fetch_raw,

@@ -195,6 +195,12 @@ class Bench(Wire):
             self.listen(0.05)
         return state
 
+    def wait_cool(self) -> None:
+        """Wait until the bleed resistor has room for a sweep, `SAFE_S` at most."""
+        rest_s = self.status()["rest_ms"] / 1000
+        if rest_s:
+            self.listen(min(rest_s, SAFE_S))
+
     # -- arming ----------------------------------------------------------------------------
 
     def drop_own(self) -> None:
@@ -211,6 +217,9 @@ class Bench(Wire):
             "confirmed": int(self.may_arm),
             "raw_from_us": 0,
             "raw_pairs": 0,
+            "limit_mv": 0xFFFFFFFF,
+            "limit_ma": 0xFFFFFFFF,
+            "exercise": 0,
         }
         return {**values, **changes}
 
@@ -219,6 +228,7 @@ class Bench(Wire):
         if not self.may_arm:
             raise NotTried(NEEDS_SWEEP)
         self.drop_own()
+        self.wait_cool()
         frame = self.ask("arm", self.arm_values(**changes))
         if changes.get("raw_pairs") and frame.refusal() == "out of range":
             raise NotTried(f"the device has no room for {changes['raw_pairs']} raw pairs")

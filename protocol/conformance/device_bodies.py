@@ -21,7 +21,11 @@ NOTHING: dict[str, dict[str, Any]] = {
     "fetch": {"sweep_id": OTHER_ID, "first": 0, "count": 1, "a_block": 0},
     "fetch_raw": {"sweep_id": OTHER_ID, "first": 0, "count": 1, "a_block": 0},
     "acknowledge": {"sweep_id": OTHER_ID},
-    "arm": {"knots": 0, "closed_limit_ms": 0, "confirmed": 0, "raw_from_us": 0, "raw_pairs": 0},
+    "arm": {
+        **dict.fromkeys(("knots", "closed_limit_ms", "confirmed", "raw_from_us", "raw_pairs"), 0),
+        **{"limit_mv": 0, "limit_ma": 0, "exercise": 0},
+    },
+    "note_proof": {"day": 0, "digest": bytes(16)},
     "fire": {"token": 0, "sweep_id": OTHER_ID},
 }
 

@@ -108,6 +108,12 @@ class ScriptedDevice(Conversation):
             "raw_first": raw_first if self.raw else 0,
             "raw_pairs": self.raw_count(),
             "raw_crc": crc32(self.raw),
+            "capacitor_before_sum": 16 * 24,
+            "capacitor_full_sum": round(16 * open_code),
+            "capacitor_conversions": 16,
+            "opening_code": 40,
+            "hot_opening": 0,
+            "bleed_tau_us": 219_000,
         }
 
     def raw_count(self) -> int:
@@ -177,6 +183,8 @@ def on_status(device: ScriptedDevice, message: Message) -> None:
         sweep_id=device.held_id,
         frames_good=device.good,
         frames_bad=device.bad,
+        bleed_mj=0,
+        rest_ms=0,
         guard=0,
         measured=0,
         limit=0,
@@ -245,6 +253,14 @@ def on_clear_fault(device: ScriptedDevice, message: Message) -> None:
     device.refuse(message, "wrong state")
 
 
+def on_read_logbook(device: ScriptedDevice, message: Message) -> None:
+    device.reply(message, operations=7, hot_openings=0, proof_day=0, proof_digest=NO_ID)
+
+
+def on_note_proof(device: ScriptedDevice, message: Message) -> None:
+    device.reply(message, kept=1)
+
+
 def on_read_manifest(device: ScriptedDevice, message: Message) -> None:
     if device.held_id == NO_ID:
         device.refuse(message, "no held sweep")
@@ -297,6 +313,8 @@ HANDLERS = {
     "arm": on_arm,
     "fire": on_fire,
     "clear_fault": on_clear_fault,
+    "read_logbook": on_read_logbook,
+    "note_proof": on_note_proof,
     "read_manifest": on_read_manifest,
     "fetch": on_fetch,
     "fetch_raw": on_fetch_raw,

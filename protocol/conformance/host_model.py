@@ -19,6 +19,8 @@ PROFILE: dict[str, Any] = {
     "device_id": b"SCRIPTED",
     "hazard_class": 1,
     "contact": 1,
+    "breaks_dc": 1,
+    "switch_release_us": 50,
     "converter": 1,
     "pair_us": PAIR_US,
     "spi_clock_khz": 0,
@@ -38,7 +40,12 @@ PROFILE: dict[str, Any] = {
     "rated_mv": 60000,
     "rated_ma": 20000,
     "capacitance_nf": 2200000,
+    "capacitance_low_percent": 70,
+    "capacitance_high_percent": 130,
     "bleed_mohm": 100000,
+    "bleed_mw": 10000,
+    "bleed_mj": 40000,
+    "bleed_cutoff": 1,
     "permanent_bleeder_ohm": 22000,
     "relay_operate_ms": 10,
     "relay_release_ms": 5,
@@ -56,6 +63,10 @@ PROFILE: dict[str, Any] = {
     "heartbeat_lost_ms": 2000,
     "isolation_v": 0,
     "isolation_tested_day": 0,
+    "declared": 0,
+    "reviewer": "",
+    "reviewed_day": 0,
+    "proof_days": 90,
 }
 
 

@@ -5,4 +5,4 @@ frames and messages out; it knows no serial port and keeps no clock. `protocol/S
 in words what this package does in code.
 """
 
-PROTOCOL = (0, 2)  # major, minor
+PROTOCOL = (0, 3)  # major, minor

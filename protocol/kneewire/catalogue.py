@@ -51,6 +51,9 @@ END_REASONS = {
     9: "ring overrun",
     10: "supervision lost",
     11: "interrupted",
+    12: "capacitor not empty",
+    13: "sensor at fault",
+    14: "switch shorted",
 }
 
 REFUSALS = {
@@ -68,7 +71,10 @@ REFUSALS = {
 }
 
 # What a measured value and a limit in a refusal or a fault are counted in.
-UNITS = {0: "", 1: "mV", 2: "mA", 3: "ms", 4: "mJ", 5: "codes"}
+UNITS = {0: "", 1: "mV", 2: "mA", 3: "ms", 4: "mJ", 5: "codes", 6: "mohm", 7: "nF"}
+
+# What an arming is for.
+EXERCISES = {0: "sweep", 1: "source absent", 2: "hang while closed", 3: "relay left open"}
 
 FLAG_EMULATED = 1  # hello_reply.flags
 
@@ -155,6 +161,8 @@ MESSAGES: "dict[int, tuple[str, int, bool, bool, tuple[tuple[str, str], ...]]]" 
             ("sweep_id", "b16"),
             ("frames_good", "u32"),
             ("frames_bad", "u32"),
+            ("bleed_mj", "u32"),
+            ("rest_ms", "u32"),
         )
         + _GUARD,
     ),
@@ -171,6 +179,21 @@ MESSAGES: "dict[int, tuple[str, int, bool, bool, tuple[tuple[str, str], ...]]]" 
             ("replied_us", "u64"),
         ),
     ),
+    0x13: ("read_logbook", TO_DEVICE, False, False, ()),
+    0x93: (
+        "logbook",
+        TO_HOST,
+        False,
+        False,
+        (
+            ("operations", "u32"),
+            ("hot_openings", "u32"),
+            ("proof_day", "u32"),
+            ("proof_digest", "b16"),
+        ),
+    ),
+    0x23: ("note_proof", TO_DEVICE, False, True, (("day", "u32"), ("digest", "b16"))),
+    0xA3: ("note_proof_reply", TO_HOST, False, False, (("kept", "u8"),)),
     0x20: (
         "arm",
         TO_DEVICE,
@@ -182,6 +205,9 @@ MESSAGES: "dict[int, tuple[str, int, bool, bool, tuple[tuple[str, str], ...]]]" 
             ("confirmed", "u8"),
             ("raw_from_us", "u32"),
             ("raw_pairs", "u16"),
+            ("limit_mv", "u32"),
+            ("limit_ma", "u32"),
+            ("exercise", "u8"),
         ),
     ),
     0xA0: (
@@ -252,6 +278,12 @@ MESSAGES: "dict[int, tuple[str, int, bool, bool, tuple[tuple[str, str], ...]]]" 
             ("raw_first", "u32"),
             ("raw_pairs", "u16"),
             ("raw_crc", "u32"),
+            ("capacitor_before_sum", "u16"),
+            ("capacitor_full_sum", "u16"),
+            ("capacitor_conversions", "u8"),
+            ("opening_code", "u16"),
+            ("hot_opening", "u8"),
+            ("bleed_tau_us", "u32"),
         ),
     ),
     0x31: (
@@ -317,7 +349,7 @@ def canonical_lines() -> "Iterator[str]":
     for kind in sorted(MESSAGES):
         name, direction, _, changes, fields = MESSAGES[kind]
         yield _line("%d %s %d %d" % (kind, name, direction, changes), fields)
-    for codes in (STATES, RESET_CAUSES, END_REASONS, REFUSALS, UNITS):
+    for codes in (STATES, RESET_CAUSES, END_REASONS, REFUSALS, UNITS, EXERCISES):
         yield ",".join(["%d=%s" % (code, codes[code]) for code in sorted(codes)]) + "\n"
 
 

@@ -55,9 +55,12 @@ class Bad:
 
 
 def readable(raw: bytes) -> str:
-    """`raw` as text where at least 90 % of it is printable ASCII (a prompt, a traceback)."""
+    """`raw` as text where at least 90 % of it is printable ASCII (a prompt, a traceback).
+
+    A prompt that echoes in mid-line moves its cursor back (08) after each character.
+    """
     good = [chr(byte) for byte in raw if 32 <= byte < 127 or byte in (9, 10, 13)]
-    if not raw or len(good) * 10 < len(raw) * 9:
+    if not raw or (len(good) + raw.count(b"\x08")) * 10 < len(raw) * 9:
         return ""
     return "".join(good)
 

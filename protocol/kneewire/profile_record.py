@@ -12,7 +12,7 @@ try:
 except ImportError:  # MicroPython has no typing and does not evaluate annotations
     pass
 
-FORMAT = 2
+FORMAT = 3
 
 CLASSES = {1: "A", 2: "B"}
 CONTACTS = {1: "relay+switch", 2: "relay"}
@@ -25,6 +25,8 @@ PROFILE = (
     ("device_id", "b8"),
     ("hazard_class", "u8"),
     ("contact", "u8"),
+    ("breaks_dc", "u8"),
+    ("switch_release_us", "u16"),
     ("converter", "u8"),
     ("pair_us", "u8"),
     ("spi_clock_khz", "u16"),
@@ -44,7 +46,12 @@ PROFILE = (
     ("rated_mv", "u32"),
     ("rated_ma", "u32"),
     ("capacitance_nf", "u32"),
+    ("capacitance_low_percent", "u8"),
+    ("capacitance_high_percent", "u8"),
     ("bleed_mohm", "u32"),
+    ("bleed_mw", "u32"),
+    ("bleed_mj", "u32"),
+    ("bleed_cutoff", "u8"),
     ("permanent_bleeder_ohm", "u32"),
     ("relay_operate_ms", "u16"),
     ("relay_release_ms", "u16"),
@@ -62,6 +69,10 @@ PROFILE = (
     ("heartbeat_lost_ms", "u16"),
     ("isolation_v", "u16"),
     ("isolation_tested_day", "u32"),
+    ("declared", "u8"),
+    ("reviewer", "text"),
+    ("reviewed_day", "u32"),
+    ("proof_days", "u16"),
 )
 
 

@@ -40,6 +40,7 @@ def tables() -> str:
         ("End reasons", catalogue.END_REASONS),
         ("Refusals", catalogue.REFUSALS),
         ("Units", catalogue.UNITS),
+        ("Exercises", catalogue.EXERCISES),
         ("Profile: hazard classes", profile_record.CLASSES),
         ("Profile: contacts", profile_record.CONTACTS),
         ("Profile: converters", profile_record.CONVERTERS),

@@ -24,7 +24,7 @@ CALLERS = {
         *("cut", "respace", "exchange", "nudge", "settle"),
         *("worst", "take_over", "remember", "recall"),
     ),
-    ("records", "records"): ("write",),
+    ("records", "records"): ("write", "add_currents"),
 }
 
 

@@ -72,6 +72,7 @@ def told(made: Any, placed: folding.Placed, bins: bytes, raw: bytes) -> list[str
     return [
         " ".join(str(int(count)) for count in counts),
         " ".join(str(place) for place in placed.cuts),
+        str(placed.current_sum),
         *(hashlib.sha256(data).hexdigest() for data in (bins, raw, placed.records)),
     ]
 

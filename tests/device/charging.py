@@ -11,6 +11,8 @@ from kneewire.messages import pack
 from kneewise.emulator.firmware import firmware_module
 
 module = firmware_module("tracer.charge")
+sequencer = firmware_module("tracer.sequencer")
+Logbook = firmware_module("tracer.logbook").Logbook
 Ear = firmware_module("tracer.ear").Ear
 ABORT = framing.encode(pack("abort", 7, 0), toward_device=True)
 BEAT = framing.encode(pack("heartbeat", 7, 9), toward_device=True)
@@ -26,19 +28,14 @@ FINE = {
 }
 
 
-class Outputs:
-    """What the sequencer is to a charge."""
+class Outputs(sequencer.Sequencer):
+    """What the sequencer is to a charge: its outputs, and no state."""
 
     def __init__(self, board: Any) -> None:
-        self.board = board
+        self.hal = board
+        self.logbook = Logbook(None)
         self.contact_closed = False
         self.bleed_engaged = True
-
-    def make_safe(self) -> None:
-        self.board.safe()
-        self.contact_closed = False
-        self.bleed_engaged = True
-        self.board.zero_input(False)
 
 
 class Rig:
@@ -59,8 +56,19 @@ class Rig:
         self.result: Any = None
         self.charge = module.Charge(hal, made, self.capture, self.ear)
 
-    def run(self, closed_limit_ms: int = 120_000, **more: Any) -> Any:
-        return self.charge.run(closed_limit_ms, self.outputs, **more)
+    def run(
+        self,
+        closed_limit_ms: int = 120_000,
+        raw: Any = None,
+        raw_from_us: int = 0,
+        meanwhile: Any = None,
+        **asked: int,
+    ) -> Any:
+        """`asked`: more of the settings."""
+        settings = module.Settings(closed_limit_ms, raw, raw_from_us)
+        for name, value in asked.items():
+            setattr(settings, name, value)
+        return self.charge.run(settings, self.outputs, meanwhile)
 
     def pulses(self) -> list[int]:
         """When the wave was renewed, its first start included."""

@@ -173,6 +173,7 @@ class Placed:
         self.count = Placer(work, buffers, measure).place(filled, knots, *zeros)
         self.cuts = list(buffers.cuts[: self.count + 1])
         self.records = write(filled, buffers, self.count)
+        self.current_sum = records.current_sum(buffers.placing, filled.bins, filled)
         self.knots = unpack_knots(self.records)
 
 
@@ -209,6 +210,7 @@ def check_knots(pairs: np.ndarray, placed: Placed, knots: int, code_bits: int = 
     counts = [knot["pairs"] for knot in found]
     assert sum(counts) == len(pairs)
     assert min(counts) >= 1
+    assert placed.current_sum == pairs[:, 1].sum()
     terms = scatter_terms(bins(pairs, code_bits), full)
     ends = np.cumsum(counts)
     for knot, end, first, after in zip(

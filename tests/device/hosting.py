@@ -27,14 +27,14 @@ class Device:
         path = folder / "profile.bin"
         if not bare:
             path.write_bytes(seal(record(**changes)))
-        self.loop = loop_module.Loop(board, Buffers(), str(path))
+        self.loop = loop_module.Loop(board, Buffers(), str(path), str(folder / "logbook.bin"))
         self.service = self.loop.service
         self.sequencer = self.loop.sequencer
         self.decoder = framing.Decoder(1000, toward_device=False)
         self.session = NO_SESSION
         self.sequence = 0
         self.hello()
-        self.turns(lambda: self.state() == "safe")
+        self.turns(self.rested)
 
     # -- the host's side ---------------------------------------------------------------
 
@@ -92,6 +92,9 @@ class Device:
             "confirmed": 1,
             "raw_from_us": 0,
             "raw_pairs": 0,
+            "limit_mv": 0xFFFFFFFF,
+            "limit_ma": 0xFFFFFFFF,
+            "exercise": 0,
         }
         header = {name: changes.pop(name) for name in ("sequence",) if name in changes}
         return self.ask("arm", {**values, **changes}, **header)
@@ -103,6 +106,12 @@ class Device:
         return self.frame("abort", sequence=0)
 
     # -- the firmware's side -----------------------------------------------------------
+
+    def rested(self) -> bool:
+        """Safe, and the bleed resistor has room for a sweep."""
+        return self.state() == "safe" and (
+            self.loop.profile is None or self.sequencer.rest_ms(60_000) == 0
+        )
 
     def state(self) -> str:
         return STATES[self.sequencer.state]

@@ -53,7 +53,7 @@ def test_the_zero_is_read_at_the_zero_and_everything_else_at_the_source():
     result = Rig(board).run()
     (on,), offs = board.when("zero_input True"), board.when("zero_input False")
     (released,) = board.when("bleed False")
-    first, second = board.when("read 0")
+    _, first, second = board.when("read 0")
     (current,) = board.when("read 1")
     assert on + module.ZERO_SETTLE_US <= first <= offs[0]
     assert offs[0] + module.ZERO_SETTLE_US <= second <= current <= released
@@ -68,7 +68,7 @@ def test_a_board_without_that_switch_reads_no_zero():
     result = Rig(board, zero_switch=0).run()
     assert not board.when("zero_input True")
     assert (result.voltage_zero_sum, result.zero_conversions) == (0, 0)
-    assert len(board.when("read 0")) == 1
+    assert len(board.when("read 0")) == 2
 
 
 def test_ctrl_c_at_the_zero_brings_the_channel_back_to_the_source():
@@ -174,7 +174,7 @@ def test_a_charge_with_fine_codes_holds_its_whole_curve(pair_us):
     rig.capture.finish(result.pairs_written)
     closed_us = board.when("pulse 0")[0] - rig.pulses()[0]
     assert rig.capture.pairs() == pytest.approx(closed_us / pair_us, abs=2)
-    assert board.capacitor_v > 0.997 * board.source_v
+    assert board.capacitor_v > 0.994 * board.source_v
     steps = {b - a for a, b in pairwise(rig.pulses())}
     assert steps <= {0, module.SLICE_US}
 

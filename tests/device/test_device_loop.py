@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import pytest
 from fake_board import FakeBoard
-from hosting import STATES, SWEEP_ID, Device, loop_module, refusal, service_module
+from hosting import STATES, SWEEP_ID, Device, refusal, service_module
 from test_service import WRONG_STATE
 
 from kneewise.emulator.firmware import firmware_module
@@ -16,17 +16,6 @@ interlocks = firmware_module("tracer.interlocks")
 @pytest.fixture
 def device(board, tmp_path):
     return Device(board, tmp_path)
-
-
-def test_what_a_charge_ends_with_latches_only_what_must_be_looked_at():
-    """And no measured value is made up for it: the trip is all that is known."""
-    latched = {
-        charge.STOP_LOOP: (12, 0, 0, interlocks.UNIT_NONE),
-        charge.OVER_VOLTAGE: (4, 0, 0, interlocks.UNIT_NONE),
-        charge.OVER_CURRENT: (6, 0, 0, interlocks.UNIT_NONE),
-        charge.SUPERVISION_LOST: (7, 0, 0, interlocks.UNIT_NONE),
-    }
-    assert latched == loop_module.LATCHED
 
 
 def test_a_sweep_goes_round_from_safe_to_safe(device):
@@ -65,7 +54,10 @@ def test_after_a_fault_the_manifest_never_tells_the_reading_from_before_the_char
     device.turns(ms=200)
     manifest = device.ask("read_manifest")
     assert manifest["residual_conversions"] == 64
-    assert manifest["residual_sum"] / 64 == pytest.approx(24 + volt / 0.0165, abs=1)
+    # Its bleed is broken; the permanent bleeder has taken 4 % meanwhile.
+    left = 24 + device.board.capacitor_v / 0.0165
+    assert left - 1 <= manifest["residual_sum"] / 64 <= left * 1.03
+    assert device.board.capacitor_v < volt
 
 
 @pytest.mark.parametrize("split", range(1, 14))
@@ -96,6 +88,9 @@ def test_a_request_right_behind_the_fire_is_answered_after_the_charge(device, na
             "confirmed": 1,
             "raw_from_us": 0,
             "raw_pairs": 0,
+            "limit_mv": 0xFFFFFFFF,
+            "limit_ma": 0xFFFFFFFF,
+            "exercise": 0,
         },
     }.get(name)
     fire = device.frame("fire", {"token": token, "sweep_id": SWEEP_ID})
@@ -220,6 +215,9 @@ def test_a_request_that_ctrl_c_cut_short_may_be_sent_again(device):
         "confirmed": 1,
         "raw_from_us": 0,
         "raw_pairs": 0,
+        "limit_mv": 0xFFFFFFFF,
+        "limit_ma": 0xFFFFFFFF,
+        "exercise": 0,
     }
     frame = device.frame("arm", values)
     device.board.read = interrupt
@@ -228,7 +226,7 @@ def test_a_request_that_ctrl_c_cut_short_may_be_sent_again(device):
         device.loop.run()
     device.loop.left = False
     device.loop.sequencer.resume()
-    device.turns(lambda: device.state() == "safe")
+    device.turns(device.rested)
     device.heard()
     (answer,) = device.say(frame)
     assert answer.name == "arm_reply"

@@ -1,11 +1,16 @@
 """If these fail, sweeps end before their end, or crawl on until the time limit."""
 
 import pytest
-from charging import FINE, module
+from charging import FINE
 from fake_board import hal, profile
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from narrow import SmallWord
+
+from kneewise.emulator.firmware import firmware_module
+
+module = firmware_module("tracer.ending")
+charge = firmware_module("tracer.charge")
 
 ZERO = 40 * 16
 OPEN = 2400 * 16
@@ -123,13 +128,13 @@ def test_nothing_in_the_rule_needs_an_object(fine, data):
 
 
 REASONS = {
-    hal.TRIP_STOP_LOOP: module.STOP_LOOP,
-    hal.TRIP_OVER_VOLTAGE: module.OVER_VOLTAGE,
-    hal.TRIP_OVER_CURRENT: module.OVER_CURRENT,
+    hal.TRIP_STOP_LOOP: charge.STOP_LOOP,
+    hal.TRIP_OVER_VOLTAGE: charge.OVER_VOLTAGE,
+    hal.TRIP_OVER_CURRENT: charge.OVER_CURRENT,
 }
 
 
 @pytest.mark.parametrize("trips", range(1, 8))
 def test_of_several_trips_the_person_at_the_lid_comes_first(trips):
     first = next(bit for bit in REASONS if trips & bit)
-    assert module.trip_reason(trips) == REASONS[first]
+    assert charge.trip_reason(trips) == REASONS[first]

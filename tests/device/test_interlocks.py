@@ -7,7 +7,7 @@ from fake_board import profile
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from kneewire.hazards import HAZARDS
+from kneewire.hazards import GUARDS, HAZARDS, MEASURED
 from kneewise.emulator.firmware import firmware_module
 
 module = firmware_module("tracer.interlocks")
@@ -43,9 +43,12 @@ def test_every_guard_names_a_hazard_that_a_person_can_read_about(reference):
         capacitor_mv=30000,
         current_sum=CONVERSIONS * 3000,
     )
-    numbers = {guard(reference, found)[0] for guard in module.BEFORE_CLOSING[1:]}
-    assert numbers == {12, 5, 11, 4, 19, 20, 1}
-    assert numbers | {14, 2} <= set(HAZARDS)
+    found.heat_mj = 40_000
+    found.voltage_zero_sum = CONVERSIONS * 100
+    spoken = [guard(reference, found) for guard in module.BEFORE_CLOSING[1:]]
+    numbers = {finding[0] for finding in spoken if finding is not None}
+    assert numbers == {12, 5, 11, 4, 19, 20, 1, 10}
+    assert set(HAZARDS) == set(MEASURED) == set(GUARDS) == set(range(1, 22))
 
 
 def test_without_a_profile_nothing_is_asked_but_the_profile():
@@ -152,51 +155,56 @@ def test_no_reading_lets_a_sweep_start_that_one_guard_refuses(
     assert (first is None) == fine or near
 
 
-# -- bleeding ------------------------------------------------------------------------------
-
-FROM_MV, LIMIT_MV = 40000, 200
-
-
-def progress(now_mv, elapsed_ms, from_mv=FROM_MV, limit_mv=LIMIT_MV):
-    return module.bleed_progress(profile(), from_mv, now_mv, elapsed_ms, limit_mv)
-
-
-def allowed_ms(from_mv=FROM_MV, limit_mv=LIMIT_MV):
-    return profile().predicted_bleed_ms(from_mv, limit_mv) * 150 // 100
+@pytest.mark.parametrize(("off", "refused"), [(-25, True), (-24, False), (24, False), (25, True)])
+def test_a_voltage_channel_off_its_zero_is_refused(reference, off, refused):
+    found = readings()
+    assert module.zero_voltage(reference, found) is None
+    found.voltage_zero_sum = CONVERSIONS * (24 + off)
+    expected = (11, off, 24, module.UNIT_CODES) if refused else None
+    assert module.zero_voltage(reference, found) == expected
 
 
-def test_a_bleed_that_ends_in_its_time_is_no_finding():
-    assert progress(LIMIT_MV, 10**6) is None
-    assert progress(FROM_MV, 0) is None
-    assert progress(LIMIT_MV + 1, allowed_ms()) is None
-    assert progress(LIMIT_MV + 1, allowed_ms() + 1) == (1, LIMIT_MV + 1, LIMIT_MV, module.UNIT_MV)
+@pytest.mark.parametrize(("code", "refused"), [(4089, False), (4090, True), (4095, True)])
+def test_a_capacitor_channel_at_its_rail_may_hide_any_voltage(reference, code, refused):
+    found = readings(capacitor_sum=CONVERSIONS * code)
+    expected = (11, code, 4090, module.UNIT_CODES) if refused else None
+    assert module.capacitor_in_range(reference, found) == expected
+
+
+@pytest.mark.parametrize(("exercise", "limit_mv"), [(0, 60000), (1, 1000), (2, 1000), (3, 60000)])
+def test_an_exercise_wants_the_source_away_unless_it_is_the_relay_that_is_left_open(
+    reference, exercise, limit_mv
+):
+    found = readings(source_mv=limit_mv, exercise=exercise)
+    assert module.source_rating(reference, found) is None
+    found.source_mv += 1
+    assert module.source_rating(reference, found) == (4, limit_mv + 1, limit_mv, module.UNIT_MV)
+
+
+def test_a_sweep_may_ask_for_a_lower_limit_and_never_for_a_higher(reference):
+    found = readings(source_mv=40001, limit_mv=40000)
+    assert module.source_rating(reference, found) == (4, 40001, 40000, module.UNIT_MV)
+    found = readings(source_mv=60001, limit_mv=70000)
+    assert module.source_rating(reference, found) == (4, 60001, 60000, module.UNIT_MV)
+
+
+@pytest.mark.parametrize(("heat_mj", "refused"), [(39_824, False), (39_825, True), (40_000, True)])
+def test_a_bleed_without_room_for_the_next_sweep_is_left_to_cool(reference, heat_mj, refused):
+    """220 uF at 40 V hold 176 mJ; the resistor may take 40 J."""
+    found = readings(source_mv=40_000, heat_mj=heat_mj)
+    expected = (10, heat_mj + 176, 40_000, module.UNIT_MJ) if refused else None
+    assert module.bleed_cool(reference, found) == expected
+
+
+@pytest.mark.parametrize(("apart_mv", "refused"), [(-3601, 1), (-3600, 0), (3600, 0), (3601, 1)])
+def test_source_and_capacitor_must_agree_once_they_were_joined(reference, apart_mv, refused):
+    found = module.sensors_agree(reference, 30_000, 30_000 + apart_mv)
+    assert found == ((11, apart_mv, 3600, module.UNIT_MV) if refused else None)
 
 
 @pytest.mark.parametrize(
-    ("now_mv", "number"), [(40000, 2), (20001, 2), (20000, 1), (12001, 1), (201, 1), (45000, 2)]
+    ("nf", "limit"), [(153_999, 154_000), (154_000, 0), (286_000, 0), (286_001, 286_000)]
 )
-def test_a_welded_contact_is_told_from_a_slow_bleed(now_mv, number):
-    assert progress(now_mv, allowed_ms() + 1)[0] == number
-
-
-def test_what_may_be_touched_is_not_called_live():
-    assert progress(12000, 10**6, from_mv=13000)[0] == 1
-    assert progress(12001, 10**6, from_mv=13000)[0] == 2
-
-
-def test_a_short_bleed_has_a_tenth_of_a_second_at_least():
-    assert progress(201, 100, from_mv=201) is None
-    assert progress(201, 101, from_mv=201) is not None
-
-
-@settings(max_examples=300)
-@given(st.integers(-100, 60000), st.integers(-100, 60000), st.integers(0, 10**6))
-def test_below_the_limit_there_is_never_a_finding_and_far_beyond_the_time_always(a, b, elapsed):
-    found = progress(b, elapsed, from_mv=a)
-    if b <= LIMIT_MV:
-        assert found is None
-    elif elapsed > max(allowed_ms(max(a, 0)), 100):
-        assert found[0] in (1, 2)
-        assert found[1:] == (b, LIMIT_MV, module.UNIT_MV)
-    else:
-        assert found is None
+def test_a_capacitance_outside_its_limits_is_a_finding(reference, nf, limit):
+    found = module.capacitance(reference, nf)
+    assert found == ((15, nf, limit, module.UNIT_NF) if limit else None)

@@ -64,6 +64,7 @@ for first in range(count):
     written.update(buffers.body[:40])
 print(capture.skipped, capture.bounces, capture.pairs(), capture.bin_pairs(), count)
 print(*buffers.cuts[: count + 1])
+print(records.current_sum(told, capture.bins, capture))
 used = capture.full_bins() + (capture.full_bins() * capture.bin_pairs() < capture.pairs())
 bins = memoryview(capture.bins)[: used * 2 if capture.wide else used]
 print(hexlify(sha256(bins).digest()).decode())
@@ -77,7 +78,9 @@ from tracer import charge, hal
 from tracer.capture import Capture
 from tracer.ear import Ear
 from tracer.held import Held
+from tracer.logbook import Logbook
 from tracer.profile import Profile
+from tracer.sequencer import Sequencer
 
 
 class Board(hal.Hal):
@@ -99,6 +102,7 @@ class Board(hal.Hal):
         return 0
 
     bleed = relay = watchdog = supervise = supervise_end = trips = zero_input = nothing
+    trip_code = use_contact = nothing
 
     def capture_start(self):
         self.us = 0
@@ -110,7 +114,7 @@ class Board(hal.Hal):
         micropython.heap_unlock()
 
     def read(self, channel, count):
-        return count * (2400 if channel == hal.VOLTAGE else 40)
+        return count * (2400 if channel == hal.VOLTAGE else 40 if channel == hal.CURRENT else 24)
 
     def capture_began_us(self):
         return 0
@@ -150,14 +154,13 @@ class Board(hal.Hal):
         return count
 
 
-class Outputs:
-    def __init__(self):
+class Outputs(Sequencer):
+    def __init__(self, hal):
+        self.hal = hal
+        self.logbook = Logbook(None)
         # As in the sequencer: an attribute that is new takes memory.
         self.contact_closed = False
         self.bleed_engaged = True
-
-    def make_safe(self):
-        pass
 
 
 board = Board()
@@ -169,7 +172,7 @@ made = charge.Charge(board, profile, capture, ear)
 held = Held(buffers, board.ring)
 held.prepare(KNOTS, capture, profile)
 raw = bytearray(4 * RAW_PAIRS) if RAW_PAIRS else None
-result = made.run(120000, Outputs(), raw, 400, held)
+result = made.run(charge.Settings(120000, raw, 400), Outputs(board), held)
 placed = held.step()  # nothing is left of it
 held.keep(bytes(range(16)), board)
 print(result.end_reason, capture.pairs(), capture.bin_pairs(), board.slices)

@@ -173,7 +173,7 @@ def test_where_memory_is_short_arming_is_refused_and_may_be_tried_with_less(devi
 
 def test_what_one_sweep_took_is_given_back_before_the_next_arming(device):
     swept(device, raw_pairs=900)
-    assert device.service.armed_raw is None
+    assert device.service.armed.raw is None
     assert len(device.loop.held._raw) == 3600
     device.ask("acknowledge", {"sweep_id": SWEEP_ID})
     assert device.loop.held._raw is None

@@ -29,7 +29,10 @@ ASKED = (
     ("status", {}),
     (
         "arm",
-        {"knots": 16, "closed_limit_ms": 100, "confirmed": 1, "raw_from_us": 0, "raw_pairs": 0},
+        {
+            **{"knots": 16, "closed_limit_ms": 100, "confirmed": 1, "raw_from_us": 0},
+            **{"raw_pairs": 0, "limit_mv": 0xFFFFFFFF, "limit_ma": 0xFFFFFFFF, "exercise": 0},
+        },
     ),
     ("fire", {"token": 1, "sweep_id": SWEEP_ID}),
     ("read_manifest", {}),

@@ -27,6 +27,7 @@ LIMITS: dict[str, tuple[int, ...]] = {
     "closed_limit_ms": (0, 1, 120_000, 120_001),
     "raw_pairs": (0, 1, 2048, 2049),
     "raw_from_us": (0, 120_000_000, 120_000_001),
+    "exercise": (0, 3, 4),
     "a_block": (6, 7, 59, 60),
 }
 
@@ -116,6 +117,10 @@ class Generator:
             return rng.choice((1, 4, 50, 1000, 120_000))
         if field == "raw_pairs":
             return rng.choice((0, 0, 1, 60, 700, 2048))
+        if field in {"limit_mv", "limit_ma"}:
+            return rng.choice((TOP, TOP, TOP, 20_000, 70_000))
+        if field == "exercise":
+            return rng.choice((0, 0, 0, 0, 1, 3))
         if field == "raw_from_us":
             return rng.choice((0, 0, 3, 400, 5000))
         there = self.held.raw_count if name == "fetch_raw" else self.held.count

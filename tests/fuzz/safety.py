@@ -241,7 +241,7 @@ class Fuzz:
             board.mend()
             self._wanted = self.rng.choice(("safe", "armed", "bleeding", "fault"))
             if self._wanted == "fault":
-                board.capacitor_v, board.bleed_broken = 30.0, True
+                board.capacitor_v, board.welded = 30.0, True
         elif self.oracle.session != self.loop.service.session:
             board.arrive(generator.hello(anew=True))
         elif self.loop.held.present():

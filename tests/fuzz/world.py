@@ -34,12 +34,14 @@ from fake_board import PAIR_US, V_PER_CODE, Buffers, FakeBoard, record
 service_module = firmware_module("tracer.service")
 loop_module = firmware_module("tracer.loop")
 plane = firmware_module("tracer.plane")
+RELAY_OPEN = firmware_module("tracer.interlocks").RELAY_OPEN
 TRIP_OVER_CURRENT = firmware_module("tracer.hal").TRIP_OVER_CURRENT
 
 RING_BYTES = 512  # the port's input ring
-# Sweeps of a few milliseconds, so that there can be thousands; a lost host is noticed in 20 ms.
+# Sweeps of a few milliseconds, so that there can be thousands; a lost host is noticed in a second.
 CAPACITANCE_F = 10e-6
-PROFILE = {"heartbeat_lost_ms": 20}
+# The bleed resistor is cool again at once: how it cools has tests of its own.
+PROFILE = {"heartbeat_lost_ms": 1000, "capacitance_nf": 10_000, "bleed_mw": 1_000_000}
 
 
 class Done(BaseException):
@@ -54,10 +56,12 @@ class FuzzBoard(FakeBoard):
         self.turn: Callable[[int], None] = lambda ms: self.pass_us(1000 * ms)
         self.listening: Callable[[], None] = lambda: None
         self.closing: Callable[[], None] = lambda: None
+        self.relay_left_open: Callable[[], bool] = lambda: False
         self.interruptions = 0
         self.heard = 0
         """Bytes that came in this charge."""
         self._strikes: list[int] = []
+        self._pulsed = False
 
     def _note(self, name: str, *values: Any) -> None:
         if self._strikes:
@@ -102,6 +106,7 @@ class FuzzBoard(FakeBoard):
     def quiet_begin(self) -> None:
         super().quiet_begin()
         self.heard = 0
+        self._pulsed = False
 
     def link_write(self, data: bytes) -> int:
         self._note("link_write")
@@ -133,8 +138,15 @@ class FuzzBoard(FakeBoard):
         super().relay(closed)
 
     def pulse(self, us: int) -> None:
-        assert self.relay_closed or us == 0, "a pulse without a closed relay"
+        if us and not self.relay_closed:
+            assert self.relay_left_open(), "a pulse without a closed relay"
+            if not self._pulsed:
+                self.closing()
+            self._pulsed = True
         super().pulse(us)
+
+    def hang(self) -> None:
+        """Goes on: what becomes of a firmware that hangs has tests of its own."""
 
     @staticmethod
     def errors(bins: Any, work: Any, cuts: Any, k: Any) -> None:
@@ -176,7 +188,9 @@ class Rig:
 
     def __init__(self, buffers: Any = None) -> None:
         self.board = FuzzBoard()
-        self.loop = loop_module.Loop(self.board, buffers or Buffers(), _profile_file())
+        self.loop = loop_module.Loop(self.board, buffers or Buffers(), _profile_file(), None)
+        service = self.loop.service
+        self.board.relay_left_open = lambda: service.armed.exercise == RELAY_OPEN
         self.oracle = Oracle(lambda: self.board.time_us)
         self.prompts = 0
         """Times that the firmware was left for the prompt."""

@@ -198,7 +198,7 @@ def test_half_a_knot_is_an_error() -> None:
 
 
 def test_every_message_fits_a_frame_and_that_of_a_profile_with_a_long_name_too() -> None:
-    values = least(profile_record.PROFILE) | {"name": "x" * 120}
+    values = least(profile_record.PROFILE) | {"name": "x" * 40, "reviewer": "x" * 30}
     record = profile_record.pack_profile(values)
     for name in NAMES:
         if name != "block":
@@ -266,7 +266,7 @@ def test_names_are_told_apart() -> None:
 
 def test_state_changing_requests_are_those_that_change_the_device() -> None:
     changing = {name for name, _, _, changes, _ in MESSAGES.values() if changes}
-    assert changing == {"abort", "arm", "fire", "clear_fault", "acknowledge"}
+    assert changing == {"abort", "arm", "fire", "clear_fault", "acknowledge", "note_proof"}
 
 
 def test_a_message_shows_itself_readably() -> None:
@@ -284,7 +284,7 @@ def changed_catalogues() -> list[tuple[str, Callable[[pytest.MonkeyPatch], None]
     for attribute in ("HEADER", "KNOT"):
         for what, rows in changed_rows(getattr(catalogue, attribute)):
             add(f"{attribute}: {what}", attribute, rows)
-    for attribute in ("STATES", "RESET_CAUSES", "END_REASONS", "REFUSALS", "UNITS"):
+    for attribute in ("STATES", "RESET_CAUSES", "END_REASONS", "REFUSALS", "UNITS", "EXERCISES"):
         codes = getattr(catalogue, attribute)
         for code, words in codes.items():
             others = {other: codes[other] for other in codes if other != code}

@@ -82,23 +82,23 @@ def refusal_of(device: SkewDevice) -> ProtocolError:
 
 @pytest.mark.clause("V2", "V4")
 def test_a_device_of_the_version_before_is_told() -> None:
-    old = frozen("0.1")
+    old = frozen("0.2")
     error = refusal_of(SkewDevice(old))
     assert error.found == (
-        f"the device has protocol 0.1, catalogue {old['fingerprint']:08x} (firmware 0.0.0)"
+        f"the device has protocol 0.2, catalogue {old['fingerprint']:08x} (firmware 0.0.0)"
     )
-    assert error.expected == f"the host has protocol 0.2, catalogue {fingerprint():08x}"
+    assert error.expected == f"the host has protocol 0.3, catalogue {fingerprint():08x}"
     assert error.next_step.startswith("store the firmware that came with this host on the device")
 
 
 @pytest.mark.clause("V2", "V4")
 def test_another_catalogue_of_the_same_version_is_told() -> None:
-    other = with_a_field_more(frozen("0.2"))
+    other = with_a_field_more(frozen("."))
     error = refusal_of(SkewDevice(other))
     assert error.found == (
-        f"the device has protocol 0.2, catalogue {other['fingerprint']:08x} (firmware 0.0.0)"
+        f"the device has protocol 0.3, catalogue {other['fingerprint']:08x} (firmware 0.0.0)"
     )
-    assert error.expected == f"the host has protocol 0.2, catalogue {fingerprint():08x}"
+    assert error.expected == f"the host has protocol 0.3, catalogue {fingerprint():08x}"
     assert error.next_step == (
         "store the firmware that came with this host on the device, "
         "or install the host version that came with that firmware"
@@ -106,7 +106,7 @@ def test_another_catalogue_of_the_same_version_is_told() -> None:
 
 
 @pytest.mark.clause("V3", "V4")
-@pytest.mark.parametrize("version", [(1, 0), (0, 3), (3, 7)])
+@pytest.mark.parametrize("version", [(1, 0), (0, 4), (3, 7)])
 def test_another_version_is_told(version: tuple[int, int]) -> None:
     other = {**with_a_field_more(frozen("0.1")), "protocol": list(version)}
     error = refusal_of(SkewDevice(other))
@@ -127,7 +127,7 @@ def test_from_1_0_on_any_minor_of_the_same_major_talks(
 ) -> None:
     for module in (session, refusals):
         monkeypatch.setattr(module, "PROTOCOL", (1, 4))
-    other = {**with_a_field_more(frozen("0.1")), "protocol": [1, minor]}
+    other = {**with_a_field_more(frozen(".")), "protocol": [1, minor]}
     made = greeted(SkewDevice(other, extra=b"\x07"))
     assert made.request("status")["state"] == 0
 

@@ -43,6 +43,7 @@ def fingerprint() -> int:
         catalogue.END_REASONS,
         catalogue.REFUSALS,
         catalogue.UNITS,
+        catalogue.EXERCISES,
     ):
         text += ",".join(f"{code}={words}" for code, words in sorted(codes.items())) + "\n"
     return zlib.crc32(text.encode()) | 0x80808080
@@ -368,7 +369,7 @@ def profile_vectors() -> dict[str, Any]:
             {"name": "cut short", "record": record[:-1].hex()},
             {"name": "name longer than the record", "record": record[:1].hex() + "ff41"},
             {"name": "the format before", "record": "01" + record[1:].hex()},
-            {"name": "a later format", "record": "03" + record[1:].hex()},
+            {"name": "a later format", "record": "04" + record[1:].hex()},
             {"name": "name is not UTF-8", "record": (record[:2] + b"\xff" + record[3:]).hex()},
         ],
         "bad_files": [

@@ -17,7 +17,7 @@ from kneewire import framing
 from kneewire.messages import KNOTS_A_BLOCK, Refused, pack, unpack
 from kneewise.errors import OutcomeUnknownError, ProtocolError, RefusedError
 from kneewise.instrument import sweep as sweep_module
-from kneewise.instrument.tracer import Tracer
+from kneewise.instrument.sweeping import Sweeping
 from kneewise.link import session as session_module
 from kneewise.link.session import Session
 
@@ -57,7 +57,7 @@ def draws_any_nonce(patch: Patch) -> None:
 
 @breaks("W14")
 def fires_twice(patch: Patch) -> None:
-    original = Tracer._sweep
+    original = Sweeping.sweep
 
     def sweep(self: Any, *given: Any) -> Any:
         try:
@@ -65,12 +65,12 @@ def fires_twice(patch: Patch) -> None:
         except OutcomeUnknownError:
             return original(self, *given)
 
-    patch.setattr(Tracer, "_sweep", sweep)
+    patch.setattr(Sweeping, "sweep", sweep)
 
 
 @breaks("W3")
 def fires_a_spent_token(patch: Patch) -> None:
-    original = Tracer._fire
+    original = Sweeping.fire
 
     def fire(self: Any, *given: Any) -> None:
         try:
@@ -78,7 +78,7 @@ def fires_a_spent_token(patch: Patch) -> None:
         except RefusedError:
             original(self, *given)
 
-    patch.setattr(Tracer, "_fire", fire)
+    patch.setattr(Sweeping, "fire", fire)
 
 
 @breaks("S6")
