@@ -45,27 +45,50 @@ class ProtocolError(KneewiseError):
 
 
 class RefusedError(KneewiseError):
-    """The device refused a request. `guard` is the hazard's number, 0 where none is meant."""
+    """The device refused a request. `guard` is the hazard's number, 0 where none is meant, and
+    `measured` what it is about, in `unit` ("mV", "mA", ...; "" where it is a yes or no).
+    """
 
     exit_code = 3
 
     def __init__(
-        self, what: str, *, found: str, expected: str, next_step: str, code: int = 0, guard: int = 0
+        self,
+        what: str,
+        *,
+        found: str,
+        expected: str,
+        next_step: str,
+        code: int = 0,
+        guard: int = 0,
+        measured: int = 0,
+        unit: str = "",
     ) -> None:
         self.code = code
         self.guard = guard
+        self.measured = measured
+        self.unit = unit
         super().__init__(what, found=found, expected=expected, next_step=next_step)
 
 
 class DeviceFaultError(KneewiseError):
-    """The device has latched a fault. `guard` is the hazard's number."""
+    """The device has latched a fault; `guard`, `measured` and `unit` as in `RefusedError`."""
 
     exit_code = 3
 
     def __init__(
-        self, what: str, *, found: str, expected: str, next_step: str, guard: int = 0
+        self,
+        what: str,
+        *,
+        found: str,
+        expected: str,
+        next_step: str,
+        guard: int = 0,
+        measured: int = 0,
+        unit: str = "",
     ) -> None:
         self.guard = guard
+        self.measured = measured
+        self.unit = unit
         super().__init__(what, found=found, expected=expected, next_step=next_step)
 
 

@@ -11,7 +11,7 @@ import pytest
 from kneewire import catalogue
 from kneewise import FullRate
 from kneewise.errors import RefusedError, UsageError
-from kneewise.instrument.arming import arm
+from kneewise.instrument.arming import Asked, arm
 from kneewise.instrument.checks import _closed_for_good, _pairs_add_up, _zeros
 from kneewise.instrument.full_rate import END_PAIRS, FullRatePairs, Window
 from kneewise.instrument.linearity import WIDE_CODES, edges
@@ -162,19 +162,19 @@ class Scarce:
 def test_as_long_as_memory_allows() -> None:
     session = Scarce(600)
     window = FullRate().window(PROFILE, 0.010)
-    token, armed = arm(session, 96, 1.0, window, True)  # type: ignore[arg-type]
+    token, armed = arm(session, Asked(), window, True)  # type: ignore[arg-type]
     assert (token, armed.pairs) == (7, 512)
     assert session.asked == [(10_000 - PAIR_US * n // 2, n) for n in (2048, 1024, 512)]
 
 
 def test_a_length_that_was_asked_for_is_not_cut_down() -> None:
     with pytest.raises(RefusedError, match=r"2000 raw pairs to be kept.*no memory"):
-        arm(Scarce(600), 96, 1.0, Window(0, 2000), True)  # type: ignore[arg-type]
+        arm(Scarce(600), Asked(), Window(0, 2000), True)  # type: ignore[arg-type]
     with pytest.raises(RefusedError, match="128 raw pairs to be kept"):
-        arm(Scarce(10), 96, 1.0, FullRate().window(PROFILE), True)  # type: ignore[arg-type]
+        arm(Scarce(10), Asked(), FullRate().window(PROFILE), True)  # type: ignore[arg-type]
     session = Scarce(-1)
     with pytest.raises(RefusedError):
-        arm(session, 7, 1.0, Window(0, 0), True)  # type: ignore[arg-type]
+        arm(session, Asked(knots=7), Window(0, 0), True)  # type: ignore[arg-type]
     assert session.asked == [(0, 0)]
 
 

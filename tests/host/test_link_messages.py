@@ -21,6 +21,7 @@ from kneewise.instrument.sweep import TRIES, fetch
 from kneewise.instrument.tracer import Tracer
 from kneewise.link import port as ports
 from kneewise.link.port import SerialPort, open_port
+from kneewise.link.refusals import hazard_text
 from kneewise.link.session import Session
 
 CHARGED = "the capacitor may hold charge"
@@ -252,3 +253,21 @@ def test_a_tracer_whose_profile_cannot_be_read() -> None:
         Tracer(opened)
     assert caught.value.what == "reading the device's profile"
     assert caught.value.next_step.startswith("store the profile of this board")
+
+
+@pytest.mark.parametrize(
+    ("finding", "expected"),
+    [
+        ((4, 61000, 60000, 1), "at most 60.000 V"),
+        ((15, 1330, 1540, 7), "at least 1540 nF"),
+        ((15, 3000, 2860, 7), "at most 2860 nF"),
+        ((10, 40000, 70000, 6), "at least 70000 mohm"),
+        ((11, -40, 24, 5), "within 24 codes"),
+        ((11, -5000, 3600, 1), "within 3.600 V"),
+        ((5, 0, 0, 0), "the guard satisfied"),
+    ],
+)
+def test_a_limit_is_told_from_its_own_side(
+    finding: tuple[int, int, int, int], expected: str
+) -> None:
+    assert hazard_text(*finding)[1] == expected

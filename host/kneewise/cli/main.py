@@ -12,7 +12,7 @@ from typing import Annotated
 import typer
 
 import kneewise
-from kneewise.cli import emulate, rest, sweep, wire
+from kneewise.cli import emulate, prove, rest, sweep, wire
 from kneewise.errors import KneewiseError
 
 app = typer.Typer(
@@ -25,6 +25,7 @@ app = typer.Typer(
     context_settings={"help_option_names": ["-h", "--help"]},
 )
 app.command("sweep", epilog="Example: kneewise sweep --on emulator --full-rate knee")(sweep.sweep)
+app.command("prove", epilog="Example: kneewise prove --on emulator --store proofs")(prove.prove)
 app.command("rest", epilog="Example: kneewise rest --on emulator")(rest.rest)
 app.command("wire", epilog="Example: kneewise wire session.jsonl")(wire.wire)
 app.command("emulate", epilog="Example: kneewise emulate --example > my_module.toml")(

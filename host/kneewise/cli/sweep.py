@@ -8,16 +8,13 @@ from typing import Annotated
 
 import typer
 
+from kneewise.cli.cautions import CautionsRead, heed
 from kneewise.cli.summary import as_json, as_text
 from kneewise.cli.targets import On, Record, opened
 from kneewise.errors import KneewiseError, TrustError, UsageError
+from kneewise.instrument.cautions import REMINDER
 from kneewise.instrument.full_rate import FullRate
 from kneewise.instrument.trace import Trace
-
-CAUTION = (
-    "Caution: a PV source in light is live, and a charged capacitor can injure. Local codes and "
-    "licensed practice come first."
-)
 
 
 def sweep(
@@ -57,6 +54,7 @@ def sweep(
             "no inverter, no parallel string.",
         ),
     ] = False,
+    cautions_read: CautionsRead = False,
     record: Record = None,
     as_data: Annotated[
         bool, typer.Option("--json", help="One JSON object on stdout, messages on stderr.")
@@ -75,8 +73,12 @@ def sweep(
         files.append(save(trace, store))
 
     with opened(on, record, stands_alone=stands_alone) as tracer:
+        heed(tracer, cautions_read)
         if not tracer.label:
-            say(CAUTION)
+            say(REMINDER)
+        due = tracer.proof_due()
+        if due:
+            say(due)
         earlier = tracer.held(keep=keep)
         if earlier is not None:
             say(f"An earlier sweep was still held on the tracer: stored as {files.pop()}")

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 from typing import Any
 
-from kneewise.errors import DeviceFaultError
+from kneewise.errors import DeviceFaultError, RefusedError
 from kneewise.instrument.status import Status, fault_of, status_of
 from kneewise.link.session import Session
 
@@ -43,3 +43,16 @@ def wait_bled(session: Session, profile: dict[str, Any]) -> tuple[Status, Device
                 guard=1,
             )
         port.sleep(0.02)
+
+
+def still_hot(status: Status, profile: dict[str, Any]) -> RefusedError:
+    """The exception for a bleed resistor that must cool for longer than one waits."""
+    return RefusedError(
+        "getting ready for a sweep",
+        found=f"H10: the bleed resistor has taken up {status.bleed_heat_j:.1f} J and needs "
+        f"{status.rest_s:.0f} s to cool",
+        expected=f"room for this source's sweep within {profile['bleed_mj'] / 1000:.1f} J",
+        next_step=f"wait {status.rest_s:.0f} s, or fit a resistor that stands more "
+        "(power_w and energy_j of [bleed] in the profile)",
+        guard=10,
+    )

@@ -10,6 +10,7 @@ from dataclasses import dataclass
 from datetime import UTC, datetime
 from typing import Any
 
+from kneewise.instrument.hands import Hands
 from kneewise.link.port import Port, open_port
 
 Opener = Callable[[str], "Opened"]
@@ -20,7 +21,8 @@ _OPENERS: dict[str, Opener] = {}
 class Opened:
     """What an opener gives: a way to get a port, and what is known of an emulated source.
 
-    `utc` is the time of day at the tracer, now; `remark` is for people to know of the target.
+    `utc` is the time of day at the tracer, now; `remark` is for people to know of the target;
+    `hands` does at an emulated bench what an operator is asked to do at a real one.
     """
 
     connect: Callable[[], Port]
@@ -30,6 +32,7 @@ class Opened:
     truth: dict[str, float] | None = None
     utc: Callable[[], datetime] = lambda: datetime.now(UTC)
     remark: str = ""
+    hands: Hands | None = None
 
 
 def register_opener(prefix: str, opener: Opener) -> None:

@@ -14,10 +14,16 @@ from typing import Any, Literal, Self
 
 from pydantic import BaseModel, ConfigDict, Field, ValidationError, model_validator
 
+from kneewire import guards
 from kneewire.profile_record import FORMAT, pack_profile, unpack_profile
 from kneewise.errors import ProfileError
 
 _EPOCH = date(1970, 1, 1)
+
+
+def day_of(text: str) -> int:
+    """Days since 1970-01-01 of a date such as 2031-05-17; 0 for none."""
+    return (date.fromisoformat(text) - _EPOCH).days if text else 0
 
 
 class _Section(BaseModel):
@@ -60,8 +66,16 @@ class CapacitorSection(_Section):
     per_code_v: float = Field(gt=0, le=1.0)
     zero_code: float = Field(ge=0, le=4095)
     capacitance_f: float = Field(gt=0, le=1.0)
-    bleed_ohm: float = Field(gt=0, le=1e6)
+    low_percent: int = Field(ge=50, le=100)
+    high_percent: int = Field(ge=100, le=200)
     permanent_bleeder_ohm: float = Field(gt=0, le=1e8)
+
+
+class BleedSection(_Section):
+    ohm: float = Field(gt=0, le=1e6)
+    power_w: float = Field(gt=0, le=1000)
+    energy_j: float = Field(gt=0, le=10000)
+    thermal_cutoff: bool
 
 
 class TimingSection(_Section):
@@ -69,6 +83,7 @@ class TimingSection(_Section):
     relay_release_ms: int = Field(ge=1, le=200)
     bleed_operate_ms: int = Field(ge=1, le=200)
     bleed_release_ms: int = Field(ge=1, le=200)
+    switch_release_us: int = Field(ge=0, le=10000)
     bounce_ms: int = Field(ge=0, le=20)
     dead_time_ms: int = Field(ge=20, le=1000)
 
@@ -84,11 +99,32 @@ class LimitsSection(_Section):
     closed_limit_s: float = Field(ge=0.01, le=120)
     token_life_s: float = Field(ge=0.5, le=10)
     heartbeat_lost_s: float = Field(ge=1, le=10)
+    proof_test_days: int = Field(ge=1, le=366)
 
 
 class IsolationSection(_Section):
     rating_v: int = Field(ge=0, le=10000)
     tested: str = Field(pattern=r"^(\d{4}-\d{2}-\d{2})?$")
+
+
+class ClassBSection(_Section):
+    """What the builder of a class B tracer declares; all of it, or the firmware refuses."""
+
+    reinforced_isolation: bool
+    contact_breaks_dc: bool
+    disconnector: bool
+    fuse: bool
+    reviewer: str = Field(max_length=30)
+    reviewed: str = Field(pattern=r"^(\d{4}-\d{2}-\d{2})?$")
+
+    def bits(self) -> int:
+        """As in the record's `declared`."""
+        return (
+            guards.DECLARED_BARRIER * self.reinforced_isolation
+            + guards.DECLARED_CONTACT * self.contact_breaks_dc
+            + guards.DECLARED_DISCONNECTOR * self.disconnector
+            + guards.DECLARED_FUSE * self.fuse
+        )
 
 
 class BoardProfile(_Section):
@@ -98,13 +134,16 @@ class BoardProfile(_Section):
     device_id: str = Field(pattern=r"^([0-9a-f]{16})?$")
     hazard_class: Literal["A", "B"]
     contact: Literal["relay+switch", "relay"]
+    contact_breaks_dc: bool
     converter: ConverterSection
     voltage: VoltageSection
     current: CurrentSection
     capacitor: CapacitorSection
+    bleed: BleedSection
     timing: TimingSection
     limits: LimitsSection
     isolation: IsolationSection
+    class_b: ClassBSection
 
     @classmethod
     def load(cls, path: Path) -> BoardProfile:
@@ -136,13 +175,15 @@ class BoardProfile(_Section):
 
     def _values(self, device_id: bytes | None) -> dict[str, Any]:
         limits, capacitor, timing = self.limits, self.capacitor, self.timing
-        tested = self.isolation.tested
+        bleed, class_b = self.bleed, self.class_b
         return {
             "format": FORMAT,
             "name": self.name,
             "device_id": bytes.fromhex(self.device_id) or device_id or bytes(8),
             "hazard_class": 1 if self.hazard_class == "A" else 2,
             "contact": 1 if self.contact == "relay+switch" else 2,
+            "breaks_dc": int(self.contact_breaks_dc),
+            "switch_release_us": timing.switch_release_us,
             "converter": 1 if self.converter.kind == "internal" else 2,
             "pair_us": self.converter.pair_us,
             "spi_clock_khz": round(self.converter.spi_clock_mhz * 1e3),
@@ -162,7 +203,12 @@ class BoardProfile(_Section):
             "rated_mv": round(limits.rated_v * 1e3),
             "rated_ma": round(limits.rated_a * 1e3),
             "capacitance_nf": round(capacitor.capacitance_f * 1e9),
-            "bleed_mohm": round(capacitor.bleed_ohm * 1e3),
+            "capacitance_low_percent": capacitor.low_percent,
+            "capacitance_high_percent": capacitor.high_percent,
+            "bleed_mohm": round(bleed.ohm * 1e3),
+            "bleed_mw": round(bleed.power_w * 1e3),
+            "bleed_mj": round(bleed.energy_j * 1e3),
+            "bleed_cutoff": int(bleed.thermal_cutoff),
             "permanent_bleeder_ohm": round(capacitor.permanent_bleeder_ohm),
             "relay_operate_ms": timing.relay_operate_ms,
             "relay_release_ms": timing.relay_release_ms,
@@ -179,7 +225,11 @@ class BoardProfile(_Section):
             "token_life_ms": round(limits.token_life_s * 1e3),
             "heartbeat_lost_ms": round(limits.heartbeat_lost_s * 1e3),
             "isolation_v": self.isolation.rating_v,
-            "isolation_tested_day": (date.fromisoformat(tested) - _EPOCH).days if tested else 0,
+            "isolation_tested_day": day_of(self.isolation.tested),
+            "declared": class_b.bits(),
+            "reviewer": class_b.reviewer,
+            "reviewed_day": day_of(class_b.reviewed),
+            "proof_days": limits.proof_test_days,
         }
 
 

@@ -28,6 +28,10 @@ class Status:
     held_sweep: str
     """Id of a sweep that waits for its acknowledgement, or ""."""
     device_us: int
+    bleed_heat_j: float
+    """What the bleed resistor has taken up, by the device's account."""
+    rest_s: float
+    """Until it has room for a sweep of this source."""
 
 
 def status_of(message: Message, profile: dict[str, Any]) -> Status:
@@ -49,6 +53,8 @@ def status_of(message: Message, profile: dict[str, Any]) -> Status:
         capacitor_v=scales.capacitor(mean("capacitor_sum")) if scales else nan,
         held_sweep=values["sweep_id"].hex() if values["held"] else "",
         device_us=values["time_us"],
+        bleed_heat_j=values["bleed_mj"] / 1000,
+        rest_s=values["rest_ms"] / 1000,
     )
 
 
@@ -64,4 +70,6 @@ def fault_of(message: Message) -> DeviceFaultError:
         expected=expected,
         next_step=f"{step}; then `kneewise rest --clear-fault`",
         guard=values["guard"],
+        measured=values["measured"],
+        unit=catalogue.UNITS.get(values["unit"], ""),
     )

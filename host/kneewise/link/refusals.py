@@ -43,9 +43,16 @@ def hazard_text(guard: int, measured: int, limit: int, unit: int) -> tuple[str, 
         return f"H{guard} {name}: {wrong}", "the guard satisfied", step
     return (
         f"H{guard} {name}: {wrong}, {quantity(measured, unit)}",
-        f"at most {quantity(limit, unit)}",
+        f"{_bound(measured, limit)} {quantity(limit, unit)}",
         step,
     )
+
+
+def _bound(measured: int, limit: int) -> str:
+    """What kind of limit it is; what is off by less than nothing has one on either side."""
+    if measured < 0:
+        return "within"
+    return "at most" if measured > limit else "at least"
 
 
 def refused(name: str, message: Message) -> RefusedError:
@@ -67,6 +74,8 @@ def refused(name: str, message: Message) -> RefusedError:
         next_step=step,
         code=values["code"],
         guard=values["guard"],
+        measured=values["measured"],
+        unit=catalogue.UNITS.get(values["unit"], ""),
     )
 
 

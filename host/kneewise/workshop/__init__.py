@@ -1,0 +1,1 @@
+"""The workshop: what is done to a tracer before its curves count."""
