@@ -37,6 +37,16 @@ def test_the_tables_of_the_specification_are_those_of_the_code():
     assert text == with_tables(text), "run: python -m kneewire.spec protocol/SPEC.md"
 
 
+def test_states_and_their_picture_are_those_of_the_firmware():
+    sys.path.insert(0, str(ROOT / "tests" / "device"))
+    import readme
+
+    text = (ROOT / "device" / "README.md").read_text(encoding="utf-8")
+    assert text == readme.page(text), "run: python tests/device/readme.py"
+    drawn = (ROOT / "device" / "states.svg").read_text(encoding="utf-8")
+    assert drawn == readme.picture(), "run: python tests/device/readme.py"
+
+
 def test_ci_runs_the_readme_s_test_command():
     readme = (ROOT / "README.md").read_text(encoding="utf-8")
     command = re.search(r"<!-- test command -->\n```\n(.+)\n```", readme).group(1)

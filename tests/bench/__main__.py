@@ -9,7 +9,7 @@ import argparse
 import importlib
 import json
 
-NAMES = ("wire", "knots")
+NAMES = ("wire", "knots", "safety")
 
 
 def main() -> int:
@@ -22,7 +22,8 @@ def main() -> int:
     if chosen.json:
         print(json.dumps([row.as_json() for row in rows], indent=1))
     else:
-        print("\n".join(row.as_text() for row in rows))
+        width = max(len(row.name) for row in rows)
+        print("\n".join(row.as_text(width) for row in rows))
     return 0 if all(row.holds for row in rows) else 1
 
 

@@ -26,7 +26,8 @@ class Row:
         keys = ("name", "value", "unit", "goal", "holds")
         return {key: getattr(self, key) for key in keys}
 
-    def as_text(self) -> str:
+    def as_text(self, width: int) -> str:
+        """One line of a table, the name in `width` characters."""
         goal = "" if self.goal is None else f"{'>=' if self.at_least else '<='} {self.goal:g}"
         verdict = "" if self.goal is None else ("holds" if self.holds else "MISSED")
-        return f"{self.name:<38} {self.value:>10.4g} {self.unit:<7} {goal:<10} {verdict}"
+        return f"{self.name:<{width}} {self.value:>10.4g} {self.unit:<7} {goal:<10} {verdict}"

@@ -57,6 +57,9 @@ def fire(tracer: Tracer) -> None:
         "confirmed": 1,
         "raw_from_us": 0,
         "raw_pairs": 0,
+        "limit_mv": 0xFFFFFFFF,
+        "limit_ma": 0xFFFFFFFF,
+        "exercise": 0,
     }
     token = session.request("arm", values)["token"]
     session.request("fire", {"token": token, "sweep_id": bytes(range(16))})

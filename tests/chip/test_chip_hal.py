@@ -78,7 +78,7 @@ def test_read_sums_one_channel(chip: Chip) -> None:
 
 def test_a_second_object_takes_over_a_running_capture(chip: Chip) -> None:
     # The prompt was reached in mid-capture; the service is entered again without a reset.
-    script = START + "hal.capture_start()\nhal.supervise(4095, 4095)\nhal.pulse(20000)\n"
+    script = START + "hal.capture_start()\nhal.supervise(4095, 4095, True)\nhal.pulse(20000)\n"
     chip.run(script + START + "print(hal.capture_written(), hal.read(0, 10))\n")
     again = chip.run(START + "hal.capture_start()\nhal.wait_us(1000)\nprint(hal.capture_stop())\n")
     assert again.strip() == "False"
@@ -89,7 +89,7 @@ def test_a_second_object_takes_over_a_running_capture(chip: Chip) -> None:
 
 def test_supervision_visits_every_millisecond(chip: Chip) -> None:
     script = START + (
-        "hal.capture_start()\nhal.supervise(4000, 4000)\nhal.wait_us(100500)\n"
+        "hal.capture_start()\nhal.supervise(4000, 4000, True)\nhal.wait_us(100500)\n"
         "print(hal.supervision_ticks(), hal.trips())\nhal.supervise_end()\nhal.wait_us(3000)\n"
         "n = hal.supervision_ticks()\nhal.wait_us(5000)\nprint(hal.supervision_ticks() - n)\n"
         "hal.capture_stop()\n"
@@ -108,7 +108,7 @@ def test_supervision_compares_the_newest_pair(
     chip: Chip, voltage: int, current: int, trips: int
 ) -> None:
     script = START + (
-        f"hal.capture_start()\nhal.wait_us(200)\nhal.supervise({voltage}, {current})\n"
+        f"hal.capture_start()\nhal.wait_us(200)\nhal.supervise({voltage}, {current}, False)\n"
         "hal.wait_us(2500)\nprint(hal.trips())\nhal.supervise_end()\nhal.capture_stop()\n"
     )
     assert int(chip.run(script)) == trips
@@ -116,7 +116,7 @@ def test_supervision_compares_the_newest_pair(
 
 def test_supervision_latches_an_open_stop_loop(chip: Chip) -> None:
     script = START + (
-        "print(hal.stop_loop_closed())\nhal.supervise(4095, 4095)\n"
+        "print(hal.stop_loop_closed())\nhal.supervise(4095, 4095, True)\n"
         "while hal.stop_loop_closed(): pass\n"
         "while not hal.stop_loop_closed(): pass\nhal.wait_us(2000)\nprint(hal.trips())\n"
         "hal.supervise_end()\n"
@@ -162,7 +162,7 @@ def quiet():
             print("the heap is not locked")
         except MemoryError:
             pass
-        hal.supervise(4095, 4095)
+        hal.supervise(4095, 4095, True)
         hal.relay(True); hal.bleed(False); hal.pulse(5000)
         hal.stop_loop_closed(); hal.leads_reversed()
         hal.capture_start(); hal.wait_us(1500)

@@ -19,6 +19,9 @@ def arm(tracer):
         "confirmed": 1,
         "raw_from_us": 0,
         "raw_pairs": 0,
+        "limit_mv": 0xFFFFFFFF,
+        "limit_ma": 0xFFFFFFFF,
+        "exercise": 0,
     }
     return tracer._session.request("arm", values)["token"]
 
@@ -58,7 +61,7 @@ def test_abort_while_charging_opens_and_bleeds(bench, monkeypatch):
         return pairs
 
     monkeypatch.setattr(type(one.board), "capture_written", abort_after_5_ms)
-    monkeypatch.setattr("kneewise.emulator.board._CALLS", patched_calls(abort_after_5_ms))
+    monkeypatch.setattr("kneewise.emulator.bus._CALLS", patched_calls(abort_after_5_ms))
     trace = tracer.sweep()
     assert trace.end_reason == "aborted"
     assert trace.time[-1] < 0.007
@@ -69,11 +72,11 @@ def test_abort_while_charging_opens_and_bleeds(bench, monkeypatch):
 
 
 def patched_calls(capture_written):
-    from kneewise.emulator import board
+    from kneewise.emulator import bus
 
     return tuple(
         (name, (lambda b, x, y: capture_written(b)) if name == "capture_written" else call)
-        for name, call in board._CALLS
+        for name, call in bus._CALLS
     )
 
 
@@ -112,7 +115,7 @@ def test_stop_switch_opened_while_charging(bench, rung):
     """H12: the lid opened in mid-charge ends it, latches, and loses nothing that was measured."""
     one = bench(rung)
     tracer = one.tracer()
-    one.board.open_stop_loop_after_closing_us = 6_000
+    one.emulated.after_closing(6_000, "stop_loop")
     trace = tracer.sweep()
     assert trace.end_reason == "stop loop opened"
     assert 0.004 < trace.time[-1] < 0.009
@@ -121,8 +124,10 @@ def test_stop_switch_opened_while_charging(bench, rung):
         tracer.sweep()
     assert "close the lid" in caught.value.next_step
     assert "kneewise rest --clear-fault" in caught.value.next_step
-    tracer.clear_fault()
     with pytest.raises(RefusedError, match="H12"):
+        tracer.clear_fault()
+    one.emulated.change("stop_loop", 0)
+    with pytest.raises(DeviceFaultError, match="H12"):
         tracer.sweep()
-    one.board.open_stop_loop(False)
+    tracer.clear_fault()
     assert tracer.sweep().sound

@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 from kneewise import FullRate
-from kneewise.errors import UsageError
+from kneewise.errors import RefusedError, UsageError
 
 
 def knots_within(trace):
@@ -111,9 +111,9 @@ def test_a_drifted_voltage_zero_is_measured_and_taken_out(offset, bench, rung):
     assert abs(off_v.mean()) < 0.2 * 0.0165
 
 
-def test_a_voltage_zero_far_off_is_not_trusted(bench, rung):
-    trace = bench(rung, board={"voltage_offset_codes": 30.0}).tracer().sweep()
-    (failed,) = (check for check in trace.checks if not check.holds)
-    assert failed.name == "zeros near the profile's"
-    assert failed.found.startswith("voltage +30.")
-    assert failed.expected == "within 24 codes"
+def test_a_voltage_zero_far_off_is_refused(bench, rung):
+    with pytest.raises(RefusedError, match="H11 sensor open") as refused:
+        bench(rung, board={"voltage_offset_codes": 30.0}).tracer().sweep()
+    assert refused.value.guard == 11
+    assert refused.value.found.endswith("30 codes")
+    assert refused.value.expected == "at most 24 codes"

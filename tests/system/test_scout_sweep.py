@@ -73,12 +73,10 @@ def test_about_the_maximum_needs_a_scout_and_gets_one(bench, rung):
 def test_a_change_of_light_between_the_two_shows(bench, rung):
     """2 % less light at the second: figures as good as any, of another moment."""
     one = bench(rung)
-    plant = one.board._plant
-    dimmer = one.emulated.scenario.varied(source={"irradiance_w_m2": 980.0}).build_source()
 
     def cloud(stage):
         if stage == "getting ready":
-            plant.source = dimmer
+            one.emulated.change("source", {"irradiance_w_m2": 980.0})
 
     kept = []
     trace = one.tracer().sweep(scout=True, progress=cloud, keep=kept.append)
@@ -115,13 +113,10 @@ def test_a_dark_source_stops_at_the_scout(bench, rung):
 def test_light_that_goes_before_the_second_is_told_as_such(bench, rung):
     """The second's limit is over before the device calls a source dark."""
     one = bench(rung)
-    plant = one.board._plant
-
-    dark = one.emulated.scenario.varied(source={"photocurrent_a": 0.0}).build_source()
 
     def gone(stage):
         if stage == "getting ready":
-            plant.source = dark
+            one.emulated.after_closing(0, "source", {"photocurrent_a": 0.0})
 
     with pytest.raises(TrustError, match="lit and connected"):
         one.tracer().sweep(scout=True, progress=gone)
