@@ -21,11 +21,17 @@ def chip_for(
     files: Mapping[str, str] | None = None,
     uptime_us: int = 0,
 ) -> Iterator[ChipTracer]:
-    """`board`: a file beside this one, to stand between the firmware and hal_rp2.py."""
+    """`board`: a file beside this one, to stand between the firmware and hal_rp2.py.
+
+    The bleed resistor is cool again at once: an emulated second takes many, and how it cools has
+    tests of its own.
+    """
     held = {path: text.encode() for path, text in (files or {}).items()}
     if board:
         held["/emulated_board.py"] = (HERE / board).read_bytes()
     profile = profile_for(scenario)
+    cool = profile.bleed.model_copy(update={"power_w": 1000.0})
+    profile = profile.model_copy(update={"bleed": cool})
     record = profile.record(CHIP_DEVICE_ID)
     made = ChipTracer(scenario, scaling_of(profile), record, more_files=held, uptime_us=uptime_us)
     try:
