@@ -9,7 +9,7 @@ import os
 
 from kneewire.seam import crc32
 
-RECORD_BYTES = 28
+RECORD_BYTES = 29
 NO_DIGEST = bytes(16)
 
 
@@ -23,13 +23,13 @@ class Logbook:
         self.proof_day = 0
         self.proof_digest = NO_DIGEST
         self.changed = False
-        self.broken = False  # there was a file, and it could not be read
+        self.begun_anew = False  # a file could not be read, now or at an earlier start
         try:
             self._read()
         except OSError:
             pass
         except ValueError:
-            self.broken = True
+            self.begun_anew = True
 
     def _read(self):
         if self.path is None:
@@ -43,6 +43,7 @@ class Logbook:
         self.hot_openings = int.from_bytes(record[4:8], "little")
         self.proof_day = int.from_bytes(record[8:12], "little")
         self.proof_digest = record[12:28]
+        self.begun_anew = record[28] != 0
 
     def closed(self):
         self.operations += 1
@@ -64,7 +65,7 @@ class Logbook:
         record = b""
         for number in (self.operations, self.hot_openings, self.proof_day):
             record += number.to_bytes(4, "little")
-        record += self.proof_digest
+        record += self.proof_digest + bytes([1 if self.begun_anew else 0])
         beside = self.path + ".new"
         try:
             with open(beside, "wb") as file:

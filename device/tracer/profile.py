@@ -52,12 +52,6 @@ class Profile:
             shift -= 1
         return min((volts << shift) // amperes, 8191), shift
 
-    def predicted_bleed_ms(self, from_mv, to_mv):
-        """Time for the bleed to bring the capacitor from one voltage to the other."""
-        if from_mv <= to_mv:
-            return 0
-        return self.bleed_tau_us() * ln_x1000(from_mv, to_mv) // 1000000
-
     def bleed_tau_us(self):
         return self.values["bleed_mohm"] * self.values["capacitance_nf"] // 1000000
 

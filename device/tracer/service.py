@@ -347,6 +347,7 @@ class Service:
             "hot_openings": book.hot_openings,
             "proof_day": book.proof_day,
             "proof_digest": book.proof_digest,
+            "begun_anew": 1 if book.begun_anew else 0,
         }
 
     def _note_proof(self, request):

@@ -57,7 +57,9 @@ def the_heat_is_told(bench: Bench) -> str:
             if bench.status()["rest_ms"]:
                 raise Broken("armed while the bleed resistor has no room")
         elif frame.refusal() == "interlock":
-            return f"refused by guard H{frame.reply('refusal')['guard']}"
+            guard = frame.reply("refusal")["guard"]
+            if guard != HEAT:
+                raise NotTried(f"guard H{guard} speaks first")
     return f"{status['bleed_mj']} mJ, {status['rest_ms']} ms to rest"
 
 

@@ -254,7 +254,9 @@ def on_clear_fault(device: ScriptedDevice, message: Message) -> None:
 
 
 def on_read_logbook(device: ScriptedDevice, message: Message) -> None:
-    device.reply(message, operations=7, hot_openings=0, proof_day=0, proof_digest=NO_ID)
+    device.reply(
+        message, operations=7, hot_openings=0, proof_day=0, proof_digest=NO_ID, begun_anew=0
+    )
 
 
 def on_note_proof(device: ScriptedDevice, message: Message) -> None:

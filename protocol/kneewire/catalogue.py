@@ -190,6 +190,7 @@ MESSAGES: "dict[int, tuple[str, int, bool, bool, tuple[tuple[str, str], ...]]]" 
             ("hot_openings", "u32"),
             ("proof_day", "u32"),
             ("proof_digest", "b16"),
+            ("begun_anew", "u8"),
         ),
     ),
     0x23: ("note_proof", TO_DEVICE, False, True, (("day", "u32"), ("digest", "b16"))),

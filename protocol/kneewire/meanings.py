@@ -47,6 +47,7 @@ MEANINGS = {
     "logbook.hot_openings": "openings under load",
     "logbook.proof_day": "of the last proof test, days since 1970-01-01; 0 for never",
     "logbook.proof_digest": "first half of its report's SHA-256",
+    "logbook.begun_anew": "1: what was kept could not be read, and counts from zero",
     "note_proof.day": "days since 1970-01-01",
     "note_proof.digest": "first half of the report's SHA-256",
     "note_proof_reply.kept": "1: kept over power cycles",

@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from math import log
-
 import pytest
 from charging import FINE
 from fake_board import DEVICE_ID, REFERENCE, profile, record
@@ -78,35 +76,6 @@ B = {
     "reviewed_day": 20_515,
     "bleed_mj": 500_000,
 }
-
-
-@settings(max_examples=500)
-@given(
-    st.integers(50, 60000),
-    st.integers(50, 60000),
-    st.integers(1000, 10**7),
-    st.integers(10**5, 47 * 10**6),
-)
-def test_the_predicted_bleed_is_rc_ln(a, b, mohm, nf):
-    from_mv, to_mv = max(a, b), min(a, b)
-    made = profile(bleed_mohm=mohm, capacitance_nf=nf)
-    tau_ms = mohm * 1e-3 * nf * 1e-9 * 1e3
-    found = made.predicted_bleed_ms(from_mv, to_mv)
-    assert abs(found - tau_ms * log(from_mv / to_mv)) <= tau_ms * 0.002 + 2
-
-
-def test_with_its_margin_a_good_bleed_is_never_called_slow():
-    made = profile()
-    tau_ms = 100 * 220e-6 * 1e3
-    for from_mv in range(400, 60000, 7):
-        true_ms = tau_ms * log(from_mv / 200)
-        allowed = made.predicted_bleed_ms(from_mv, 200) * made["bleed_time_percent"] // 100
-        assert allowed > true_ms
-
-
-@pytest.mark.parametrize("from_mv", [-40, 0, 49, 50])
-def test_an_empty_capacitor_needs_no_time(reference, from_mv):
-    assert reference.predicted_bleed_ms(from_mv, 50) == 0
 
 
 # -- what speaks against a profile -------------------------------------------------------------

@@ -200,16 +200,18 @@ def test_a_closing_that_ends_in_a_reset_is_counted(board, tmp_path):
     assert Device(FakeBoard(), tmp_path).ask("read_logbook")["operations"] == 1
 
 
-def test_a_damaged_logbook_is_begun_anew(board, tmp_path):
-    (tmp_path / "logbook.bin").write_bytes(b"\xff" * 32)
+@pytest.mark.clause("G5")
+def test_a_damaged_logbook_is_begun_anew_and_says_so(board, tmp_path):
+    assert Device(FakeBoard(), tmp_path).ask("read_logbook")["begun_anew"] == 0
+    (tmp_path / "logbook.bin").write_bytes(b"\xff" * 33)
     device = Device(board, tmp_path)
-    assert device.sequencer.logbook.broken
-    assert device.ask("read_logbook")["operations"] == 0
+    book = device.ask("read_logbook")
+    assert (book["operations"], book["begun_anew"]) == (0, 1)
     device.sweep()
     device.turns(device.rested)
-    again = Device(FakeBoard(), tmp_path)
-    assert not again.sequencer.logbook.broken
-    assert again.ask("read_logbook")["operations"] == 1
+    # The counts since are kept, and so is that they are not those of the contact's life.
+    book = Device(FakeBoard(), tmp_path).ask("read_logbook")
+    assert (book["operations"], book["begun_anew"]) == (1, 1)
 
 
 # -- clearing ------------------------------------------------------------------------------

@@ -89,6 +89,7 @@ EXAMPLES: dict[str, dict[str, Any]] = {
         "hot_openings": 3,
         "proof_day": 22_000,
         "proof_digest": bytes.fromhex("030201000a0d11137f80fefffdfcfbfa"),
+        "begun_anew": 0,
     },
     "note_proof": {
         "day": 22_000,

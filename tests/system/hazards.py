@@ -3,7 +3,8 @@
 A row is one case. `hazard_plays.py` plays it on any rung; `test_hazards.py`, the chip's
 `test_chip_hazards.py` and `python -m tests.bench safety` all take their cases from here. Limits
 are those of DESIGN.md, in plant time; rows by the time at which a hazard comes are in
-`hazards_before.py`, `hazards_charging.py` and `hazards_after.py`.
+`hazards_before.py`, `hazards_charging.py` and `hazards_after.py`, what is easily told as something
+else in `hazards_mistaken.py`.
 """
 
 from __future__ import annotations

@@ -56,7 +56,8 @@ def rest(
         f"{', leads reversed' if status.leads_reversed else ''}",
         f"  bleed heat   {status.bleed_heat_j:.1f} J"
         + (f"; ready for a sweep in {status.rest_s:.1f} s" if status.rest_s else ""),
-        f"  operations   {book.operations} of the contact, {book.hot_openings} openings under load",
+        f"  operations   {book.operations} of the contact, {book.hot_openings} openings under load"
+        + (" since an earlier logbook was lost" if book.begun_anew else ""),
         f"  proof test   {book.proven or 'never'}",
         f"  last reset   {cause}",
     ]

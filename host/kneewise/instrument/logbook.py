@@ -22,6 +22,8 @@ class Logbook:
     """Day (UTC) of the last proof test, None for never."""
     proof_digest: str
     """First half of its report's SHA-256, as hex."""
+    begun_anew: bool
+    """True where an earlier logbook was lost: the counts are not those of the contact's life."""
 
     def proof_age_days(self, today: date | None = None) -> int | None:
         """Days since the last proof test; None where there was none."""
@@ -38,6 +40,7 @@ def logbook_of(message: Message) -> Logbook:
         hot_openings=message["hot_openings"],
         proven=EPOCH + timedelta(days=day) if day else None,
         proof_digest=message["proof_digest"].hex(),
+        begun_anew=bool(message["begun_anew"]),
     )
 
 
