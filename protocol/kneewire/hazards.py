@@ -150,7 +150,10 @@ HAZARDS = {
 
 # number: (what is measured, how it is cleared)
 MEASURED = {
-    1: ("capacitor voltage, before closing and while bleeding", "by the capacitor's fall"),
+    1: (
+        "capacitor voltage, before closing and while bleeding",
+        "before closing by the capacitor's fall; as a fault by an explicit clear",
+    ),
     2: (
         "current with the contact commanded open; fall of the capacitor",
         "by an explicit clear, with the source isolated and the bleed cool",

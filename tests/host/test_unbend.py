@@ -82,6 +82,15 @@ def test_what_only_rises_or_only_falls_still_does(
     assert (sign * np.diff(points) >= -1e-6).all()
 
 
+def test_a_step_in_the_last_cells_is_no_exponential() -> None:
+    """One fitted to it would leave the range of numbers."""
+    cells = Cells.of([1, 1, 1, 155, 1, 1])
+    values = np.array([0.0, 0.0, 0.0, 0.0, 0.0, 1.0])
+    points, _sigmas = unbend(cells, values, np.full(6, 5.0))
+    assert np.isfinite(points).all()
+    assert (np.diff(points) >= -1e-6).all()
+
+
 @settings(max_examples=100, deadline=None)
 @given(counts_of_samples, st.floats(0.05, 0.95), st.floats(-3.0, 3.0), st.floats(-3.0, 3.0))
 def test_a_corner_is_not_overshot(

@@ -49,6 +49,7 @@ MOST_END_NOISE = 1.4
 _AGREE = 4.0
 """Bends of an exponential that grows e-fold from cell to cell differ by 2.7, those at a corner
 by any factor."""
+_STEEPEST = 500.0  # exponent over three end cells; beyond it they hold a step, and no end dies so
 _FREE_SIGMAS = 0.5
 _STEEPEST = 20.0
 """Of the exponential in an end cell: e-folds within the cell."""
@@ -148,6 +149,8 @@ def _dying(samples: Floats, means: Floats, at: int) -> float:
     if found is None:
         return 0.0
     b, c = found
+    if abs(c) * edges[-1] > _STEEPEST:
+        return 0.0
     sample, own = c / float(samples[0]), c * float(long[at])
     inside = 2.0 * sinh(0.5 * sample) / sample - 2.0 * sinh(0.5 * own) / own
     return b * exp(0.5 * c * (edges[at] + edges[at + 1])) * inside

@@ -22,7 +22,7 @@ class Logbook:
     """Day (UTC) of the last proof test, None for never."""
     proof_digest: str
     """First half of its report's SHA-256, as hex."""
-    begun_anew: bool
+    begun_anew: bool = False
     """True where an earlier logbook was lost: the counts are not those of the contact's life."""
 
     def proof_age_days(self, today: date | None = None) -> int | None:
