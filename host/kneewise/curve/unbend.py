@@ -49,7 +49,8 @@ MOST_END_NOISE = 1.4
 _AGREE = 4.0
 """Bends of an exponential that grows e-fold from cell to cell differ by 2.7, those at a corner
 by any factor."""
-_STEEPEST = 500.0  # exponent over three end cells; beyond it they hold a step, and no end dies so
+_OUT_OF_RANGE = 500.0
+"""Exponent over three end cells: beyond it they hold a step, and no end dies so."""
 _FREE_SIGMAS = 0.5
 _STEEPEST = 20.0
 """Of the exponential in an end cell: e-folds within the cell."""
@@ -149,7 +150,7 @@ def _dying(samples: Floats, means: Floats, at: int) -> float:
     if found is None:
         return 0.0
     b, c = found
-    if abs(c) * edges[-1] > _STEEPEST:
+    if abs(c) * edges[-1] > _OUT_OF_RANGE:
         return 0.0
     sample, own = c / float(samples[0]), c * float(long[at])
     inside = 2.0 * sinh(0.5 * sample) / sample - 2.0 * sinh(0.5 * own) / own
